@@ -1,0 +1,53 @@
+"""Sightings: what a finder hands on, in millimetres and radians of the cell frame."""
+
+from collections.abc import Iterable
+from dataclasses import dataclass, fields
+
+import numpy as np
+from numpy.typing import NDArray
+
+FloatArray = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Sightings:
+    """Things seen in frames: n of them, poses in the cell frame at the counts of their frame. Arrays are read-only.
+
+    row (n,) int: row of the frame in its recording.  kind (n,) str: the part's name, "" not recognised.
+    side (n,) str: "up", "down", "" not known.  xy_mm (n, 2), yaw_rad (n,): pose of the grip frame.
+    score (n,): share of the expected edge found, 0 to 1.
+    sigma_mm (n,), sigma_rad (n,): standard deviations of one coordinate and of yaw.
+    outline_mm: n polygons (k, 2) about xy along the cell's axes where a thing has no outline of its kind; else (0, 2).
+    """
+
+    row: NDArray[np.int64]
+    kind: NDArray[np.str_]
+    side: NDArray[np.str_]
+    xy_mm: FloatArray
+    yaw_rad: FloatArray
+    score: FloatArray
+    sigma_mm: FloatArray
+    sigma_rad: FloatArray
+    outline_mm: tuple[FloatArray, ...]
+
+    def __post_init__(self) -> None:
+        """Make the arrays read-only."""
+        for field in fields(self):
+            value = getattr(self, field.name)
+            if isinstance(value, np.ndarray):
+                value.flags.writeable = False
+
+    def __len__(self) -> int:
+        return len(self.row)
+
+    @classmethod
+    def joined(cls, several: Iterable["Sightings"]) -> "Sightings":
+        """Several sightings as one, in the order given; none of them makes an empty one."""
+        kept = [one for one in several if len(one)]
+        if not kept:
+            zero = np.zeros(0)
+            text = np.zeros(0, np.str_)
+            return cls(np.zeros(0, np.int64), text, text, np.zeros((0, 2)), zero, zero, zero, zero, ())
+        columns = {f.name: np.concatenate([getattr(one, f.name) for one in kept])
+                   for f in fields(cls) if f.name != "outline_mm"}
+        return cls(**columns, outline_mm=tuple(polygon for one in kept for polygon in one.outline_mm))
