@@ -155,6 +155,8 @@ def _tiff(data: bytes) -> ImageHeader:
     order = "<" if data.startswith(b"II") else ">"
     (at,) = struct.unpack(order + "I", data[4:8])
     (entries,) = struct.unpack(order + "H", data[at : at + 2])
+    if at + 2 + 12 * entries + 4 > len(data):
+        raise IndexError
     tags = {}
     for k in range(entries):
         entry = data[at + 2 + 12 * k : at + 14 + 12 * k]
