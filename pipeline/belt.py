@@ -72,6 +72,25 @@ class Belt:
         """(..., 2): how far a thing on the belt has moved since counts 0, in the cell frame, at times t (...)."""
         return self.travel_mm(t)[..., None] * self.heading
 
+    def when(self, travel_mm: float) -> float:
+        """The first time, within 1e-9 s, at which the travel has reached travel_mm; inf where it never does."""
+        piece = int(np.searchsorted(np.maximum.accumulate(self.coefficients[0]), travel_mm, side="left"))
+        if piece == 0 or piece == len(self.starts_s):  # on one of the straight ends
+            start, at, speed = self.starts_s[max(piece - 1, 0)], *self.coefficients[:2, max(piece - 1, 0)]
+            ahead = travel_mm - at
+            return float(start + ahead / speed) if speed > 0 else float(np.inf if ahead > 0 else start)
+        low, high = float(self.starts_s[piece - 1]), float(self.starts_s[piece])
+        c0, c1, c2, c3, c4 = self.coefficients[:, piece - 1].tolist()
+        start = low
+        while high - low > 1e-9:
+            middle = 0.5 * (low + high)
+            s = middle - start
+            if c0 + s * (c1 + s * (c2 + s * (c3 + s * c4))) >= travel_mm:
+                high = middle
+            else:
+                low = middle
+        return high
+
     def known_at(self, t: float) -> BeltState:
         """What a controller knows at time t, with no look ahead in its speed.
 

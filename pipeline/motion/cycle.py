@@ -1,0 +1,225 @@
+"""One pick from rest to rest: to a moving part, with it, and on to its slot.
+
+    depart   lift up, across as soon as the gate is passed, until the part is met in position, speed and acceleration
+    met      down on the part while moving with it
+    grasp    contact, dwell moving with it, then straight up, still moving with it
+    left     across to the slot while the tip goes over the gate, then straight down
+    release  contact at rest, dwell
+
+The joints that turn and the tip's height are planned apart and meet at the gates; J3 follows from height and J4.
+"""
+
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+from numpy.typing import NDArray
+from ruckig import Trajectory
+
+from pipeline.arm import Arm
+from pipeline.belt import Belt
+from pipeline.cell import Cell
+from pipeline.motion.across import TURNING, Across, State, across_curves, at_rest
+from pipeline.motion.curve import Curve
+from pipeline.motion.lift import Lift, LiftLimits
+
+FloatArray = NDArray[np.float64]
+SETTLED_S = 1e-7
+SETTLING = 40
+
+
+@dataclass(frozen=True)
+class Hold:
+    """The tool on a part: tip (x, y at counts 0, yaw), height in the cell frame, elbow and whole turns of J4."""
+
+    at_mm: FloatArray
+    yaw: float
+    z_mm: float
+    elbow: int
+    turn: int
+
+
+@dataclass(frozen=True)
+class Cycle:
+    """A pick as it is carried out. Times in s; joints (4,) rad and mm; curves of J1, J2, J4 and of the tip's height."""
+
+    hold: Hold
+    depart_s: float
+    across_s: float
+    met_s: float
+    grasp_start_s: float
+    grasp_end_s: float
+    left_s: float
+    there_s: float
+    release_start_s: float
+    release_end_s: float
+    start_joints: FloatArray
+    end_joints: FloatArray
+    out: tuple[Curve, ...]
+    back: tuple[Curve, ...]
+    height: Curve
+
+
+class Mover:
+    """Motion of one arm in one cell, along one belt."""
+
+    def __init__(self, cell: Cell, arm: Arm, belt: Belt) -> None:
+        self.arm, self.belt, self.motion = arm, belt, cell.motion
+        self.window_mm = cell.belt.window_mm if cell.belt else None
+        self.across = Across(arm)
+        self._lift_limits = lift_limits(cell, arm)
+        self.lift = lru_cache(maxsize=512)(self._lift)
+
+    def _lift(self, from_mm: float, to_mm: float) -> Lift:
+        clear = self.motion.clear_height_mm
+        return Lift(from_mm, to_mm, clear, max(clear, to_mm + self.motion.approach_mm), self.motion.travel_mm,
+                    self._lift_limits)
+
+    def lift_from(self, joints: FloatArray, to_mm: float) -> Lift:
+        """The lift from rest at joints (4,) to a height."""
+        return self.lift(round(float(self.arm.forward(joints)[2]), 6), round(to_mm, 6))
+
+    def joints_on(self, hold: Hold, t: FloatArray) -> FloatArray:
+        """Joints (n, 4) that keep the tool on the part at times t (n,); NaN where it is out of reach."""
+        poses = np.empty((len(t), 4))
+        poses[:, :2] = hold.at_mm + self.belt.shift_mm(t)
+        poses[:, 2], poses[:, 3] = hold.z_mm, hold.yaw
+        return turned(self.arm, self.arm.inverse(poses)[:, hold.elbow], hold.yaw, hold.turn)
+
+    def state_on(self, hold: Hold, t: float) -> State | None:
+        """Position, speed and acceleration of J1, J2, J4 while the tool is on the part; None out of reach."""
+        joints = self.joints_on(hold, np.array([t]))[0]
+        speed, accel = self.arm.follow(joints, float(self.belt.speed_mm_s(t)) * self.belt.heading,
+                                       float(self.belt.accel_mm_s2(t)) * self.belt.heading)
+        state = joints[TURNING], speed[TURNING], accel[TURNING]
+        limits = self.arm.limits
+        if not np.isfinite(np.concatenate(state)).all():
+            return None
+        if (np.abs(state[1]) >= limits.speed[TURNING]).any() or (np.abs(state[2]) >= limits.accel[TURNING]).any():
+            return None
+        return state
+
+    def pick(self, start: FloatArray, free_s: float, hold: Hold, place_joints: FloatArray) -> Cycle | None:
+        """The soonest pick of a part by an arm at rest at start (4,) from free_s on; None where it can't be met.
+
+        Raises MotionFault where ruckig refuses a move.
+        """
+        lift = self.lift_from(start, hold.z_mm)
+        meeting = self._meet_soonest(start, free_s, hold, lift)
+        if meeting is not None and self.window_mm is not None:
+            enters = self.passes(hold, self.window_mm[0])
+            if meeting.depart_s + lift.total_s(meeting.move.duration) < enters:
+                meeting = self._meet_late(start, enters, hold, lift)
+        if meeting is None:
+            return None
+        down = lift.curve(meeting.move.duration)
+        grasp_start = meeting.depart_s + down.end_s
+        grasp_end = grasp_start + self.motion.grasp_s
+        leaving = self._leave(hold, grasp_end, place_joints)
+        if leaving is None:
+            return None
+        up = self.lift(round(hold.z_mm, 6), round(float(self.arm.forward(place_joints)[2]), 6)).curve(
+            leaving.move.duration)
+        left = grasp_end + leaving.rise_s
+        release = grasp_end + up.end_s
+        height = Curve.joined([down.later(meeting.depart_s), Curve.held(hold.z_mm, grasp_start, grasp_end),
+                               up.later(grasp_end)])
+        across_s = meeting.depart_s + meeting.rise_s
+        return Cycle(hold, meeting.depart_s, across_s, across_s + meeting.move.duration, grasp_start, grasp_end, left,
+                     left + leaving.move.duration, release, release + self.motion.release_s, start, place_joints,
+                     across_curves(meeting.move, across_s), across_curves(leaving.move, left), height)
+
+    def passes(self, hold: Hold, along_mm: float) -> float:
+        """When a part passes a distance along the heading; inf where the belt never gets there."""
+        target = along_mm - float(hold.at_mm @ self.belt.heading)
+        return self.belt.when(target)
+
+    def _meet_soonest(self, start: FloatArray, free_s: float, hold: Hold, lift: Lift) -> "_Way | None":
+        rise = lift.rise_s(np.inf)
+        for _ in range(SETTLING):
+            move = self.across.meet(at_rest(start), free_s + rise, lambda t: self.state_on(hold, t))
+            if move is None:
+                return None
+            needed = lift.rise_s(move.duration)
+            if needed <= rise + SETTLED_S:
+                break
+            rise = needed
+        return _Way(free_s, rise, move)
+
+    def _meet_late(self, start: FloatArray, contact_s: float, hold: Hold, lift: Lift) -> "_Way | None":
+        """The way that makes contact at contact_s, begun as late as that allows."""
+        if not np.isfinite(contact_s):
+            return None
+        met = contact_s
+        for _ in range(SETTLING):
+            move = self.across.arrive(at_rest(start), met, lambda t: self.state_on(hold, t))
+            if move is None:
+                return None
+            rise, total = lift.rise_s(move.duration), lift.total_s(move.duration)
+            late = contact_s - (total - rise - move.duration) - met
+            if abs(late) < SETTLED_S:
+                break
+            met += late
+        return _Way(met - move.duration - rise, rise, move)
+
+    def _leave(self, hold: Hold, grasp_end: float, place_joints: FloatArray) -> "_Way | None":
+        """From the part to rest over the slot."""
+        lift = self.lift(round(hold.z_mm, 6), round(float(self.arm.forward(place_joints)[2]), 6))
+        rise = lift.rise_s(np.inf)
+        for _ in range(SETTLING):
+            state = self.state_on(hold, grasp_end + rise)
+            if state is None:
+                return None
+            move = self.across.between(state, at_rest(place_joints))
+            needed = lift.rise_s(move.duration)
+            if needed <= rise + SETTLED_S:
+                break
+            rise = needed
+        return _Way(grasp_end, rise, move)
+
+    def joints(self, cycle: Cycle, t: FloatArray) -> FloatArray:
+        """Joints (n, 4) at times t (n,) of a cycle; before it the start's, after it the slot's."""
+        q = np.empty((len(t), 4))
+        with_part = (t >= cycle.met_s) & (t < cycle.left_s)
+        before = t < cycle.met_s
+        for k, joint in enumerate(TURNING):
+            q[before, joint] = cycle.out[k].at(t[before])
+            q[~before, joint] = cycle.back[k].at(t[~before])
+        if with_part.any():
+            q[with_part] = self.joints_on(cycle.hold, t[with_part])
+        q[:, 2] = quill(self.arm, cycle.height.at(t), q[:, 3])
+        return q
+
+
+@dataclass(frozen=True)
+class _Way:
+    """A rise to the gate of rise_s from depart_s on, and the way across that follows it."""
+
+    depart_s: float
+    rise_s: float
+    move: Trajectory
+
+
+def turned(arm: Arm, joints: FloatArray, yaw: float, turn: int) -> FloatArray:
+    """Joints (n, 4) with J4 unwrapped along J1 and J2 and shifted by whole turns, so that it never jumps on a lane."""
+    q = joints.copy()
+    a, b, _ = arm.headings(q)
+    q[:, 3] = arm.sense[3] * (yaw - arm.tool_yaw - b) + 2 * np.pi * turn
+    q[:, 2] += quill(arm, 0.0, q[:, 3]) - quill(arm, 0.0, joints[:, 3])
+    return q
+
+
+def quill(arm: Arm, z_mm: FloatArray | float, j4: FloatArray) -> FloatArray:
+    """J3 (n,) that puts the tip at height z_mm when J4 stands at j4."""
+    foot = arm.flange_z_mm - arm.tool_length_mm
+    return np.asarray(arm.sense[2] * (z_mm - foot - arm.lead * arm.sense[3] * j4))
+
+
+def lift_limits(cell: Cell, arm: Arm) -> LiftLimits:
+    """Limits of the tip's height: J3's, less what J4 can take up where its turning lifts the quill."""
+    limits, lead = arm.limits, abs(arm.lead)
+    speed, accel, jerk = (float(x[2] - lead * x[3]) if lead else float(x[2]) for x in (limits.speed, limits.accel, limits.jerk))
+    ends = np.array([limits.lower[2] + cell.motion.limit_margin_mm, limits.upper[2] - cell.motion.limit_margin_mm])
+    heights = arm.flange_z_mm - arm.tool_length_mm + arm.sense[2] * ends
+    swing = lead * float(np.abs([limits.lower[3], limits.upper[3]]).max())
+    return LiftLimits(speed, accel, jerk, float(heights.max() - swing))
