@@ -61,7 +61,8 @@ def _worth(fit: LensFit, views: Sequence[View]) -> float:
 def _fitted(views: Sequence[View], flags: int) -> LensFit:
     flat = [np.column_stack([view.points_mm, np.zeros(len(view.points_mm))]).astype(np.float32) for view in views]
     seen = [view.pixels.astype(np.float32) for view in views]
-    undetermined = InputFault("images", "", "the views do not determine a lens", "tilt the board, each view another way")
+    undetermined = InputFault("images", "", "the views do not determine a lens",
+                              "tilt the board, each view another way")
     try:
         rms, matrix, distortion, turns, shifts, *_ = cv2.calibrateCameraExtended(
             flat, seen, views[0].image_size_px, None, None, flags=flags)  # type: ignore[call-overload]
