@@ -46,7 +46,7 @@ def rest_to_moving_time(
     Time-optimal control of three integrators switches the jerk twice: towards a point farther than one ramp
     carries, the speed passes a peak above the end speed; towards a nearer one, the axis first backs off.
     """
-    return np.asarray(_rest_to_moving_time(distance, end_speed, speed, accel, jerk))
+    return np.asarray(rest_to_moving_kernel(distance, end_speed, speed, accel, jerk))
 
 
 @njit("float64(float64, float64, float64)", cache=True)
@@ -84,7 +84,7 @@ def _two_ramps(root: float, end: float, side: float, accel: float, jerk: float) 
 
 
 @vectorize(["float64(float64, float64, float64, float64, float64)"], cache=True)  # type: ignore[no-untyped-call, untyped-decorator]
-def _rest_to_moving_time(distance: float, end_speed: float, speed: float, accel: float, jerk: float) -> float:
+def rest_to_moving_kernel(distance: float, end_speed: float, speed: float, accel: float, jerk: float) -> float:
     way, end = (distance, end_speed) if end_speed >= 0 else (-distance, -end_speed)
     if not (end <= speed and np.isfinite(way)):
         return float(np.nan)
