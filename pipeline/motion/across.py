@@ -1,11 +1,13 @@
 """The way across: J1, J2 and J4 together, from rest or from following a part, to rest or to meeting a part.
 
-Each way is one jerk-limited ruckig move with all joints in time with each other. To meet a moving part exactly, the
-time of the meeting is searched: the shortest T for which a move that ends at time T, in the state that following the
-part asks for at time T, needs no longer than T.
+All joints end at the same time, that of the slowest. To meet a moving part exactly, the time of the meeting is searched:
+the shortest T for which a move that ends at time T, in the state that following the part asks for at time T, needs no
+longer than T. ruckig stretches the quicker joints to T; where a joint's profile can't be stretched so (a moving end
+leaves gaps in the durations it can have) the joint waits at its resting end and moves in its own least time.
 """
 
 from collections.abc import Callable
+from dataclasses import dataclass
 
 import numpy as np
 import ruckig
@@ -18,55 +20,77 @@ from pipeline.motion.lift import MotionFault
 FloatArray = NDArray[np.float64]
 TURNING = [0, 1, 3]
 EXACT_S = 1e-11
-SEARCHES = 60
+SETTLED_S = 1e-7
+SEARCHES, PATIENCE = 60, 40  # after so many steps any meeting will do
 
 State = tuple[FloatArray, FloatArray, FloatArray]  # position, speed, acceleration of J1, J2, J4, each (3,)
+
+
+@dataclass(frozen=True)
+class Way:
+    """A way across: how long, and the curves of J1, J2, J4 from time 0."""
+
+    duration: float
+    curves: tuple[Curve, ...]
 
 
 class Across:
     """Moves of J1, J2 and J4 under an arm's limits."""
 
     def __init__(self, arm: Arm) -> None:
-        self._planner = ruckig.Ruckig(3)
-        self._ask = ruckig.InputParameter(3)
-        self._ask.max_velocity = arm.limits.speed[TURNING].tolist()
-        self._ask.max_acceleration = arm.limits.accel[TURNING].tolist()
-        self._ask.max_jerk = arm.limits.jerk[TURNING].tolist()
+        self._limits = np.stack([arm.limits.speed, arm.limits.accel, arm.limits.jerk])[:, TURNING]
+        self._planner, self._alone = ruckig.Ruckig(3), ruckig.Ruckig(1)
+        self._ask = _asking(3, self._limits)
+        self._asks = [_asking(1, self._limits[:, k:k + 1]) for k in range(3)]
 
-    def between(self, start: State, end: State, least_s: float = 0.0) -> ruckig.Trajectory:
-        """The quickest move from one state to another that takes no less than least_s; raises MotionFault."""
-        ask = self._ask
-        ask.current_position, ask.current_velocity, ask.current_acceleration = (x.tolist() for x in start)
-        ask.target_position, ask.target_velocity, ask.target_acceleration = (x.tolist() for x in end)
-        ask.minimum_duration = least_s if least_s > 0 else None
-        trajectory = ruckig.Trajectory(3)
-        result = self._planner.calculate(ask, trajectory)
-        if result < 0:
-            raise MotionFault(f"no move of J1, J2, J4 from {np.round(start[0], 4)} to {np.round(end[0], 4)} ({result})")
-        return trajectory
+    def between(self, start: State, end: State, least_s: float = 0.0) -> Way:
+        """The quickest move from one state to another that takes no less than least_s; raises MotionFault.
 
-    def meet(self, start: State, from_s: float, target: Callable[[float], State | None]) -> ruckig.Trajectory | None:
+        One of the two states must be at rest.
+        """
+        trajectory = self._together(start, end, least_s)
+        duration = max(least_s, *trajectory.independent_min_durations)
+        if trajectory.duration <= duration + EXACT_S:
+            return Way(trajectory.duration, curves_of(trajectory, 0.0, (1.0, 1.0, 1.0)))
+        return Way(duration, tuple(self._one(k, start, end, duration) for k in range(3)))
+
+    def meet(self, start: State, from_s: float, target: Callable[[float], State | None]) -> Way | None:
         """The soonest move that starts at from_s and ends in target(from_s + its duration); None where there is none.
 
-        target answers None where the part can't be followed. Position at the end is exact to the speed of the part
-        times EXACT_S. The search is a fixed point: the part is slow against the arm, so each step shrinks the error
-        by about their ratio; where a joint can't make some durations the next possible one is taken.
+        target answers None where the part can't be followed. The end is met exactly, no later than SETTLED_S after the
+        soonest time it can be. The search is a fixed point: the part is slow against the arm, so each step shrinks the
+        error by about their ratio.
         """
         wanted = 0.0
-        for _ in range(SEARCHES):
+        for attempt in range(SEARCHES):
             end = target(from_s + wanted)
             if end is None:
                 return None
-            trajectory = self.between(start, end, wanted)
-            if trajectory.duration - wanted < EXACT_S:
-                return trajectory
-            wanted = trajectory.duration
+            needed = max(self._together(start, end, 0.0).independent_min_durations)
+            spare = wanted - needed
+            if 0 <= spare and (spare < SETTLED_S or attempt > PATIENCE):
+                return self.between(start, end, wanted)
+            wanted = needed + 0.1 * SETTLED_S
         return None
 
-    def arrive(self, start: State, at_s: float, target: Callable[[float], State | None]) -> ruckig.Trajectory | None:
-        """The quickest move that ends in target(at_s), whenever it has to start; None where there is none."""
-        end = target(at_s)
-        return None if end is None else self.between(start, end)
+    def _together(self, start: State, end: State, least_s: float) -> ruckig.Trajectory:
+        trajectory = ruckig.Trajectory(3)
+        _solve(self._planner, self._ask, start, end, least_s, trajectory)
+        return trajectory
+
+    def _one(self, k: int, start: State, end: State, duration: float) -> Curve:
+        """One joint, in exactly that time: stretched, or in its least time after or before a rest."""
+        first, last = (tuple(x[k:k + 1] for x in state) for state in (start, end))
+        trajectory = ruckig.Trajectory(1)
+        _solve(self._alone, self._asks[k], first, last, duration, trajectory)  # type: ignore[arg-type]
+        if trajectory.duration <= duration + EXACT_S:
+            return curves_of(trajectory, 0.0, (1.0,))[0]
+        _solve(self._alone, self._asks[k], first, last, 0.0, trajectory)  # type: ignore[arg-type]
+        spare = duration - trajectory.duration
+        if first[1][0] == 0 and first[2][0] == 0:
+            return Curve.joined([Curve.held(float(first[0][0]), 0.0, spare), curves_of(trajectory, spare, (1.0,))[0]])
+        moving = curves_of(trajectory, 0.0, (1.0,))[0]
+        return Curve.joined([moving, Curve.held(float(last[0][0]), moving.end_s, duration)])
 
 
 def at_rest(joints: FloatArray) -> State:
@@ -75,6 +99,17 @@ def at_rest(joints: FloatArray) -> State:
     return joints[TURNING], still, still
 
 
-def across_curves(trajectory: ruckig.Trajectory, start_s: float) -> tuple[Curve, ...]:
-    """Curves of J1, J2, J4 of a move that starts at start_s."""
-    return curves_of(trajectory, start_s, (1.0, 1.0, 1.0))
+def _asking(joints: int, limits: FloatArray) -> ruckig.InputParameter:
+    ask = ruckig.InputParameter(joints)
+    ask.max_velocity, ask.max_acceleration, ask.max_jerk = limits.tolist()
+    return ask
+
+
+def _solve(planner: ruckig.Ruckig, ask: ruckig.InputParameter, start: State, end: State, least_s: float,
+           trajectory: ruckig.Trajectory) -> None:
+    ask.current_position, ask.current_velocity, ask.current_acceleration = (x.tolist() for x in start)
+    ask.target_position, ask.target_velocity, ask.target_acceleration = (x.tolist() for x in end)
+    ask.minimum_duration = least_s if least_s > 0 else None
+    result = planner.calculate(ask, trajectory)
+    if result < 0:
+        raise MotionFault(f"no move of J1, J2, J4 from {np.round(start[0], 4)} to {np.round(end[0], 4)} ({result})")

@@ -14,12 +14,11 @@ from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
-from ruckig import Trajectory
 
 from pipeline.arm import Arm
 from pipeline.belt import Belt
 from pipeline.cell import Cell
-from pipeline.motion.across import TURNING, Across, State, across_curves, at_rest
+from pipeline.motion.across import TURNING, Across, State, Way, at_rest
 from pipeline.motion.curve import Curve
 from pipeline.motion.lift import Lift, LiftLimits
 
@@ -127,14 +126,15 @@ class Mover:
         across_s = meeting.depart_s + meeting.rise_s
         return Cycle(hold, meeting.depart_s, across_s, across_s + meeting.move.duration, grasp_start, grasp_end, left,
                      left + leaving.move.duration, release, release + self.motion.release_s, start, place_joints,
-                     across_curves(meeting.move, across_s), across_curves(leaving.move, left), height)
+                     tuple(curve.later(across_s) for curve in meeting.move.curves),
+                     tuple(curve.later(left) for curve in leaving.move.curves), height)
 
     def passes(self, hold: Hold, along_mm: float) -> float:
         """When a part passes a distance along the heading; inf where the belt never gets there."""
         target = along_mm - float(hold.at_mm @ self.belt.heading)
         return self.belt.when(target)
 
-    def _meet_soonest(self, start: FloatArray, free_s: float, hold: Hold, lift: Lift) -> "_Way | None":
+    def _meet_soonest(self, start: FloatArray, free_s: float, hold: Hold, lift: Lift) -> "_Leg | None":
         rise = lift.rise_s(np.inf)
         for _ in range(SETTLING):
             move = self.across.meet(at_rest(start), free_s + rise, lambda t: self.state_on(hold, t))
@@ -144,25 +144,26 @@ class Mover:
             if needed <= rise + SETTLED_S:
                 break
             rise = needed
-        return _Way(free_s, rise, move)
+        return _Leg(free_s, rise, move)
 
-    def _meet_late(self, start: FloatArray, contact_s: float, hold: Hold, lift: Lift) -> "_Way | None":
+    def _meet_late(self, start: FloatArray, contact_s: float, hold: Hold, lift: Lift) -> "_Leg | None":
         """The way that makes contact at contact_s, begun as late as that allows."""
         if not np.isfinite(contact_s):
             return None
         met = contact_s
         for _ in range(SETTLING):
-            move = self.across.arrive(at_rest(start), met, lambda t: self.state_on(hold, t))
-            if move is None:
+            state = self.state_on(hold, met)
+            if state is None:
                 return None
+            move = self.across.between(at_rest(start), state)
             rise, total = lift.rise_s(move.duration), lift.total_s(move.duration)
             late = contact_s - (total - rise - move.duration) - met
             if abs(late) < SETTLED_S:
                 break
             met += late
-        return _Way(met - move.duration - rise, rise, move)
+        return _Leg(met - move.duration - rise, rise, move)
 
-    def _leave(self, hold: Hold, grasp_end: float, place_joints: FloatArray) -> "_Way | None":
+    def _leave(self, hold: Hold, grasp_end: float, place_joints: FloatArray) -> "_Leg | None":
         """From the part to rest over the slot."""
         lift = self.lift(round(hold.z_mm, 6), round(float(self.arm.forward(place_joints)[2]), 6))
         rise = lift.rise_s(np.inf)
@@ -175,7 +176,7 @@ class Mover:
             if needed <= rise + SETTLED_S:
                 break
             rise = needed
-        return _Way(grasp_end, rise, move)
+        return _Leg(grasp_end, rise, move)
 
     def joints(self, cycle: Cycle, t: FloatArray) -> FloatArray:
         """Joints (n, 4) at times t (n,) of a cycle; before it the start's, after it the slot's."""
@@ -192,12 +193,12 @@ class Mover:
 
 
 @dataclass(frozen=True)
-class _Way:
-    """A rise to the gate of rise_s from depart_s on, and the way across that follows it."""
+class _Leg:
+    """A rise to the gate of rise_s from depart_s on, and the way across after it."""
 
     depart_s: float
     rise_s: float
-    move: Trajectory
+    move: Way
 
 
 def turned(arm: Arm, joints: FloatArray, yaw: float, turn: int) -> FloatArray:
