@@ -1,0 +1,128 @@
+"""Edges of an image: a coarse map of their directions for searching, and their sub-pixel places for fitting.
+
+The map keeps, for each cell of 4 x 4 pixels, the set of edge directions in it and around it (after Hinterstoisser et
+al., "Gradient response maps", IEEE PAMI 34(5), 2012, section 3), without regard to which side is the lighter.
+"""
+
+from dataclasses import dataclass
+
+import cv2
+import numpy as np
+from numba import njit
+from numpy.typing import NDArray
+
+CELL_PX = 4
+DIRECTIONS = 8
+NOISE_FACTOR = 4.0
+LEAST_GRADIENT = 16.0  # of a 3 x 3 Sobel filter at half size: a step of 4 grey levels
+
+
+@dataclass(frozen=True)
+class EdgeMap:
+    """Edges of one image, coarsely.
+
+    strength (h, w) float32: strongest gradient in each cell of 4 x 4 pixels, Sobel units at half size.
+    own (h, w) uint8: bit k set where the cell holds an edge whose normal lies in the k-th of 8 sectors of half a turn.
+    near (h, w) uint8: the same for the cell and its eight neighbours.  least: gradient that counts as an edge.
+    """
+
+    strength: NDArray[np.float32]
+    own: NDArray[np.uint8]
+    near: NDArray[np.uint8]
+    least: float
+
+
+def edge_map(grey: NDArray[np.uint8]) -> EdgeMap:
+    """The edge map of a grey image (rows, columns), its threshold four times the median gradient of the belt."""
+    rows, columns = grey.shape
+    whole = grey[: rows - rows % CELL_PX, : columns - columns % CELL_PX]
+    half = cv2.resize(whole, (whole.shape[1] // 2, whole.shape[0] // 2), interpolation=cv2.INTER_AREA)
+    dx = cv2.Sobel(half, cv2.CV_16S, 1, 0)
+    dy = cv2.Sobel(half, cv2.CV_16S, 0, 1)
+    middle = np.median(np.abs(dx[::3, ::3]).astype(np.int32) + np.abs(dy[::3, ::3]))
+    least = max(NOISE_FACTOR * float(middle) * 0.8, LEAST_GRADIENT)
+    return EdgeMap(*_pooled(dx, dy, least), least)
+
+
+@njit("Tuple((f4[:,::1], u1[:,::1], u1[:,::1]))(i2[:,::1], i2[:,::1], f8)", cache=True)
+def _pooled(dx, dy, least):  # type: ignore[no-untyped-def]
+    rows, columns = dx.shape[0] // 2, dx.shape[1] // 2
+    strength = np.zeros((rows, columns), np.float32)
+    own = np.zeros((rows, columns), np.uint8)
+    spread = np.zeros((rows, columns), np.uint8)
+    floor = np.int32(least * least)
+    sector = np.pi / 8
+    for j in range(rows):
+        for i in range(columns):
+            most = np.int32(0)
+            for k in range(2):
+                for m in range(2):
+                    gx, gy = np.int32(dx[2 * j + k, 2 * i + m]), np.int32(dy[2 * j + k, 2 * i + m])
+                    square = gx * gx + gy * gy
+                    most = max(most, square)
+                    if square > floor:
+                        angle = np.arctan2(np.float32(gy), np.float32(gx))
+                        own[j, i] |= np.uint8(1 << (int(np.floor(angle / sector)) & 7))
+            strength[j, i] = np.sqrt(np.float32(most))
+    for j in range(1, rows - 1):
+        for i in range(1, columns - 1):
+            for k in range(-1, 2):
+                for m in range(-1, 2):
+                    spread[j, i] |= own[j + k, i + m]
+    return strength, own, spread
+
+
+@njit("f8(u1[:,::1], f8, f8)", cache=True, inline="always")
+def _at(image, u, v):  # type: ignore[no-untyped-def]
+    i, j = int(u), int(v)
+    a, b = u - i, v - j
+    top = image[j, i] + a * (np.float64(image[j, i + 1]) - image[j, i])
+    bottom = image[j + 1, i] + a * (np.float64(image[j + 1, i + 1]) - image[j + 1, i])
+    return top + b * (bottom - top)
+
+
+MOST_SAMPLES = 96
+
+
+@njit("void(u1[:,::1], f8, f8, f8, f8, f8, f8, f8, f8[::1], f8[::1])", cache=True)
+def edge_along(image, u, v, nu, nv, reach, least, sign, profile, found):  # type: ignore[no-untyped-def]
+    """Place of the edge that crosses the normal (nu, nv) near (u, v): found[0] pixels along it, found[1] its step.
+
+    The profile, averaged over three pixels across, is differenced over two; the best peak is its strength less half
+    for one at the end of the reach, less 0.4 for one of the other sign; a parabola gives its top.
+    found[1] is 0 where no step of `least` grey levels is in reach or the profile leaves the image.
+    """
+    found[0] = 0.0
+    found[1] = 0.0
+    side = int(np.ceil(reach * 2.0)) + 3
+    n = 2 * side + 1
+    far = 0.5 * side + 1.5
+    if n > profile.shape[0] or not (far < u < image.shape[1] - 2 - far and far < v < image.shape[0] - 2 - far):
+        return
+    for k in range(n):
+        s = 0.5 * (k - side)
+        x, y = u + s * nu, v + s * nv
+        profile[k] = 0.25 * (_at(image, x - nv, y + nu) + _at(image, x + nv, y - nu)) + 0.5 * _at(image, x, y)
+    best = 0.0
+    at = -1
+    for k in range(3, n - 3):
+        here = profile[k + 2] - profile[k - 2]
+        size = abs(here)
+        if size < least:
+            continue
+        if size < abs(profile[k + 1] - profile[k - 3]) or size < abs(profile[k + 3] - profile[k - 1]):
+            continue
+        s = 0.5 * (k - side)
+        worth = size * (1.0 - 0.5 * abs(s) / reach)
+        if here * sign < 0.0:
+            worth *= 0.6
+        if worth > best:
+            best, at = worth, k
+    if at < 0:
+        return
+    before, here, after = (abs(profile[at + 1] - profile[at - 3]), abs(profile[at + 2] - profile[at - 2]),
+                           abs(profile[at + 3] - profile[at - 1]))  # fmt: skip
+    curve = before - 2.0 * here + after
+    shift = 0.0 if curve >= 0.0 else 0.5 * (before - after) / curve
+    found[0] = 0.5 * (at - side + min(max(shift, -1.0), 1.0))
+    found[1] = profile[at + 2] - profile[at - 2]

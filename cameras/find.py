@@ -1,0 +1,233 @@
+"""Finding: image to sightings. Patches, placements on them, poses fitted to sub-pixel, the best of them kept.
+
+A finder of one's own needs `find` alone; see `Finder`.
+"""
+
+from collections.abc import Iterable
+from dataclasses import dataclass
+from typing import Protocol
+
+import cv2
+import numpy as np
+from numpy.typing import NDArray
+
+from cameras.blobs import Blobs, blobs_of
+from cameras.edges import CELL_PX, EdgeMap, edge_map
+from cameras.match import Fit, Template, fit_pose, template_of
+from cameras.model import Model
+from cameras.search import TURN_STEP_RAD, coarse_points, placements
+from cameras.sightings import Sightings
+from cameras.view import CameraMap, Views, views_of
+
+FloatArray = NDArray[np.float64]
+
+DEFAULT_SCORE = 0.6
+COARSE_SHARE = 0.55
+MOST_TRIED = 6
+OVERLAP = 0.2
+UNKNOWN_SHARE = 0.25
+UNKNOWN_LEAST_MM2 = 25.0
+INNER_SHARE = 0.45
+
+
+class Finder(Protocol):
+    """What finds parts. Bring your own: a class with this method, given where `PartFinder` is."""
+
+    def find(self, image: NDArray[np.uint8], camera: CameraMap) -> Sightings:
+        """Sightings of one image (rows, columns) or (rows, columns, 3), in the cell frame; `row` is the caller's."""
+        ...
+
+
+@dataclass(frozen=True)
+class TaughtPart:
+    """A kind of part to look for. turns: how many yaws look alike, 0 for all (the cell's word, not the model's)."""
+
+    name: str
+    model: Model
+    height_mm: float
+    turns: int
+
+
+@dataclass(frozen=True)
+class _Kind:
+    name: str
+    down: bool
+    template: Template
+    coarse: FloatArray
+    anchor: FloatArray
+    model: Model
+    turns: int
+
+
+@dataclass(frozen=True)
+class _Placed:
+    kind: _Kind
+    fit: Fit
+    xy_mm: FloatArray
+    polygon_px: FloatArray
+
+
+class PartFinder:
+    """Finds taught parts, both sides up, and what is none of them, on a surface at a known height.
+
+    least_score: share of the expected edge that must be found. One finder serves one camera; frames come in any order.
+    """
+
+    def __init__(self, parts: Iterable[TaughtPart], surface_mm: float, least_score: float = DEFAULT_SCORE) -> None:
+        self.parts, self.surface_mm, self.least_score = tuple(parts), surface_mm, least_score
+        self.kinds = [_kind(part, down) for part in self.parts for down in (False, True)]
+        self.highest_mm = max((part.height_mm for part in self.parts), default=10.0)
+        self._views: Views | None = None
+        self._camera: CameraMap | None = None
+        self._shape = (0, 0)
+
+    def find(self, image: NDArray[np.uint8], camera: CameraMap) -> Sightings:
+        """Sightings in one image; things cut by its border are left out."""
+        grey = grey_of(image)
+        if grey.shape[0] < 32 or grey.shape[1] < 32:
+            return Sightings.joined(())
+        views = self._views_for(camera, grey.shape)
+        edges = edge_map(grey)
+        blobs = blobs_of(edges)
+        placed: list[_Placed] = []
+        for patch in range(len(blobs.box)):
+            placed += self._on_patch(grey, camera, views, edges, blobs, patch)
+        kept = _best(placed, grey.shape, OVERLAP)
+        return _sightings(kept, self._unknown(kept, blobs, camera))
+
+    def _views_for(self, camera: CameraMap, shape: tuple[int, int]) -> Views:
+        if self._views is None or self._camera is not camera or self._shape != shape:
+            self._views = views_of(camera, self.surface_mm, self.highest_mm, shape)
+            self._camera, self._shape = camera, shape
+        return self._views
+
+    def _on_patch(
+        self, grey: NDArray[np.uint8], camera: CameraMap, views: Views, edges: EdgeMap, blobs: Blobs, patch: int
+    ) -> list[_Placed]:
+        box = blobs.box[patch]
+        centre_px = CELL_PX * 0.5 * (box[:2] + box[2:]) + 0.5 * (CELL_PX - 1)
+        place = int(views.nearest(camera.to_cell(centre_px[None], self.surface_mm))[0])
+        affine = np.ascontiguousarray(views.coefficients[place][:, 1:3]) / CELL_PX
+        room = np.empty((2048, 4))
+        rough: list[tuple[float, _Kind, float, float, float]] = []
+        for kind in self.kinds:
+            turns = 1 if kind.turns == 0 else max(int(round(2 * np.pi / kind.turns / TURN_STEP_RAD)), 1)
+            step = 2 * np.pi / max(kind.turns, 1) / turns
+            n = placements(edges.own, edges.near, blobs.label, patch + 1, kind.coarse, affine, kind.anchor, turns, step, box,
+                           COARSE_SHARE, room)  # fmt: skip
+            radius = kind.model.radius_mm * float(np.sqrt(abs(np.linalg.det(affine))))
+            rough += [(score, kind, u, v, yaw) for score, u, v, yaw in _peaks(room[:n], radius, 2 * np.pi / max(kind.turns, 1))]
+        rough.sort(key=lambda one: -one[0])
+        area = float(blobs.cells[patch])
+        most = MOST_TRIED + 6 * int(area / 500)
+        tried = [self._fitted(grey, camera, views, one, edges.least) for one in rough[: 3 * most]]
+        return [one for one in tried if one is not None]
+
+    def _fitted(
+        self, grey: NDArray[np.uint8], camera: CameraMap, views: Views, rough: tuple[float, _Kind, float, float, float], least: float
+    ) -> _Placed | None:
+        _, kind, u, v, yaw = rough
+        middle = float(np.mean(kind.template.heights[:2]))
+        xy = camera.to_cell(np.array([[u, v]]) * CELL_PX + 0.5 * (CELL_PX - 1), self.surface_mm + middle)[0]
+        place = int(views.nearest(xy[None])[0])
+        centre = views.places_mm[place]
+        fit = fit_pose(grey, views.coefficients[place], kind.template, (*(xy - centre), yaw), 0.12 * least, 0.4)
+        if fit is None or fit.outline_share < self.least_score:
+            return None
+        polygon = fit.polygon_px
+        rows, columns = grey.shape
+        if polygon.min() < 0.5 or polygon[:, 0].max() > columns - 1.5 or polygon[:, 1].max() > rows - 1.5:
+            return None
+        return _Placed(kind, fit, centre + fit.pose[:2], polygon)
+
+    def _unknown(self, kept: list[_Placed], blobs: Blobs, camera: CameraMap) -> list[tuple[FloatArray, FloatArray]]:
+        """Centre and outline about it, in mm, of what no part explains and no border cuts."""
+        left = (blobs.label > 0).astype(np.uint8)
+        for one in kept:
+            cv2.fillPoly(left, [np.round((one.polygon_px - 1.5) / CELL_PX).astype(np.int32)], 0)
+            cv2.polylines(left, [np.round((one.polygon_px - 1.5) / CELL_PX).astype(np.int32)], True, 0, 5)
+        left = cv2.morphologyEx(left, cv2.MORPH_OPEN, np.ones((3, 3), np.uint8))
+        found = []
+        for patch in range(len(blobs.box)):
+            if blobs.cut[patch]:
+                continue
+            x0, y0, x1, y1 = blobs.box[patch]
+            own = ((left > 0) & (blobs.label == patch + 1))[y0 : y1 + 1, x0 : x1 + 1].astype(np.uint8)
+            if own.sum() < UNKNOWN_SHARE * blobs.cells[patch]:
+                continue
+            outlines, _ = cv2.findContours(own, cv2.RETR_EXTERNAL, cv2.CHAIN_APPROX_SIMPLE)
+            outline = max(outlines, key=cv2.contourArea)[:, 0].astype(np.float64) + [x0, y0]
+            polygon = camera.to_cell(outline * CELL_PX + 0.5 * (CELL_PX - 1), self.surface_mm)
+            if len(polygon) >= 3 and cv2.contourArea(polygon.astype(np.float32)) >= UNKNOWN_LEAST_MM2:
+                centre = 0.5 * (polygon.min(axis=0) + polygon.max(axis=0))
+                found.append((centre, polygon - centre))
+        return found
+
+
+def grey_of(image: NDArray[np.uint8]) -> NDArray[np.uint8]:
+    """An image (rows, columns) or (rows, columns, 3) as contiguous grey levels."""
+    grey = cv2.cvtColor(image, cv2.COLOR_BGR2GRAY) if image.ndim == 3 else image
+    return np.ascontiguousarray(grey, dtype=np.uint8)
+
+
+def _kind(part: TaughtPart, down: bool) -> _Kind:
+    template = template_of(part.model, down)
+    outline_only = template.points[template.points[:, 5] == 0.0]
+    return _Kind(part.name, down, template, coarse_points(outline_only), _anchor(template.outline), part.model, part.turns)
+
+
+def _anchor(outline: FloatArray) -> FloatArray:
+    """The point deepest inside a polygon."""
+    low = outline.min(axis=0)
+    scale = 120.0 / max(float(np.ptp(outline, axis=0).max()), 1e-6)
+    mask = np.zeros((130, 130), np.uint8)
+    cv2.fillPoly(mask, [np.round((outline - low) * scale + 4).astype(np.int32)], 1)
+    depth = cv2.distanceTransform(mask, cv2.DIST_L2, 5)
+    v, u = np.unravel_index(int(np.argmax(depth)), depth.shape)
+    return np.asarray((np.array([u, v], float) - 4) / scale + low)
+
+
+def _peaks(hits: FloatArray, radius: float, period: float) -> list[tuple[float, float, float, float]]:
+    """Of placements (n, 4: score, u, v, yaw) the best, each at least three cells or 15 degrees from any better."""
+    kept: list[tuple[float, float, float, float]] = []
+    for score, u, v, yaw in hits[np.argsort(-hits[:, 0], kind="stable")]:
+        near = False
+        for _, a, b, other in kept:
+            turn = abs((yaw - other + 0.5 * period) % period - 0.5 * period)
+            if abs(u - a) <= 3 and abs(v - b) <= 3 and turn < 0.27:
+                near = True
+                break
+        if not near:
+            kept.append((float(score), float(u), float(v), float(yaw)))
+            if len(kept) >= 24:
+                break
+    return kept
+
+
+def _best(placed: list[_Placed], shape: tuple[int, int], overlap: float) -> list[_Placed]:
+    """Placements in order of worth, those left out that overlap a better one."""
+    taken = np.zeros((shape[0] // CELL_PX + 1, shape[1] // CELL_PX + 1), np.uint8)
+    kept = []
+    for one in sorted(placed, key=lambda one: -one.fit.worth):
+        own = np.zeros_like(taken)
+        cv2.fillPoly(own, [np.round((one.polygon_px - 1.5) / CELL_PX).astype(np.int32)], 1)
+        if (own & taken).sum() <= overlap * own.sum():
+            taken |= own
+            kept.append(one)
+    return kept
+
+
+def _sightings(kept: list[_Placed], unknown: list[tuple[FloatArray, FloatArray]]) -> Sightings:
+    n, m = len(kept), len(unknown)
+    none = np.zeros((0, 2))
+    return Sightings(
+        row=np.zeros(n + m, np.int64),
+        kind=np.array([one.kind.name for one in kept] + [""] * m, dtype=np.str_),
+        side=np.array(["down" if one.kind.down else "up" for one in kept] + [""] * m, dtype=np.str_),
+        xy_mm=np.array([one.xy_mm for one in kept] + [xy for xy, _ in unknown]).reshape(-1, 2),
+        yaw_rad=np.array([float(one.fit.pose[2]) for one in kept] + [0.0] * m),
+        score=np.array([one.fit.score for one in kept] + [0.0] * m),
+        sigma_mm=np.array([one.fit.sigma_mm for one in kept] + [1.0] * m),
+        sigma_rad=np.array([one.fit.sigma_rad for one in kept] + [np.pi] * m),
+        outline_mm=tuple([none] * n + [outline for _, outline in unknown]),
+    )  # fmt: skip

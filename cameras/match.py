@@ -1,0 +1,214 @@
+"""The pose of one part: its taught edges laid on the image and moved until they lie on the image's own edges.
+
+Gauss-Newton on the distances along the edges' normals (Harris and Stennett, "RAPID", BMVC 1990; Drummond and Cipolla,
+IEEE PAMI 24(7), 2002), with heights of the edges as further unknowns that the taught heights hold back: a camera that
+looks askew sees a wrong height as a shift.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+from numba import njit
+from numpy.typing import NDArray
+
+from cameras.edges import MOST_SAMPLES, edge_along
+from cameras.model import Model
+from cameras.view import project, slopes
+
+FloatArray = NDArray[np.float64]
+
+HIT_PX = 1.2
+PIXEL_SIGMA = 0.25
+CORRELATED = 3.0  # neighbouring edge points err together
+
+
+@dataclass(frozen=True)
+class Template:
+    """A model ready to be laid on images, for one side.
+
+    points (n, 6): x, y, nx, ny in the grip frame (mirrored for the side down), grey step, group (0 outline, k inner).
+    heights (g,), sigmas (g,): foot and top of the outline's wall, then one of each inner contour.
+    outline (k, 2): polygon.
+    """
+
+    points: FloatArray
+    heights: FloatArray
+    sigmas: FloatArray
+    outline: FloatArray
+    round: bool
+
+
+def template_of(model: Model, down: bool) -> Template:
+    """A model's edges for one side; a part turned over shows the mirror image of its outline, and no inner edges."""
+    groups = [model.outline] if down else [model.outline, *model.inner]
+    points = np.concatenate([np.column_stack([one.points_mm, one.normals, one.steps, np.full(len(one.steps), float(k))])
+                             for k, one in enumerate(groups)])
+    wall, top = model.outline.height_mm, model.height_mm
+    wall_sigma = model.outline.height_sigma_mm
+    if down:
+        heights, sigmas = [top - wall, top], [wall_sigma, 0.15 * top]
+        points = points * np.array([1.0, -1.0, 1.0, -1.0, 1.0, 1.0])
+    else:
+        heights = [0.0, wall] + [one.height_mm for one in model.inner]
+        sigmas = [0.05 * top, wall_sigma] + [one.height_sigma_mm for one in model.inner]
+    outline = model.outline_mm[::-1] * np.array([1.0, -1.0]) if down else model.outline_mm
+    return Template(np.ascontiguousarray(points), np.array(heights), np.maximum(np.array(sigmas), 0.02),
+                    np.ascontiguousarray(outline), model.turns == 0)  # fmt: skip
+
+
+@njit("i8(u1[:,::1], f8[:,::1], f8[:,::1], f8[::1], f8[::1], f8[::1], f8, f8, i8, f8, f8[:,::1], f8[:,::1])", cache=True)
+def _step(image, view, points, pose, heights, prior, reach, least, stride, with_edges, normal, out):  # type: ignore[no-untyped-def]
+    """Normal equations of one step. out (n, 4): residual px, step, hit, predicted inside; returns how many were hit."""
+    size = 3 + heights.shape[0]
+    normal[:, :] = 0.0
+    cosine, sine = np.cos(pose[2]), np.sin(pose[2])
+    profile = np.empty(MOST_SAMPLES)
+    found = np.empty(2)
+    local = np.empty((2, 3))
+    row = np.zeros(size)
+    slopes(view, pose[0], pose[1], 0.0, local)
+    det = local[0, 0] * local[1, 1] - local[0, 1] * local[1, 0]
+    away_x = (local[1, 1] * local[0, 2] - local[0, 1] * local[1, 2]) / det
+    away_y = (-local[1, 0] * local[0, 2] + local[0, 0] * local[1, 2]) / det
+    hits = 0
+    for k in range(0, points.shape[0], stride):
+        px, py = points[k, 0], points[k, 1]
+        rx, ry = cosine * px - sine * py, sine * px + cosine * py
+        nx, ny = cosine * points[k, 2] - sine * points[k, 3], sine * points[k, 2] + cosine * points[k, 3]
+        group = int(points[k, 5])
+        at = group + 1
+        if group == 0:
+            at = 1 if nx * away_x + ny * away_y > 0.0 else 0
+        x, y, z = pose[0] + rx, pose[1] + ry, heights[at]
+        u, v = project(view, x, y, z)
+        slopes(view, x, y, z, local)
+        tu, tv = -local[0, 0] * ny + local[0, 1] * nx, -local[1, 0] * ny + local[1, 1] * nx
+        length = np.sqrt(tu * tu + tv * tv)
+        nu, nv = tv / length, -tu / length
+        if nu * (local[0, 0] * nx + local[0, 1] * ny) + nv * (local[1, 0] * nx + local[1, 1] * ny) < 0.0:
+            nu, nv = -nu, -nv
+        edge_along(image, u, v, nu, nv, reach, least, points[k, 4], profile, found)
+        out[k, 0], out[k, 1] = found[0], found[1]
+        out[k, 2] = 0.0
+        if found[1] == 0.0:
+            continue
+        r = found[0]
+        scale = max(reach * 0.4, 0.6)
+        w = (r / scale) ** 2
+        w = 1.0 / ((1.0 + w) * (1.0 + w))
+        if group > 0:
+            w *= with_edges
+        if abs(r) <= HIT_PX:
+            out[k, 2] = 1.0
+            hits += 1
+        jx, jy = nu * local[0, 0] + nv * local[1, 0], nu * local[0, 1] + nv * local[1, 1]
+        row[0], row[1], row[2] = jx, jy, -jx * ry + jy * rx
+        jz = nu * local[0, 2] + nv * local[1, 2]
+        for a in range(4):
+            ia = a if a < 3 else 3 + at
+            ja = row[a] if a < 3 else jz
+            for b in range(4):
+                ib = b if b < 3 else 3 + at
+                jb = row[b] if b < 3 else jz
+                normal[ia, ib] += w * ja * jb
+            normal[ia, size] += w * ja * r
+    return hits
+
+
+@njit("void(f8[:,::1], f8[::1], f8[::1], f8[::1], b1, f8[::1], f8[::1], f8[:,::1])", cache=True)
+def _solve(normal, prior, sigmas, heights, is_round, moved, shares, cov):  # type: ignore[no-untyped-def]
+    """Solve the normal equations with the heights held to their priors; `moved` is the step, `cov` the inverse."""
+    size = 3 + heights.shape[0]
+    matrix = normal[:, :size].copy()
+    right = normal[:, size].copy()
+    unit = CORRELATED * PIXEL_SIGMA * PIXEL_SIGMA
+    for k in range(heights.shape[0]):
+        hold = unit / (sigmas[k] * sigmas[k])
+        matrix[3 + k, 3 + k] += hold
+        right[3 + k] += hold * (prior[k] - heights[k])
+    for k in range(3):
+        matrix[k, k] += 1e-3
+    if is_round:
+        matrix[2, :] = 0.0
+        matrix[:, 2] = 0.0
+        matrix[2, 2] = 1.0
+        right[2] = 0.0
+    cov[:, :] = np.linalg.inv(matrix)
+    moved[:] = cov @ right
+
+
+@njit("f8(u1[:,::1], f8[:,::1], f8[:,::1], f8[::1], f8[::1], f8[::1], f8, f8, f8, i8, i8, b1, f8[:,::1], f8[:,::1])", cache=True)
+def settle(image, view, points, pose, heights, sigmas, reach, last_reach, least, stride, steps, is_round, cov, out):  # type: ignore[no-untyped-def]
+    """Gauss-Newton steps in place on `pose` (x, y from the place, yaw) and `heights`; the share of points met last.
+
+    The reach shrinks evenly from `reach` to `last_reach`. cov: inverse of the last normal equations.
+    """
+    size = 3 + heights.shape[0]
+    normal = np.empty((size, size + 1))
+    moved = np.empty(size)
+    prior = heights.copy()
+    hits = 0
+    for k in range(steps):
+        now = reach + (last_reach - reach) * k / max(steps - 1, 1)
+        hits = _step(image, view, points, pose, heights, prior, now, least, stride, 1.0, normal, out)
+        _solve(normal, prior, sigmas, heights, is_round, moved, sigmas, cov)
+        far = np.hypot(moved[0], moved[1])
+        if not far < 4.0 or not abs(moved[2]) < 0.5:
+            return -1.0
+        pose += moved[:3]
+        heights += moved[3:]
+    hits = _step(image, view, points, pose, heights, prior, last_reach, least, stride, 1.0, normal, out)
+    return hits / ((points.shape[0] + stride - 1) // stride)
+
+
+@njit("void(f8[:,::1], f8[:,::1], f8[::1], f8, f8[:,::1])", cache=True)
+def outline_pixels(view, outline, pose, height, out):  # type: ignore[no-untyped-def]
+    """Pixels (k, 2) of an outline at a pose and height."""
+    cosine, sine = np.cos(pose[2]), np.sin(pose[2])
+    for k in range(outline.shape[0]):
+        x, y = outline[k, 0], outline[k, 1]
+        u, v = project(view, pose[0] + cosine * x - sine * y, pose[1] + sine * x + cosine * y, height)
+        out[k, 0], out[k, 1] = u, v
+
+
+@dataclass(frozen=True)
+class Fit:
+    """A template laid on an image. pose (3,): x, y mm from the place, yaw rad.
+
+    outline_share, inner_share: of the points, how many met an edge (inner_share 1 without inner edges).
+    score: share of all.  worth: by which rivals are ranked.  polygon_px (k, 2): the outline in the image.
+    """
+
+    pose: FloatArray
+    heights: FloatArray
+    sigma_mm: float
+    sigma_rad: float
+    outline_share: float
+    inner_share: float
+    score: float
+    worth: float
+    polygon_px: FloatArray
+
+
+def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, start: tuple[float, float, float],
+             least: float, promising: float) -> Fit | None:  # fmt: skip
+    """The pose of a template from a start within some pixels; None where it runs away or soon does not look promising."""
+    pose, heights = np.array(start, dtype=np.float64), template.heights.copy()
+    size = 3 + len(heights)
+    cov, out = np.empty((size, size)), np.zeros((len(template.points), 4))
+    share = settle(image, view, template.points, pose, heights, template.sigmas, 9.0, 4.0, least, 4, 4, template.round, cov, out)
+    if share < promising:
+        return None
+    heights = template.heights.copy()
+    share = settle(image, view, template.points, pose, heights, template.sigmas, 3.0, 2.0, least, 1, 4, template.round, cov, out)
+    if share < 0.0 or np.hypot(pose[0] - start[0], pose[1] - start[1]) > 6.0:
+        return None
+    outline = template.points[:, 5] == 0.0
+    outline_share = float(np.mean(out[outline, 2]))
+    inner_share = float(np.mean(out[~outline, 2])) if not outline.all() else 1.0
+    score = float(np.mean(out[:, 2]))
+    scale = CORRELATED * PIXEL_SIGMA**2
+    polygon = np.empty_like(template.outline)
+    outline_pixels(view, template.outline, pose, 0.5 * (heights[0] + heights[1]), polygon)
+    return Fit(pose, heights, float(np.sqrt(scale * 0.5 * (cov[0, 0] + cov[1, 1]))), float(np.sqrt(scale * cov[2, 2])),
+               outline_share, inner_share, score, outline_share + 0.3 * score, polygon)  # fmt: skip

@@ -1,0 +1,185 @@
+"""What a part's symmetry tells: shadows left out of its outline, heights of its edges from one view, turns it shows.
+
+An edge taken for lower than it is lands displaced away from the camera. Turned by a part's own symmetry, the displaced
+edge misses its twin; the height at which it does not is the edge's.
+"""
+
+from typing import Protocol
+
+import cv2
+import numpy as np
+from numpy.typing import NDArray
+from scipy.spatial import cKDTree
+
+FloatArray = NDArray[np.float64]
+
+PLAN_MM = 0.15
+ROUND_TURNS = 24
+ALIKE_MM = 0.35
+MOST_TURNS = 12
+HEIGHT_STEPS = 25
+VOTED_HEIGHTS = 7
+
+
+class Frame(Protocol):
+    """Pixels to the grip frame and back."""
+
+    def from_pixels(self, pixels: FloatArray, height_mm: float) -> FloatArray: ...  # noqa: D102
+    def to_pixels(self, points_mm: FloatArray, height_mm: float) -> FloatArray: ...  # noqa: D102
+    def away(self) -> FloatArray: ...  # noqa: D102
+
+
+def turned(points: FloatArray, angle: float) -> FloatArray:
+    """Points (n, 2) turned about the origin."""
+    cosine, sine = np.cos(angle), np.sin(angle)
+    return np.asarray(points @ np.array([[cosine, sine], [-sine, cosine]]))
+
+
+def voted_plan(
+    lines: NDArray[np.uint8], corner: FloatArray, frame: Frame, top_mm: float, turns: int
+) -> tuple[FloatArray, float]:
+    """Polygon (k, 2) in the grip frame that the lines enclose where their turned copies agree; and its height.
+
+    A shadow's edge is in a minority among the copies, and a gap in one copy is closed by another. The height is the
+    one at which most lines agree. The polygon is empty where nothing is enclosed.
+    """
+    j, i = np.nonzero(lines)
+    if len(i) == 0:
+        return np.zeros((0, 2)), 0.0
+    reach = float(np.max(np.linalg.norm(frame.from_pixels(np.column_stack([i, j]) + corner, 0.0), axis=1))) + 1.0
+    side = np.linspace(-reach, reach, min(int(2.0 * reach / PLAN_MM) + 1, 1200))
+    step = side[1] - side[0]
+    x, y = np.meshgrid(side, side)
+    grid = np.column_stack([x.ravel(), y.ravel()])
+    thick = cv2.dilate(lines, np.ones((3, 3), np.uint8)).astype(np.float32) / 255.0
+    count = turns or ROUND_TURNS
+    need = {2: 1.5, 3: 1.5}.get(count, 0.4 * count)
+    best, plan, height = 0.0, np.zeros((0, 2)), 0.0
+    for h in np.linspace(0.0, top_mm, VOTED_HEIGHTS):
+        at = (frame.to_pixels(grid, h) - corner).reshape(*x.shape, 2).astype(np.float32)
+        one = cv2.remap(thick, at[..., 0], at[..., 1], cv2.INTER_LINEAR)
+        votes = np.zeros_like(one)
+        for k in range(count):
+            middle = (len(side) - 1) / 2.0
+            turn = cv2.getRotationMatrix2D((middle, middle), 360.0 * k / count, 1.0)
+            votes += cv2.warpAffine(one, turn, (len(side), len(side)))
+        agreed = (votes >= need).astype(np.uint8)
+        shape = _enclosing(agreed, step)
+        worth = float(np.minimum(votes, count)[_rim(shape, step)].sum()) if shape.any() else 0.0
+        if worth > best:
+            outlines, _ = cv2.findContours(shape, cv2.RETR_EXTERNAL, cv2.CHAIN_APPROX_NONE)
+            best, plan, height = worth, max(outlines, key=len)[:, 0] * step + side[0], float(h)
+    return np.asarray(plan), height
+
+
+def _enclosing(agreed: NDArray[np.uint8], step: float) -> NDArray[np.uint8]:
+    """The largest thing that agreed lines enclose, less the lines' own width."""
+    size = 2 * max(int(round(0.6 / step)), 1) + 1
+    disc = cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (size, size))
+    closed = cv2.morphologyEx(agreed, cv2.MORPH_CLOSE, disc)
+    outlines, _ = cv2.findContours(closed, cv2.RETR_EXTERNAL, cv2.CHAIN_APPROX_NONE)
+    shape = np.zeros_like(agreed)
+    cv2.drawContours(shape, outlines, -1, 1, cv2.FILLED)
+    shape = cv2.morphologyEx(shape, cv2.MORPH_OPEN, cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (size + 4, size + 4)))
+    count, label, stats, _ = cv2.connectedComponentsWithStats(shape)
+    if count < 2:
+        return np.zeros_like(agreed)
+    return np.asarray(label == 1 + int(np.argmax(stats[1:, cv2.CC_STAT_AREA])), dtype=np.uint8)
+
+
+def _rim(shape: NDArray[np.uint8], step: float) -> NDArray[np.bool_]:
+    size = 2 * max(int(round(0.3 / step)), 1) + 1
+    return np.asarray(cv2.morphologyEx(shape, cv2.MORPH_GRADIENT, np.ones((size, size), np.uint8)) > 0)
+
+
+def _misses(seen: FloatArray, turns: int) -> float:
+    """Robust mean distance of points from their turned copies, across the edge."""
+    tree = cKDTree(seen)
+    count = turns or ROUND_TURNS
+    missed = []
+    for k in range(1, count):
+        apart, at = tree.query(turned(seen, 2.0 * np.pi * k / count), k=2)
+        missed.append(_to_line(turned(seen, 2.0 * np.pi * k / count), seen[at[:, 0]], seen[at[:, 1]], apart[:, 0]))
+    every = np.concatenate(missed)
+    return float(np.mean(np.minimum(every, 1.5) ** 2))
+
+
+def _to_line(points: FloatArray, first: FloatArray, second: FloatArray, apart: FloatArray) -> FloatArray:
+    along = second - first
+    length = np.linalg.norm(along, axis=1)
+    away = points - first
+    across = np.abs(along[:, 0] * away[:, 1] - along[:, 1] * away[:, 0]) / np.maximum(length, 1e-9)
+    return np.where(length > 1e-9, np.minimum(across, apart), apart)
+
+
+def wall_height(pixels: FloatArray, frame: Frame, top_mm: float, turns: int) -> tuple[float, float]:
+    """Height of the outline's wall, and its sigma, at which the plan of the outline (pixels (n, 2)) repeats itself."""
+    foot = frame.from_pixels(pixels, 0.0)
+    along = np.roll(foot, -2, axis=0) - np.roll(foot, 2, axis=0)
+    normal = np.column_stack([along[:, 1], -along[:, 0]])
+    x, y = foot.T
+    if np.sum(x * np.roll(y, -1) - y * np.roll(x, -1)) < 0.0:
+        normal = -normal
+    facing = (normal @ frame.away() > 0.0)[:, None]
+    heights = np.linspace(0.0, top_mm, HEIGHT_STEPS)
+    cost = np.array([_misses(np.where(facing, frame.from_pixels(pixels, h), foot)[::2], turns) for h in heights])
+    return _least(heights, cost, frame, len(pixels) // 2, top_mm)
+
+
+def edge_height(line: FloatArray, every: FloatArray, frame: Frame, top_mm: float, turns: int) -> tuple[float, float]:
+    """Height, and its sigma, at which an inner line (rows u, v, ...) turned falls on lines of the same height."""
+    heights = np.linspace(0.0, 1.1 * top_mm, HEIGHT_STEPS)
+    count = turns or ROUND_TURNS
+    cost = np.empty(len(heights))
+    for k, h in enumerate(heights):
+        tree = cKDTree(frame.from_pixels(every[:, :2], h))
+        own = frame.from_pixels(line[:, :2], h)
+        missed = np.concatenate([tree.query(turned(own, 2.0 * np.pi * m / count))[0] for m in range(1, count)])
+        cost[k] = np.mean(np.minimum(missed, 1.0) ** 2)
+    return _least(heights, cost, frame, len(line), top_mm)
+
+
+def _least(heights: FloatArray, cost: FloatArray, frame: Frame, points: int, top_mm: float) -> tuple[float, float]:
+    """Height of least cost; its sigma from how steeply the cost rises, never below what a millimetre-class map allows."""
+    at = int(np.argmin(cost))
+    height = heights[at]
+    if 0 < at < len(heights) - 1:
+        before, here, after = cost[at - 1 : at + 2]
+        curve = before - 2.0 * here + after
+        height += 0.5 * (before - after) / curve * (heights[1] - heights[0]) if curve > 0.0 else 0.0
+    slope = float(np.linalg.norm(frame.away()))
+    sigma = min(0.05 / max(slope, 1e-6), 0.3 * top_mm)
+    return float(height), max(sigma, 0.03 * top_mm)
+
+
+def repeated(line: FloatArray, every: FloatArray, frame: Frame, height: float, turns: int) -> NDArray[np.bool_]:
+    """Which points of an inner line (n) have twins at most of the part's turns."""
+    count = turns or ROUND_TURNS
+    tree = cKDTree(frame.from_pixels(every[:, :2], height))
+    own = frame.from_pixels(line[:, :2], height)
+    met = np.mean([tree.query(turned(own, 2.0 * np.pi * m / count))[0] < ALIKE_MM for m in range(1, count)], axis=0)
+    return np.asarray(met >= 0.5)
+
+
+def alike_under_turn(first: FloatArray, second: FloatArray, mirrored: bool = False) -> bool:
+    """Whether one outline, turned suitably about its own centroid, covers the other to within 3 % of the radius."""
+    a, b = first - first.mean(axis=0), second - second.mean(axis=0)
+    tree = cKDTree(a)
+    radius = float(np.max(np.linalg.norm(a, axis=1)))
+    best = min(float(np.percentile(tree.query(turned(b, angle))[0], 90)) for angle in np.arange(0.0, 2 * np.pi, 0.02))
+    return best < max(0.03 * radius, 0.3 if mirrored else 0.2)
+
+
+def turns_seen(polygon: FloatArray) -> int:
+    """How many yaws the outline alone looks alike at: 0 for a circle, 1 for none but itself."""
+    centred = polygon - polygon.mean(axis=0)
+    radius = np.linalg.norm(centred, axis=1)
+    tree = cKDTree(centred)
+    limit = max(0.02 * float(radius.max()), 0.2)
+
+    def alike(count: int) -> bool:
+        return float(np.percentile(tree.query(turned(centred, 2 * np.pi / count))[0], 90)) < limit
+
+    if np.ptp(radius) < 2.0 * limit:
+        return 0
+    return max((count for count in range(1, MOST_TURNS + 1) if count == 1 or alike(count)), default=1)

@@ -1,0 +1,244 @@
+"""Teaching: from one image of a lone part, and the tool pose that grips it, to the part's outline and inner edges."""
+
+from dataclasses import dataclass
+
+import cv2
+import numpy as np
+from numpy.typing import NDArray
+
+from cameras.blobs import blobs_of
+from cameras.edges import MOST_SAMPLES, edge_along, edge_map
+from cameras.faults import InputFault
+from cameras.model import MOST_CONTOURS, Contour, Model
+from cameras.outline import rough_outline
+from cameras.symmetry import alike_under_turn, edge_height, repeated, turns_seen, wall_height
+from cameras.view import CameraMap
+
+FloatArray = NDArray[np.float64]
+Grey = NDArray[np.uint8]
+
+SPACING_MM = 0.8
+LEAST_INNER_MM = 4.0
+MARGIN_PX = 14
+UNKNOWN_WALL = 0.6  # of the height, where one view cannot tell it
+UNKNOWN_WALL_SIGMA = 0.3
+
+
+@dataclass(frozen=True)
+class Taught:
+    """What is said of a part when it is taught. pose (3,): x, y mm, yaw rad of the tool when the image was taken.
+
+    turns: how many yaws grip alike, 0 for all.
+    """
+
+    part: str
+    height_mm: float
+    turns: int
+    pose: tuple[float, float, float]
+
+
+class GripFrame:
+    """Pixels to the grip frame of the taught part, and back, at any height above the surface."""
+
+    def __init__(self, camera: CameraMap, surface_mm: float, pose: tuple[float, float, float]) -> None:
+        self.camera, self.surface_mm = camera, surface_mm
+        self.origin = np.array(pose[:2])
+        cosine, sine = np.cos(pose[2]), np.sin(pose[2])
+        self.turn = np.array([[cosine, -sine], [sine, cosine]])
+
+    def from_pixels(self, pixels: FloatArray, height_mm: float) -> FloatArray:
+        """Pixels (n, 2) to the grip frame (n, 2)."""
+        return (self.camera.to_cell(pixels, self.surface_mm + height_mm) - self.origin) @ self.turn
+
+    def to_pixels(self, points_mm: FloatArray, height_mm: float) -> FloatArray:
+        """Points of the grip frame (n, 2) to pixels (n, 2)."""
+        xy = points_mm @ self.turn.T + self.origin
+        return self.camera.to_pixel(np.column_stack([xy, np.full(len(xy), self.surface_mm + height_mm)]))
+
+    def away(self) -> FloatArray:
+        """How far (2,) a point moves in the grip frame, on the surface, for each millimetre that it is higher."""
+        origin = np.zeros((1, 2))
+        return (self.from_pixels(self.to_pixels(origin, 1.0), 0.0) - origin)[0]
+
+
+def teach(grey: Grey, camera: CameraMap, surface_mm: float, taught: Taught, file: str = "image") -> Model:
+    """The model of the part that lies at the tool pose. Raises InputFault where there is none, or the border cuts it."""
+    frame = GripFrame(camera, surface_mm, taught.pose)
+    window, corner, blob = _window(grey, frame, taught, file)
+    chain = rough_outline(window, blob, corner, frame, taught.height_mm, taught.turns)
+    if len(chain) < 8:
+        raise InputFault(file, "--tool", "no outline can be told from the belt", "take a sharper image, or change the light")
+    pixels, steps = snapped(grey, chain)
+    wall, sigma = UNKNOWN_WALL * taught.height_mm, UNKNOWN_WALL_SIGMA * taught.height_mm
+    if taught.turns != 1:
+        wall, sigma = wall_height(pixels, frame, taught.height_mm, taught.turns)
+    outline, polygon = _outline(pixels, steps, frame, wall, sigma)
+    inner = _inner(grey, polygon, frame, taught, wall)
+    mirrored = alike_under_turn(polygon, polygon * np.array([1.0, -1.0]), mirrored=True)
+    edge_mm = SPACING_MM * sum(len(one.steps) for one in inner)
+    told = not mirrored or edge_mm > 0.15 * SPACING_MM * len(outline.steps)
+    return Model(taught.part, taught.height_mm, taught.turns, turns_seen(polygon), told, mirrored, polygon, outline, inner)
+
+
+def _window(grey: Grey, frame: GripFrame, taught: Taught, file: str) -> tuple[Grey, FloatArray, NDArray[np.uint8]]:
+    found = blobs_of(edge_map(grey))
+    at = frame.to_pixels(np.zeros((1, 2)), 0.5 * taught.height_mm)[0] / 4.0
+    rows, columns = found.label.shape
+    if not (0 <= at[0] < columns and 0 <= at[1] < rows):
+        raise InputFault(file, "--tool", "the tool pose lies outside the image", "check pose, counts and touch counts")
+    j, i = np.nonzero(found.label)
+    apart = np.hypot(i - at[0], j - at[1]) if len(i) else np.array([np.inf])
+    best = int(np.argmin(apart))
+    if apart[best] > 6.0:
+        raise InputFault(file, "--tool", "nothing lies at the tool pose", "check pose, counts and touch counts")
+    patch = int(found.label[j[best], i[best]])
+    if found.cut[patch - 1]:
+        raise InputFault(file, "", "the border of the image cuts the part", "teach it wholly in view and alone")
+    x0, y0, x1, y1 = (int(value) for value in found.box[patch - 1])
+    left, top = max(4 * x0 - MARGIN_PX, 0), max(4 * y0 - MARGIN_PX, 0)
+    right, bottom = min(4 * x1 + 4 + MARGIN_PX, grey.shape[1]), min(4 * y1 + 4 + MARGIN_PX, grey.shape[0])
+    own = np.kron((found.label == patch).astype(np.uint8), np.ones((4, 4), np.uint8))
+    blob = np.zeros(grey.shape, np.uint8)
+    blob[: own.shape[0], : own.shape[1]] = own
+    return (np.ascontiguousarray(grey[top:bottom, left:right]), np.array([left, top], float),
+            np.ascontiguousarray(blob[top:bottom, left:right]))  # fmt: skip
+
+
+def even(polygon: FloatArray, spacing: float, smooth: float = 0.0) -> FloatArray:
+    """A closed polygon with its points evenly `spacing` apart, after Gaussian smoothing along it by `smooth`."""
+    closed = np.vstack([polygon, polygon[:1]])
+    at = np.concatenate([[0.0], np.cumsum(np.linalg.norm(np.diff(closed, axis=0), axis=1))])
+    fine = max(int(np.ceil(at[-1] / (spacing / 4 if smooth else spacing))), 8)
+    want = np.linspace(0.0, at[-1], fine, endpoint=False)
+    points = np.column_stack([np.interp(want, at, closed[:, k]) for k in range(2)])
+    if not smooth:
+        return points
+    step = at[-1] / fine
+    frequency = np.fft.fftfreq(fine, step)[:, None]
+    low = np.fft.ifft(np.fft.fft(points, axis=0) * np.exp(-2.0 * (np.pi * frequency * smooth) ** 2), axis=0).real
+    return np.asarray(low[::4])
+
+
+def outward(polygon: FloatArray) -> FloatArray:
+    """Unit normals (n, 2) of a closed polygon's points, away from its inside."""
+    along = np.roll(polygon, -1, axis=0) - np.roll(polygon, 1, axis=0)
+    normal = np.column_stack([along[:, 1], -along[:, 0]])
+    x, y = polygon.T
+    if np.sum(x * np.roll(y, -1) - y * np.roll(x, -1)) < 0.0:
+        normal = -normal
+    return np.asarray(normal / np.maximum(np.linalg.norm(normal, axis=1), 1e-12)[:, None])
+
+
+def snapped(grey: Grey, chain: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """A closed chain of pixels (n, 2) moved onto the image's edges along its normals; and the edges' grey steps."""
+    profile, found = np.empty(MOST_SAMPLES), np.empty(2)
+    points, steps = chain, np.zeros(len(chain))
+    for reach, smooth in ((4.0, 2.0), (2.5, 1.2), (1.5, 0.6)):
+        points = even(points, 1.0, smooth)
+        normals = outward(points)
+        moved = np.zeros((len(points), 2))
+        for k, ((u, v), (nu, nv)) in enumerate(zip(points, normals, strict=True)):
+            edge_along(grey, u, v, nu, nv, reach, 3.0, 0.0, profile, found)
+            moved[k] = found
+        seen = moved[:, 1] != 0.0
+        if seen.sum() < 8:
+            return points, moved[:, 1]
+        at = np.arange(len(points))
+        offset = np.interp(at, at[seen], moved[seen, 0], period=len(points))
+        wide = np.concatenate([offset[-2:], offset, offset[:2]])
+        offset = np.median(np.lib.stride_tricks.sliding_window_view(wide, 5), axis=1)
+        points, steps = points + offset[:, None] * normals, moved[:, 1]
+    return points, steps
+
+
+def _outline(
+    pixels: FloatArray, steps: FloatArray, frame: GripFrame, wall: float, sigma: float
+) -> tuple[Contour, FloatArray]:
+    """The outline's plan: seen points brought to the foot or the top of the wall, as they face the camera or not."""
+    foot, top = frame.from_pixels(pixels, 0.0), frame.from_pixels(pixels, wall)
+    facing = outward(foot) @ frame.away()
+    plan = np.where(facing[:, None] > 0.0, top, foot)
+    size = float(np.linalg.norm(np.diff(plan, axis=0), axis=1).sum())
+    polygon = even(plan, 0.4, 0.25)
+    if _area(polygon) < 0.0:
+        polygon = polygon[::-1]
+    points = even(polygon, SPACING_MM)
+    normals = outward(points)
+    nearest = np.argmin(np.linalg.norm(points[:, None] - plan[None], axis=2), axis=1)
+    spread = cv2.blur(np.ascontiguousarray(steps[nearest][:, None]), (1, 5)).ravel()
+    spread = spread if size > 0 else steps[nearest]
+    return Contour(points, normals, spread, wall, sigma), polygon
+
+
+def _area(polygon: FloatArray) -> float:
+    x, y = polygon.T
+    return 0.5 * float(np.sum(x * np.roll(y, -1) - y * np.roll(x, -1)))
+
+
+def _inner(grey: Grey, polygon: FloatArray, frame: GripFrame, taught: Taught, wall: float) -> tuple[Contour, ...]:
+    """The longest edges inside the outline, each at the height that fits the part's symmetry, or the top face's."""
+    top = taught.height_mm
+    shape = frame.to_pixels(polygon, 0.5 * top)
+    low, high = np.floor(shape.min(axis=0)).astype(int) - 4, np.ceil(shape.max(axis=0)).astype(int) + 5
+    low = np.maximum(low, 0)
+    window = np.ascontiguousarray(grey[low[1] : high[1], low[0] : high[0]])
+    inside = np.zeros(window.shape, np.uint8)
+    cv2.fillPoly(inside, [np.round(shape - low).astype(np.int32)], 1)
+    inside = cv2.erode(inside, np.ones((9, 9), np.uint8))
+    smooth = cv2.GaussianBlur(window, (0, 0), 1.0)
+    dx, dy = (cv2.Sobel(smooth, cv2.CV_16S, *order) for order in ((1, 0), (0, 1)))
+    size = np.hypot(dx.astype(np.float64), dy)[inside > 0]
+    if len(size) == 0:
+        return ()
+    strong = max(float(np.percentile(size, 85)), 60.0)
+    lines = cv2.Canny(dx, dy, 0.5 * strong, strong, L2gradient=True) & (inside * 255)
+    count, label = cv2.connectedComponents(lines, connectivity=8)
+    kept = []
+    for k in range(1, count):
+        j, i = np.nonzero(label == k)
+        if len(i) >= 6:
+            kept.append(_sharp(grey, np.column_stack([i, j]) + low, dx[j, i], dy[j, i]))
+    return _levelled([one for one in kept if len(one) >= 4], frame, taught, wall)
+
+
+def _sharp(grey: Grey, pixels: NDArray[np.int64], dx: NDArray[np.int16], dy: NDArray[np.int16]) -> FloatArray:
+    """Edge pixels at their sub-pixel places: rows u, v, nu, nv, step."""
+    profile, found = np.empty(MOST_SAMPLES), np.empty(2)
+    rows = []
+    for (u, v), gu, gv in zip(pixels.astype(float), dx.astype(float), dy.astype(float), strict=True):
+        length = np.hypot(gu, gv)
+        if length == 0.0:
+            continue
+        nu, nv = gu / length, gv / length
+        edge_along(grey, u, v, nu, nv, 1.5, 5.0, 0.0, profile, found)
+        if found[1] != 0.0:
+            rows.append((u + found[0] * nu, v + found[0] * nv, nu, nv, found[1]))
+    return np.array(rows).reshape(-1, 5)
+
+
+def _levelled(lines: list[FloatArray], frame: GripFrame, taught: Taught, wall: float) -> tuple[Contour, ...]:
+    """Inner lines in the grip frame at their heights, thinned; for symmetric parts only what repeats."""
+    top = taught.height_mm
+    every = np.concatenate(lines) if lines else np.zeros((0, 5))
+    found = []
+    for line in lines:
+        height, sigma = top, 0.3 * top
+        if taught.turns != 1:
+            height, sigma = edge_height(line, every, frame, top, taught.turns)
+            line = line[repeated(line, every, frame, height, taught.turns)]
+        found.append(_thinned(line, frame, height, sigma))
+    found = [one for one in found if len(one.steps) * SPACING_MM >= LEAST_INNER_MM]
+    found.sort(key=lambda one: -len(one.steps))
+    return tuple(found[:MOST_CONTOURS])
+
+
+def _thinned(line: FloatArray, frame: GripFrame, height: float, sigma: float) -> Contour:
+    points = frame.from_pixels(line[:, :2], height) if len(line) else np.zeros((0, 2))
+    ahead = frame.from_pixels(line[:, :2] + line[:, 2:4], height) if len(line) else points
+    kept: list[int] = []
+    for k in range(len(points)):
+        if not kept or np.min(np.linalg.norm(points[kept] - points[k], axis=1)) >= SPACING_MM:
+            kept.append(k)
+    normal = ahead[kept] - points[kept]
+    normal = normal / np.maximum(np.linalg.norm(normal, axis=1), 1e-12)[:, None]
+    return Contour(points[kept], normal, line[kept, 4], height, sigma)
