@@ -60,8 +60,8 @@ class Reacher:
         self.cell, self.arm = cell, Arm(cell.arm, cell.tool)
         margin = np.radians(np.full(4, cell.motion.limit_margin_deg))
         margin[2] = cell.motion.limit_margin_mm
-        self._lower, self._upper = self.arm.limits.lower + margin, self.arm.limits.upper - margin
-        self._keepouts = Keepouts(cell.keepouts, self.arm, Shapes.of(cell.tool.footprint_mm))
+        self.lower, self.upper = self.arm.limits.lower + margin, self.arm.limits.upper - margin
+        self.keepouts = Keepouts(cell.keepouts, self.arm, Shapes.of(cell.tool.footprint_mm))
         heading = np.radians(cell.belt.heading_deg) if cell.belt else 0.0
         self.along = np.array([np.cos(heading), np.sin(heading)])
         self.across = np.array([-np.sin(heading), np.cos(heading)])
@@ -70,12 +70,12 @@ class Reacher:
         """Both elbows' postures at tips (n, 4), x, y, z mm, yaw rad."""
         poses = np.asarray(tips, np.float64)
         joints = self.arm.with_j4_turn(self.arm.inverse(poses)[:, :, None], J4_TURNS)  # (n, 2, turns, 4)
-        spare = np.minimum(joints - self._lower, self._upper - joints)
+        spare = np.minimum(joints - self.lower, self.upper - joints)
         bend = np.abs(joints[..., 1])
         singular = np.minimum(bend, np.pi - bend) - np.radians(self.cell.motion.singularity_deg)
         rise = np.maximum(self.cell.motion.travel_mm - poses[:, 2], 0.0)[:, None, None]
         lifted = joints[..., 2] + self.arm.sense[2] * rise
-        spare[..., 2] = np.minimum(spare[..., 2], np.minimum(lifted - self._lower[2], self._upper[2] - lifted))
+        spare[..., 2] = np.minimum(spare[..., 2], np.minimum(lifted - self.lower[2], self.upper[2] - lifted))
         turning = spare[..., TURNING].min(axis=-1)
         best = np.argmax(np.nan_to_num(np.where(spare[..., 2] >= 0, turning, turning - 100.0), nan=-np.inf), axis=2)
         chosen = np.take_along_axis(joints, best[..., None, None], axis=2)[:, :, 0]
@@ -83,7 +83,7 @@ class Reacher:
         nearest = np.array(TURNING)[np.argmin(spare[..., TURNING], axis=-1)]
         least = spare[..., TURNING].min(axis=-1)
         fits = (least >= 0) & (spare[..., 2] >= 0) & (singular[:, :, 0] >= 0)
-        fits[fits] = self._keepouts.clearance(chosen[fits]) >= 0
+        fits[fits] = self.keepouts.clearance(chosen[fits]) >= 0
         return Postures(fits, least, spare[..., 2], nearest, self._follow(chosen))
 
     def _follow(self, joints: Floats) -> Floats:
