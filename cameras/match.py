@@ -51,7 +51,7 @@ def template_of(model: Model, down: bool) -> Template:
     else:
         heights = [0.0, wall] + [one.height_mm for one in model.inner]
         sigmas = [0.05 * top, wall_sigma] + [one.height_sigma_mm for one in model.inner]
-    outline = model.outline_mm[::-1] * np.array([1.0, -1.0]) if down else model.outline_mm
+    outline = model.outline_mm[::-1] * np.array([1.0, -1.0]) if down else model.outline_mm.copy()
     return Template(np.ascontiguousarray(points), np.array(heights), np.maximum(np.array(sigmas), 0.02),
                     np.ascontiguousarray(outline), model.turns == 0)  # fmt: skip
 
