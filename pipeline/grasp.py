@@ -7,6 +7,7 @@ keep-outs. A part that has none gets the reason, and by how much the nearest one
 
 from collections.abc import Iterable
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -48,6 +49,11 @@ class Holds:
     joints: FloatArray
     usable: NDArray[np.bool_]
     along_mm: FloatArray
+
+    @cached_property
+    def elbow(self) -> NDArray[np.int64]:
+        """(h,) elbow of each."""
+        return np.array([hold.elbow for hold in self.holds], np.int64)
 
     def tips(self) -> FloatArray:
         """(h, 3): x, y at counts 0 and yaw of each."""

@@ -59,6 +59,17 @@ class Cycle:
     height: Curve
 
 
+@dataclass(frozen=True)
+class Transfer:
+    """A way from rest to rest without a part: curves of J1, J2, J4 and of the tip's height."""
+
+    depart_s: float
+    end_s: float
+    across: tuple[Curve, ...]
+    height: Curve
+    end_joints: FloatArray
+
+
 class Mover:
     """Motion of one arm in one cell, along one belt."""
 
@@ -129,6 +140,18 @@ class Mover:
                      tuple(curve.later(across_s) for curve in meeting.move.curves),
                      tuple(curve.later(left) for curve in leaving.move.curves), height)
 
+    def home(self, cycle: Cycle) -> Transfer:
+        """From the end of a cycle to the arm's home, at home's height or, where that is below it, the clear height."""
+        start, end = cycle.end_joints, np.array(self.arm.home)
+        height = max(float(self.arm.forward(end)[2]), self.motion.clear_height_mm)
+        end[2] = quill(self.arm, height, end[3])
+        lift = self.lift_from(start, height)
+        move = self.across.between(at_rest(start), at_rest(end))
+        depart = cycle.release_end_s
+        across_s, up = depart + lift.rise_s(move.duration), lift.curve(move.duration).later(depart)
+        return Transfer(depart, max(across_s + move.duration, up.end_s),
+                        tuple(curve.later(across_s) for curve in move.curves), up, end)
+
     def passes(self, hold: Hold, along_mm: float) -> float:
         """When a part passes a distance along the heading; inf where the belt never gets there."""
         target = along_mm - float(hold.at_mm @ self.belt.heading)
@@ -189,6 +212,15 @@ class Mover:
         if with_part.any():
             q[with_part] = self.joints_on(cycle.hold, t[with_part])
         q[:, 2] = quill(self.arm, cycle.height.at(t), q[:, 3])
+        return q
+
+
+    def transfer_joints(self, transfer: Transfer, t: FloatArray) -> FloatArray:
+        """Joints (n, 4) at times t (n,) of a transfer."""
+        q = np.empty((len(t), 4))
+        for k, joint in enumerate(TURNING):
+            q[:, joint] = transfer.across[k].at(t)
+        q[:, 2] = quill(self.arm, transfer.height.at(t), q[:, 3])
         return q
 
 

@@ -1,0 +1,110 @@
+"""Whether a planned cycle may be carried out: limits, singularities, keep-outs and window along the whole of it."""
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pipeline.grasp import Grasping, Refusal
+from pipeline.motion.across import TURNING
+from pipeline.motion.cycle import Cycle, Mover
+
+FloatArray = NDArray[np.float64]
+FOLLOWED = 12  # times looked at while the tool is with the part
+STEP_S = 0.008  # between postures held against keep-outs
+WINDOW_MM = 1e-3
+ROUNDING = 1e-9
+
+
+@dataclass(frozen=True)
+class Permit:
+    """Checks cycles of one arm in one cell."""
+
+    mover: Mover
+    grasping: Grasping
+
+    def refused(self, cycle: Cycle, until_s: float = np.inf) -> Refusal | None:
+        """Why a cycle may not be carried out, or None. until_s: when the part is taken away."""
+        return (self._window(cycle, until_s) or self._followed(cycle) or self._across(cycle) or self._height(cycle)
+                or self._keepouts(cycle))
+
+    def _window(self, cycle: Cycle, until_s: float) -> Refusal | None:
+        if cycle.grasp_end_s > until_s:
+            return Refusal("too_late", f"gone {cycle.grasp_end_s - until_s:.2f} s before it could be lifted")
+        if self.mover.window_mm is None:
+            return None
+        along = self.mover.belt.travel_mm(np.array([cycle.grasp_start_s, cycle.grasp_end_s]))
+        along = along + cycle.hold.at_mm @ self.mover.belt.heading
+        first, last = self.mover.window_mm
+        if along.min() < first - WINDOW_MM:
+            return Refusal("too_late", f"would be gripped {first - along.min():.1f} mm before the window")
+        if along.max() > last + WINDOW_MM:
+            return Refusal("too_late", f"would be gripped {along.max() - last:.1f} mm after the window's end")
+        return None
+
+    def _followed(self, cycle: Cycle) -> Refusal | None:
+        t = np.linspace(cycle.met_s, cycle.left_s, FOLLOWED)
+        joints = self.mover.joints_on(cycle.hold, t)
+        if not np.isfinite(joints).all():
+            return Refusal("out_of_reach", "leaves the reach of the arm while it is followed")
+        joints[:, 2] = self.mover.joints(cycle, t)[:, 2]
+        bend, singular = np.abs(joints[:, 1]), self.grasping.singular
+        if (bend < singular).any() or (bend > np.pi - singular).any():
+            return Refusal("joint_limit", "comes too near the stretched or folded arm while it is followed")
+        over = _over(joints.min(axis=0), joints.max(axis=0), self.grasping.lower, self.grasping.upper)
+        if over is not None:
+            return over
+        belt, limits = self.mover.belt, self.mover.arm.limits
+        speed, accel = self.mover.arm.follow(joints, belt.speed_mm_s(t)[:, None] * belt.heading,
+                                             belt.accel_mm_s2(t)[:, None] * belt.heading)
+        fast = (np.abs(speed) / limits.speed).max(), (np.abs(accel) / limits.accel).max()
+        if max(fast) > 1:
+            return Refusal("joint_limit", f"following the belt would ask {100 * max(fast):.0f} % of a joint's limits")
+        return None
+
+    def _across(self, cycle: Cycle) -> Refusal | None:
+        """The ways across stay inside the limits less margins; a start nearer to a limit is allowed for."""
+        for curves, start in ((cycle.out, cycle.start_joints), (cycle.back, None)):
+            extremes = np.array([curve.extremes()[:2] for curve in curves])
+            lower, upper = self.grasping.lower[TURNING], self.grasping.upper[TURNING]
+            if start is not None:
+                lower, upper = np.minimum(lower, start[TURNING]), np.maximum(upper, start[TURNING])
+            low, high = (np.insert(x, 2, 0.0) for x in (extremes[:, 0], extremes[:, 1]))
+            over = _over(low, high, np.insert(lower, 2, -1.0), np.insert(upper, 2, 1.0))
+            if over is not None:
+                return over
+        return None
+
+    def _height(self, cycle: Cycle) -> Refusal | None:
+        t = np.unique(np.concatenate([cycle.height.start_s, np.linspace(cycle.depart_s, cycle.release_end_s, 48)]))
+        j3 = self.mover.joints(cycle, t)[:, 2]
+        lower = min(float(self.grasping.lower[2]), float(cycle.start_joints[2]))
+        upper = max(float(self.grasping.upper[2]), float(cycle.start_joints[2]))
+        if j3.min() >= lower - 1e-6 and j3.max() <= upper + 1e-6:
+            return None
+        wrong, limit = (j3.min(), lower) if j3.min() < lower - 1e-6 else (j3.max(), upper)
+        return Refusal("joint_limit", f"J3 would need {wrong:.1f} mm, limit less margin {limit:.1f}")
+
+    def _keepouts(self, cycle: Cycle) -> Refusal | None:
+        if not self.grasping.cell.keepouts:
+            return None
+        count = int((cycle.release_end_s - cycle.depart_s) / STEP_S) + 2
+        t = np.linspace(cycle.depart_s, cycle.release_end_s, count)
+        near = self.grasping.keepouts.near(self.mover.joints(cycle, t))
+        worst = int(near.gap_mm.argmin())
+        if near.gap_mm[worst] >= 0:
+            return None
+        name = self.grasping.keepouts.names[near.keepout[worst]]
+        return Refusal("keepout", f"would enter {name or 'a keep-out'} by {-near.gap_mm[worst]:.1f} mm on the way")
+
+
+def _over(low: FloatArray, high: FloatArray, lower: FloatArray, upper: FloatArray) -> Refusal | None:
+    """The worst of the joints that would leave their limits."""
+    over = np.maximum(lower - low, high - upper)
+    if (over <= ROUNDING).all():
+        return None
+    over[2] *= np.pi / 180  # a millimetre weighs as a degree
+    j = int(over.argmax())
+    wrong, limit = (high[j], upper[j]) if high[j] > upper[j] + ROUNDING else (low[j], lower[j])
+    scale, unit = (1.0, "mm") if j == 2 else (180 / np.pi, "deg")
+    return Refusal("joint_limit", f"J{j + 1} would need {wrong * scale:.1f} {unit}, limit less margin {limit * scale:.1f}")

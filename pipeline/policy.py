@@ -1,0 +1,125 @@
+"""Policies: which grasp comes next, from what is known now.
+
+`arrival` takes the part farthest downstream, `nearest` the one gripped soonest, `lookahead` the first of the best
+sequence over the horizon. A policy of one's own is any object with `choose(choice) -> Picked | None`; it is given the
+same `Choice` and no more.
+"""
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pipeline.legs import LegTimes, Nodes
+
+FloatArray = NDArray[np.float64]
+MOST_LOOKED_AT = 14  # parts: the exact look-ahead doubles its work with each
+
+
+@dataclass(frozen=True)
+class Choice:
+    """What a policy may choose from: g grasps of n parts, at time now_s.
+
+    nodes: the grasps. weights (n,): worth of each part. along_mm (n,): how far along the heading each is. blocked_by
+    (n,): bit p set where part p must go first; such a part's grasps can't be next. legs(later): leg times, from here
+    and now, or from every grasp at any time. travel() (g+1, g): joint travel from row to column, in s at full speed.
+    """
+
+    now_s: float
+    nodes: Nodes
+    weights: FloatArray
+    along_mm: FloatArray
+    blocked_by: NDArray[np.int64]
+    legs: Callable[[bool], LegTimes]
+    travel: Callable[[], FloatArray]
+
+    def next_ones(self) -> tuple[FloatArray, FloatArray]:
+        """Contact and finish (g,) of each grasp taken next; inf where it can't be."""
+        times = self.legs(False)
+        free = self.blocked_by[self.nodes.part] == 0
+        return np.where(free, times.contact[0, :, 0], np.inf), np.where(free, times.finish[0, :, 0], np.inf)
+
+
+@dataclass(frozen=True)
+class Picked:
+    """The grasp chosen, and how good the choice is.
+
+    nodes: the whole sequence in view, the chosen one first. weight, finish_s: what it picks, when it ends. weight_bound:
+    no sequence over the same parts picks more. second_weight, second_finish_s: of the best that starts with another part.
+    """
+
+    node: int
+    nodes: tuple[int, ...] = ()
+    weight: float = 0.0
+    finish_s: float = np.inf
+    weight_bound: float = np.inf
+
+
+class Policy(Protocol):
+    """A rule that chooses the next grasp."""
+
+    def choose(self, choice: Choice) -> Picked | None:
+        """The next grasp, or None to wait for more to be known."""
+
+
+class Arrival:
+    """The part farthest downstream, by the grasp that is done soonest."""
+
+    def choose(self, choice: Choice) -> Picked | None:
+        """See Policy."""
+        _, finish = choice.next_ones()
+        able = np.flatnonzero(np.isfinite(finish))
+        if not len(able):
+            return None
+        along = choice.along_mm[choice.nodes.part[able]]
+        return _one(choice, int(able[np.lexsort((finish[able], -along))[0]]), finish)
+
+
+class Nearest:
+    """The grasp that is made soonest."""
+
+    def choose(self, choice: Choice) -> Picked | None:
+        """See Policy."""
+        contact, finish = choice.next_ones()
+        if not np.isfinite(contact).any():
+            return None
+        return _one(choice, int(np.lexsort((finish, contact))[0]), finish)
+
+
+def _one(choice: Choice, node: int, finish: FloatArray) -> Picked:
+    return Picked(node, (node,), float(choice.weights[choice.nodes.part[node]]), float(finish[node]))
+
+
+class Lookahead:
+    """The first grasp of the sequence that picks most weight and then ends first (or, for `travel`, moves least)."""
+
+    def __init__(self, objective: str = "picks") -> None:
+        self.by_travel = objective == "travel"
+
+    def choose(self, choice: Choice) -> Picked | None:
+        """See Policy."""
+        from pipeline.order.lookahead import best_pick_sequence
+
+        times = choice.legs(True)
+        rows = np.concatenate([[0], times.start_of])
+        best = best_pick_sequence(
+            times.finish[rows], choice.nodes.part, choice.weights, choice.blocked_by, choice.now_s,
+            float(times.start_s[0]), float(times.start_s[1] - times.start_s[0]),
+            travel=choice.travel() if self.by_travel else None,
+        )  # fmt: skip
+        if not best.nodes:
+            return None
+        return Picked(best.nodes[0], best.nodes, best.weight, best.finish, best.weight_bound)
+
+
+POLICIES = ("arrival", "nearest", "lookahead")
+
+
+def policy_named(name: str, objective: str = "picks") -> Policy:
+    """The policy of this name; raises KeyError for a name there is none of."""
+    made: dict[str, Callable[[], Policy]] = {
+        "arrival": Arrival, "nearest": Nearest, "lookahead": lambda: Lookahead(objective),
+    }  # fmt: skip
+    return made[name]()

@@ -1,0 +1,203 @@
+"""The replay: the clock, what is known when, what the arm does, what becomes of each part."""
+
+import time
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from cameras.recording import Recording
+from pipeline.arm import Arm
+from pipeline.belt import Belt
+from pipeline.cell import Cell
+from pipeline.follow import Part
+from pipeline.grasp import Grasping, Refusal
+from pipeline.legs import Legs
+from pipeline.motion.cycle import Cycle, Hold, Mover, Transfer
+from pipeline.motion.lift import MotionFault
+from pipeline.permit import Permit
+from pipeline.places import Filling, Place
+from pipeline.policy import Arrival, Picked, Policy
+from pipeline.scene import Candidate, SceneBuilder
+from pipeline.watch import Watch
+
+FloatArray = NDArray[np.float64]
+LEAST_SCORE = 0.5
+MOST_TRIES = 24  # grasps tried at one moment before the arm waits for news
+NEWS_S = 1e-6
+
+
+@dataclass(frozen=True)
+class Pick:
+    """One pick as it was carried out, and the choice that led to it."""
+
+    part: Part
+    decided_s: float
+    cycle: Cycle
+    place: str
+    slot: int
+    place_pose: FloatArray
+    picked: Picked
+    looked_at: int
+    decide_s: float
+
+
+@dataclass(frozen=True)
+class Run:
+    """A whole replay. fates: for each part the Refusal it was missed for, or None where it was picked."""
+
+    parts: tuple[Part, ...]
+    picks: tuple[Pick, ...]
+    fates: tuple[Refusal | None, ...]
+    order: str
+    mover: Mover
+    start_s: float
+    end_s: float
+    home: Transfer | None
+    decide_s: tuple[float, ...]
+    notes: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True)
+class Setting:
+    """All that stays the same while orders are tried: cell, recording, its parts, and what follows from them.
+
+    outlines: of each kind, (k, 2) mm in the grip frame or the radius of a disc.
+    """
+
+    cell: Cell
+    recording: Recording
+    parts: tuple[Part, ...]
+    outlines: Mapping[str, FloatArray | float]
+    least_score: float = LEAST_SCORE
+    belt: Belt = field(init=False)
+    mover: Mover = field(init=False)
+    grasping: Grasping = field(init=False)
+    legs: Legs = field(init=False)
+
+    def __post_init__(self) -> None:
+        """Work out what follows."""
+        arm = Arm(self.cell.arm, self.cell.tool)
+        belt = Belt(self.recording.times_s, self.recording.counts, self.cell.belt)
+        mover = Mover(self.cell, arm, belt)
+        grasping = Grasping(self.cell, arm, tuple(Place.of(place) for place in self.cell.places))
+        for name, value in (("belt", belt), ("mover", mover), ("grasping", grasping), ("legs", Legs(mover))):
+            object.__setattr__(self, name, value)
+
+
+def replay(setting: Setting, policy: Policy, name: str, horizon: int,
+           tick: Callable[[float], None] = lambda now: None) -> Run:
+    """Replay a recording under one policy. tick is told the time the replay has come to."""
+    return _Clock(setting, policy, name, horizon, tick).run()
+
+
+def replay_ahead(setting: Setting, policy: Policy, name: str, horizon: int,
+                 tick: Callable[[float], None] = lambda now: None) -> Run:
+    """Replay under a policy that looks ahead; where picking by arrival would have picked more, that is the run.
+
+    A note in the run says so.
+    """
+    ahead = replay(setting, policy, name, horizon, tick)
+    plain = replay(setting, Arrival(), name, horizon)
+    if _worth(setting, plain) <= _worth(setting, ahead) + 1e-9 and len(plain.picks) <= len(ahead.picks):
+        return ahead
+    note = f"{name} picked {len(ahead.picks)}, arrival {len(plain.picks)}: this run is by arrival"
+    return Run(plain.parts, plain.picks, plain.fates, name, plain.mover, plain.start_s, plain.end_s, plain.home,
+               plain.decide_s, (note,))
+
+
+def _worth(setting: Setting, run: Run) -> float:
+    return sum(setting.cell.parts[pick.part.kind].weight for pick in run.picks)
+
+
+class _Clock:
+    """The run of one replay."""
+
+    def __init__(self, setting: Setting, policy: Policy, name: str, horizon: int, tick: Callable[[float], None]) -> None:
+        self.set, self.policy, self.name, self.horizon, self.tick = setting, policy, name, horizon, tick
+        self.watch = Watch(setting.cell, setting.recording, setting.belt, setting.parts)
+        self.builder = SceneBuilder(setting.cell, self.watch, setting.grasping, setting.legs, setting.outlines,
+                                    setting.least_score)
+        self.permit = Permit(setting.mover, setting.grasping)
+        self.filling = Filling(tuple(setting.grasping.places.values()))
+        self.joints = np.array(setting.mover.arm.home)
+        self.picks: list[Pick] = []
+        self.tried: dict[int, Refusal] = {}
+        self.decide_s: list[float] = []
+
+    def run(self) -> Run:
+        """From the first frame until nothing is left to pick."""
+        now = float(self.watch.known_s[0])
+        start = float(self.set.recording.times_s[0])
+        while np.isfinite(now):
+            self.tick(now)
+            pick = self._decide(now)
+            news = self.watch.next_news(now)
+            if pick is None:
+                now = self.watch.next_frame(now)
+            elif pick.cycle.depart_s > news + NEWS_S:  # nothing is under way yet: decide anew with what comes
+                now = news
+            else:
+                now = self._carry_out(pick)
+        last = max(float(self.set.recording.times_s[-1]), self.picks[-1].cycle.release_end_s if self.picks else 0.0)
+        home = self.set.mover.home(self.picks[-1].cycle) if self.picks else None
+        return Run(self.set.parts, tuple(self.picks), self._fates(), self.name, self.set.mover, start, last, home,
+                   tuple(self.decide_s))
+
+    def _decide(self, now: float) -> Pick | None:
+        """The next pick as it would be carried out."""
+        banned: set[tuple[int, int]] = set()
+        begun = time.perf_counter()
+        for _ in range(MOST_TRIES):
+            scene = self.builder.scene(now, self.joints, self.filling, self.horizon, banned)
+            picked = self.policy.choose(scene.choice) if scene else None
+            if scene is None or picked is None:
+                break
+            one, hold, drop_joints, drop_pose = scene.grasp(picked.node)
+            spent = time.perf_counter() - begun
+            cycle = self._cycle(now, one, hold, drop_joints)
+            if isinstance(cycle, Cycle):
+                self.decide_s.append(spent)
+                return Pick(one.part, now, cycle, one.place, one.slot, drop_pose, picked, len(scene.candidates), spent)
+            self.tried[one.row] = cycle
+            banned.add((one.row, int(scene.node_of[picked.node][1])))
+        return None
+
+    def _cycle(self, now: float, one: Candidate, hold: Hold, drop_joints: FloatArray) -> Cycle | Refusal:
+        """The cycle of a grasp, or why it can't be carried out."""
+        try:
+            cycle = self.set.mover.pick(self.joints, now, hold, drop_joints)
+        except MotionFault as fault:
+            return Refusal("joint_limit", str(fault))
+        if cycle is None:
+            return Refusal("too_late", "the arm can't meet it inside the window")
+        return self.permit.refused(cycle, float(self.watch.until_s[one.row])) or cycle
+
+    def _carry_out(self, pick: Pick) -> float:
+        """Let the pick happen; the time the arm is free again."""
+        self.picks.append(pick)
+        self.filling.fill(pick.place)
+        self.watch.gripped[pick.part.number - 1] = True
+        self.joints = pick.cycle.end_joints
+        return pick.cycle.release_end_s
+
+    def _fates(self) -> tuple[Refusal | None, ...]:
+        picked = {pick.part.number for pick in self.picks}
+        return tuple(None if part.number in picked else self._missed(k) for k, part in enumerate(self.set.parts))
+
+    def _missed(self, k: int) -> Refusal:
+        part = self.set.parts[k]
+        if not part.kind:
+            return Refusal("unknown", "not one of the taught parts")
+        if part.side == "down":
+            return Refusal("wrong_side", "lies on its wrong side")
+        if part.score < self.set.least_score:
+            return Refusal("low_score", f"score {part.score:.2f}, asked for {self.set.least_score:.2f}")
+        refusal = self.builder.refusals.get(k) or self.builder.crowded.get(k)
+        if refusal is not None:
+            return refusal
+        tried = self.tried.get(k)
+        if tried is not None and tried.reason == "keepout":
+            return tried
+        return Refusal("too_late", tried.detail if tried else "left the window while the arm was busy with others")
