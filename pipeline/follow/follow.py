@@ -1,5 +1,6 @@
 """Sightings of a whole recording to its parts."""
 
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from itertools import pairwise
 
@@ -12,6 +13,7 @@ from pipeline.cell import Cell
 from pipeline.follow.associate import associate
 from pipeline.follow.drift import Drift, fit_drift
 from pipeline.follow.estimate import Estimates, estimate, merged_sigma
+from pipeline.follow.overlap import mere_views
 from pipeline.follow.part import Known, Part
 
 FloatArray = NDArray[np.float64]
@@ -25,13 +27,24 @@ class Followed:
     """What a recording holds: its parts, in order of number, and how their sightings drift.
 
     drift: None for a tray, or where too few parts were seen in several places.
-    part_of (n,): index in `parts` of what each sighting was of; -1 where it was listed twice in its frame, or was an
-    unrecognised view of something else.
+    part_of (n,): index in `parts` of what each sighting was of; -1 where it was listed twice in its frame, or was a
+    mistaken view of another part.
     """
 
     parts: tuple[Part, ...]
     drift: Drift | None
     part_of: IntArray
+
+
+@dataclass(frozen=True)
+class _Seen:
+    """Sightings with their places at counts 0 (n, 2), kinds and sides (n,) as codes, 0 not known, outlines' areas."""
+
+    sightings: Sightings
+    at_mm: FloatArray
+    kind: IntArray
+    side: IntArray
+    area: FloatArray
 
 
 @dataclass(frozen=True)
@@ -46,30 +59,34 @@ class _Sorted:
         return np.repeat(np.arange(len(self.start) - 1), np.diff(self.start))
 
 
-def follow(sightings: Sightings, recording: Recording, cell: Cell) -> Followed:
+def follow(
+    sightings: Sightings, recording: Recording, cell: Cell, outlines_mm: Mapping[str, FloatArray] | None = None
+) -> Followed:
     """Parts of a recording from its sightings: one row each, however often seen.
 
     Parts on a belt are carried to counts 0 by the counts recorded with each frame; on a tray every frame is a fresh
     one. Parts are numbered from 1 by first sighting, then from furthest downstream. Same input, same numbers.
+    outlines_mm: of each kind, (k, 2) in its grip frame. Where given, a part that was mistaken for another kind or pose
+    in some of its frames is not listed twice.
     """
     names = ["", *sorted(cell.parts)]
-    kind, side = _codes(sightings.kind, names), _codes(sightings.side, list(SIDES))
     heading, travel_mm = _carried(recording, cell)
-    shift = travel_mm[sightings.row, None] * heading
-    at_mm = sightings.xy_mm - shift
-    thing = _associated(sightings, kind, at_mm, None if cell.belt is None else travel_mm[sightings.row])
-    thing = _without_unrecognised(thing, sightings, kind, at_mm)
-    thing = _numbered(thing, sightings.row, at_mm @ heading)
-    by_thing = _sorted(thing, sightings.row)
+    at_mm = sightings.xy_mm - travel_mm[sightings.row, None] * heading
+    areas = np.array([_area(polygon) for polygon in sightings.outline_mm])
+    seen = _Seen(sightings, at_mm, _codes(sightings.kind, names), _codes(sightings.side, SIDES), areas)
     turns = np.array([0, *(cell.parts[name].turns for name in names[1:])], dtype=np.int64)
-    o = by_thing.order
-    known = estimate(by_thing.start, kind[o], side[o], at_mm[o], sightings.yaw_rad[o], sightings.sigma_mm[o],
-                     sightings.sigma_rad[o], sightings.score[o], turns)
-    drift = _drift(by_thing, known, sightings, at_mm, recording, travel_mm, cell)
-    return Followed(_parts(by_thing, known, sightings, at_mm, turns, names), drift, thing)
+    thing = _numbered(_associated(seen, None if cell.belt is None else travel_mm[sightings.row]), seen, heading)
+    by_thing = _sorted(thing, sightings.row)
+    views = _mere_views(by_thing, seen, _estimated(by_thing, seen, turns), names, outlines_mm or {})
+    thing = _numbered(np.where((thing >= 0) & views[thing], -1, thing), seen, heading)
+    by_thing = _sorted(thing, sightings.row)
+    known = _estimated(by_thing, seen, turns)
+    drift = None if cell.belt is None else _drift(by_thing, known, seen, recording, travel_mm, heading,
+                                                  cell.belt.mm_per_count)
+    return Followed(_parts(by_thing, known, seen, turns, names), drift, thing)
 
 
-def _codes(values: NDArray[np.str_], names: list[str]) -> IntArray:
+def _codes(values: NDArray[np.str_], names: Sequence[str]) -> IntArray:
     """Index of each value in `names`; 0 for one that is not there."""
     codes = np.zeros(len(values), dtype=np.int64)
     for code, name in enumerate(names[1:], 1):
@@ -85,55 +102,43 @@ def _carried(recording: Recording, cell: Cell) -> tuple[FloatArray, FloatArray]:
     return np.array([np.cos(angle), np.sin(angle)]), recording.counts * cell.belt.mm_per_count
 
 
-def _associated(sightings: Sightings, kind: IntArray, at_mm: FloatArray, travel_mm: FloatArray | None) -> IntArray:
-    order = np.argsort(sightings.row, kind="stable")
+def _associated(seen: _Seen, travel_mm: FloatArray | None) -> IntArray:
+    sightings, order = seen.sightings, np.argsort(seen.sightings.row, kind="stable")
     thing = np.empty(len(sightings), dtype=np.int64)
-    thing[order] = associate(sightings.row[order], at_mm[order], kind[order], sightings.sigma_mm[order],
+    thing[order] = associate(sightings.row[order], seen.at_mm[order], seen.kind[order], sightings.sigma_mm[order],
                              sightings.score[order], None if travel_mm is None else travel_mm[order])
     return thing
 
 
-def _without_unrecognised(thing: IntArray, sightings: Sightings, kind: IntArray, at_mm: FloatArray) -> IntArray:
-    """Things without those never recognised in whose outline lies the place of one that was, in other frames.
-
-    Such a thing is a part seen before or after it was recognised, about another point than its grip.
-    """
-    recognised = np.unique(thing[(thing >= 0) & (kind > 0)])
-    other = np.setdiff1d(thing[thing >= 0], recognised)
-    if not len(other) or not len(recognised):
-        return thing
-    order = np.argsort(thing, kind="stable")
-    first = order[np.searchsorted(thing[order], recognised)]
-    gone = [one for one in other.tolist()
-            if _is_a_view(np.flatnonzero(thing == one), thing, recognised, first, sightings, at_mm)]
-    return np.where(np.isin(thing, gone), -1, thing)
+def _estimated(by_thing: _Sorted, seen: _Seen, turns: IntArray) -> Estimates:
+    o, sightings = by_thing.order, seen.sightings
+    return estimate(by_thing.start, seen.kind[o], seen.side[o], seen.at_mm[o], sightings.yaw_rad[o],
+                    sightings.sigma_mm[o], sightings.sigma_rad[o], sightings.score[o], turns)
 
 
-def _is_a_view(mine: IntArray, thing: IntArray, recognised: IntArray, first: IntArray, sightings: Sightings,
-               at_mm: FloatArray) -> bool:
-    rows = sightings.row[mine]
-    for i in mine:
-        inside = _inside(sightings.outline_mm[i], at_mm[first] - at_mm[i])
-        for known in recognised[inside]:
-            if not np.isin(sightings.row[thing == known], rows).any():
-                return True
-    return False
+def _mere_views(by_thing: _Sorted, seen: _Seen, known: Estimates, names: list[str],
+                outlines_mm: Mapping[str, FloatArray]) -> NDArray[np.bool_]:
+    """(things + 1,) whether each thing is another view of a stronger one; the last entry stands for no thing."""
+    outlines, rows = [], []
+    for a, b in pairwise(by_thing.start.tolist()):
+        mine, kind = by_thing.order[a:b], int(known.kind[b - 1])
+        own = outlines_mm.get(names[kind])
+        if own is None or not kind:
+            outlines.append(_outline(mine, kind, seen, known.xy_mm[b - 1]))
+        else:
+            cos, sin = np.cos(known.yaw_rad[b - 1]), np.sin(known.yaw_rad[b - 1])
+            mirror = -1.0 if SIDES[known.side[b - 1]] == "down" else 1.0
+            outlines.append(np.asarray(own) * [1.0, mirror] @ np.array([[cos, sin], [-sin, cos]]))
+        rows.append(seen.sightings.row[mine])
+    last = by_thing.start[1:] - 1
+    score = np.bincount(by_thing.thing, seen.sightings.score[by_thing.order], len(last))
+    recognised = np.where(known.kind[last] > 0, len(score) + score.sum(), 0.0)
+    return np.append(mere_views(known.xy_mm[last], outlines, rows, recognised + score), False)
 
 
-def _inside(polygon: FloatArray, points: FloatArray) -> NDArray[np.bool_]:
-    """Which points (n, 2) lie in a polygon (k, 2): an odd number of its edges is crossed on the way out along +x."""
-    if len(polygon) < 3:
-        return np.zeros(len(points), dtype=bool)
-    (x, y), (ax, ay), (bx, by) = points.T[:, :, None], polygon.T, np.roll(polygon, -1, axis=0).T
-    spans = (ay > y) != (by > y)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        crossing = ax + (y - ay) / (by - ay) * (bx - ax)
-    return np.asarray((spans & (x < crossing)).sum(axis=1) % 2 == 1)
-
-
-def _numbered(thing: IntArray, row: IntArray, along_mm: FloatArray) -> IntArray:
+def _numbered(thing: IntArray, seen: _Seen, heading: FloatArray) -> IntArray:
     """Things numbered 0, 1, ... by first row, then furthest along; -1 stays."""
-    order = np.lexsort((-along_mm, row))
+    order = np.lexsort((-seen.at_mm @ heading, seen.sightings.row))
     order = order[thing[order] >= 0]
     names, first = np.unique(thing[order], return_index=True)
     number = np.full(int(thing.max(initial=-1)) + 2, -1, dtype=np.int64)
@@ -148,66 +153,57 @@ def _sorted(thing: IntArray, row: IntArray) -> _Sorted:
     return _Sorted(order, np.append(edges, len(order)).astype(np.int64))
 
 
-def _drift(by_thing: _Sorted, known: Estimates, sightings: Sightings, at_mm: FloatArray, recording: Recording,
-           travel_mm: FloatArray, cell: Cell) -> Drift | None:
-    if cell.belt is None or len(recording) < 2:
+def _drift(by_thing: _Sorted, known: Estimates, seen: _Seen, recording: Recording, travel_mm: FloatArray,
+           heading: FloatArray, mm_per_count: float) -> Drift | None:
+    kind_of = known.kind[by_thing.start[1:] - 1]
+    same = (kind_of[by_thing.thing] > 0) & (seen.kind[by_thing.order] == kind_of[by_thing.thing])
+    order, thing = by_thing.order[same], by_thing.thing[same]
+    if not len(order) or len(recording) < 2:
         return None
-    last = by_thing.start[1:] - 1
-    of_kind = known.kind[last][by_thing.thing]
-    order = by_thing.order
-    same = (of_kind > 0) & (sightings.kind[order] == np.array(["", *sorted(cell.parts)])[of_kind])
-    order, thing = order[same], by_thing.thing[same]
-    if not len(order):
-        return None
-    row = sightings.row[order]
+    row = seen.sightings.row[order]
     camera = np.unique(recording.cameras, return_inverse=True)[1][row]
     group = np.unique(thing * (len(recording) + 1) + camera, return_inverse=True)[1]
     speed = np.gradient(travel_mm, recording.times_s)
-    heading = _carried(recording, cell)[0]
-    return fit_drift(group, thing, at_mm[order], sightings.sigma_mm[order], travel_mm[row], speed[row], heading,
-                     cell.belt.mm_per_count)
+    return fit_drift(group, thing, seen.at_mm[order], seen.sightings.sigma_mm[order], travel_mm[row], speed[row],
+                     heading, mm_per_count)
 
 
-def _parts(by_thing: _Sorted, known: Estimates, sightings: Sightings, at_mm: FloatArray, turns: IntArray,
-           names: list[str]) -> tuple[Part, ...]:
-    order, start, thing = by_thing.order, by_thing.start, by_thing.thing
+def _parts(by_thing: _Sorted, known: Estimates, seen: _Seen, turns: IntArray, names: list[str]) -> tuple[Part, ...]:
+    order, start, sightings = by_thing.order, by_thing.start, seen.sightings
     if not len(order):
         return ()
     last = start[1:] - 1
-    off_mm = at_mm[order] - known.xy_mm[last][thing]
-    turn = turns[known.kind[last]][thing]
-    off_rad = _wrapped((sightings.yaw_rad[order] - known.yaw_rad[last][thing]) * turn) / np.maximum(turn, 1)
-    sigma_mm = merged_sigma(start, off_mm, sightings.sigma_mm[order], known.used)
+    of_sighting = last[by_thing.thing]
+    turn = turns[known.kind[of_sighting]]
+    off_rad = _wrapped((sightings.yaw_rad[order] - known.yaw_rad[of_sighting]) * turn) / np.maximum(turn, 1)
+    sigma_mm = merged_sigma(start, seen.at_mm[order] - known.xy_mm[of_sighting], sightings.sigma_mm[order], known.used)
     sigma_rad = merged_sigma(start, off_rad[:, None], sightings.sigma_rad[order], known.used_yaw)
-    row, kind, side = sightings.row[order], np.array(names)[known.kind], np.array(SIDES)[known.side]
-    yaw_rad = _wrapped(known.yaw_rad)
-    parts = []
-    for k, (a, b) in enumerate(pairwise(start.tolist())):
-        seen = slice(a, b)
-        outline = _outline(order[seen], known.kind[b - 1], sightings, names, at_mm, known.xy_mm[b - 1])
-        parts.append(Part(
+    kind, side, yaw_rad = np.array(names)[known.kind], np.array(SIDES)[known.side], _wrapped(known.yaw_rad)
+    everything = Known(sightings.row[order], known.xy_mm, yaw_rad, kind, side, known.score)
+    return tuple(
+        Part(
             number=k + 1, kind=str(kind[b - 1]), side=str(side[b - 1]), xy_mm=known.xy_mm[b - 1],
-            yaw_rad=float(yaw_rad[b - 1]), score=float(known.score[b - 1]), first_row=int(row[a]),
-            last_row=int(row[b - 1]), frames_seen=int(b - a), sigma_mm=float(sigma_mm[k]),
-            sigma_rad=float(sigma_rad[k]), outline_mm=outline,
-            known=Known(row[seen], known.xy_mm[seen], yaw_rad[seen], kind[seen], side[seen], known.score[seen]),
-        ))  # fmt: skip
-    return tuple(parts)
+            yaw_rad=float(yaw_rad[b - 1]), score=float(known.score[b - 1]), frames_seen=b - a,
+            first_row=int(everything.row[a]), last_row=int(everything.row[b - 1]), sigma_mm=float(sigma_mm[k]),
+            sigma_rad=float(sigma_rad[k]), known=everything.part(a, b),
+            outline_mm=_outline(order[a:b], int(known.kind[b - 1]), seen, known.xy_mm[b - 1]),
+        )
+        for k, (a, b) in enumerate(pairwise(start.tolist()))
+    )  # fmt: skip
 
 
-def _outline(mine: IntArray, kind: int, sightings: Sightings, names: list[str], at_mm: FloatArray,
-             xy_mm: FloatArray) -> FloatArray:
-    """The largest outline seen of a thing, about its place."""
-    best, most = np.zeros((0, 2)), 0.0
-    for i in mine:
-        polygon = sightings.outline_mm[i]
-        if len(polygon) < 3 or sightings.kind[i] != names[kind]:
-            continue
-        x, y = polygon.T
-        area = abs(float(x @ np.roll(y, -1) - y @ np.roll(x, -1)))
-        if area > most:
-            best, most = polygon + at_mm[i] - xy_mm, area
-    return best
+def _outline(mine: IntArray, kind: int, seen: _Seen, xy_mm: FloatArray) -> FloatArray:
+    """The largest outline seen of a thing, about its place; (0, 2) where its sightings have none."""
+    area = np.where(seen.kind[mine] == kind, seen.area[mine], 0.0)
+    best = mine[np.argmax(area)]
+    return seen.sightings.outline_mm[best] + seen.at_mm[best] - xy_mm if area.any() else np.zeros((0, 2))
+
+
+def _area(polygon: FloatArray) -> float:
+    if len(polygon) < 3:
+        return 0.0
+    x, y = polygon.T
+    return abs(float(x @ np.roll(y, -1) - y @ np.roll(x, -1))) / 2
 
 
 def _wrapped(angle: FloatArray) -> FloatArray:

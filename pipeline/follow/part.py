@@ -28,6 +28,10 @@ class Known:
         for one in fields(self):
             getattr(self, one.name).flags.writeable = False
 
+    def part(self, first: int, end: int) -> "Known":
+        """The entries from first to before end."""
+        return Known(*(getattr(self, one.name)[first:end] for one in fields(self)))
+
     def by(self, row: int) -> int:
         """Index of what was known once the frames up to `row` were; -1 before the first sighting."""
         return int(np.searchsorted(self.row, row, side="right")) - 1

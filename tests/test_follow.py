@@ -1,0 +1,331 @@
+"""Following: each part once, however often and badly seen; drift named for what it is."""
+
+from dataclasses import replace
+from itertools import permutations
+from pathlib import Path
+
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from scipy.spatial import cKDTree
+from scipy.stats import circmean
+
+from cameras.columns import read_columns
+from cameras.locate import read_located
+from cameras.recording import Recording, read_recording
+from cameras.sightings import Sightings
+from pipeline.cell import cell_from, load_cell
+from pipeline.follow import follow
+from pipeline.follow.associate import Pair, best_pairs
+from pipeline.follow.overlap import inside, overlap
+
+JOINT = {"min": -90.0, "max": 90.0, "max_speed": 1.0, "max_accel": 1.0}
+RAW = {
+    "arm": {"link1_mm": 1.0, "link2_mm": 1.0, "flange_height_mm": 1.0, "home": [0.0, 0.0, 0.0, 0.0],
+            **{f"j{n}": JOINT for n in (1, 2, 3, 4)}},
+    "tool": {}, "motion": {"travel_mm": 1.0},
+    "belt": {"surface_mm": 0.0, "heading_deg": 30.0, "mm_per_count": 0.05},
+    "parts": {"lever": {"grasp_mm": 1.0, "places": ["bin"], "symmetry": 1},
+              "plate": {"grasp_mm": 1.0, "places": ["bin"], "symmetry": 2},
+              "dome": {"grasp_mm": 1.0, "places": ["bin"], "symmetry": "round"}},
+    "places": [{"name": "bin", "origin_mm": [0.0, 0.0, 0.0]}],
+}  # fmt: skip
+CELL = cell_from(RAW)
+TRAY = cell_from({key: value for key, value in RAW.items() if key != "belt"})
+HEADING = np.array([np.cos(np.radians(30)), np.sin(np.radians(30))])
+LEFT = np.array([-HEADING[1], HEADING[0]])
+VIEW_MM = 300.0
+SQUARE = np.array([[-10.0, -10.0], [10.0, -10.0], [10.0, 10.0], [-10.0, 10.0]])
+
+
+def recorded(counts, times=None):
+    n = len(counts)
+    times = np.arange(n) * 0.1 if times is None else times
+    return Recording(Path("."), np.arange(n), ("x",) * n, np.array(times, float), np.array(counts, float),
+                     np.full(n, ""), np.arange(n) + 2)
+
+
+def stop_and_go(seed=0, frames=400):
+    """Frames with jitter, some of them dropped, of a belt that slows and stops."""
+    rng = np.random.default_rng(seed)
+    times = np.sort(rng.choice(np.arange(frames) * 0.1, int(frames * 0.93), replace=False))
+    times = times + rng.uniform(-0.02, 0.02, len(times))
+    speed = 2000 * np.clip(1.2 * np.sin(times * 0.5) + 0.6, 0, 1)
+    return recorded(np.round(5000 + np.concatenate([[0], np.cumsum(speed[1:] * np.diff(times))])), times)
+
+
+def scene(recording, parts=60, noise_mm=0.1, noise_deg=0.3, missed=0.05, scale=1.0, turn_deg=0.0, delay_s=0.0, seed=0):
+    """True places (n, 2), kinds and yaws at counts 0, and the sightings of a view of VIEW_MM of belt."""
+    rng = np.random.default_rng(seed)
+    travel = recording.counts * 0.05
+    along, across = rng.uniform(travel[0], travel[-1], parts), rng.uniform(-80, 80, parts)
+    kinds, yaws = rng.choice(["lever", "plate", "dome"], parts), rng.uniform(-np.pi, np.pi, parts)
+    at = -along[:, None] * HEADING + across[:, None] * LEFT
+    true_travel = travel * scale + delay_s * np.gradient(travel, recording.times_s)
+    angle = np.radians(30 + turn_deg)
+    xy = at[:, None, :] + true_travel[:, None] * np.array([np.cos(angle), np.sin(angle)])
+    seen_along = xy @ HEADING
+    shown = (seen_along > 0) & (seen_along < VIEW_MM) & (rng.random(seen_along.shape) > missed)
+    part, row = np.nonzero(shown)
+    places = xy[part, row] + rng.normal(0, noise_mm, (len(row), 2))
+    turned = np.where(kinds[part] == "plate", rng.integers(0, 2, len(row)) * np.pi, 0)
+    yaw = yaws[part] + turned + rng.normal(0, np.radians(noise_deg), len(row))
+    yaw = np.where(kinds[part] == "dome", rng.uniform(-np.pi, np.pi, len(row)), yaw)
+    order = np.lexsort((rng.random(len(row)), row))
+    seen = sightings(row[order], kinds[part][order], places[order], yaw[order], sigma_mm=noise_mm,
+                     sigma_deg=noise_deg)
+    return at[shown.any(axis=1)], kinds[shown.any(axis=1)], yaws[shown.any(axis=1)], seen
+
+
+def sightings(row, kind, xy_mm, yaw_rad=0.0, score=0.9, side="up", sigma_mm=0.1, sigma_deg=0.3, outline=None):
+    n = len(row)
+    outlines = tuple(np.zeros((0, 2)) if name or outline is None else outline for name in kind)
+    return Sightings(np.array(row, np.int64), np.array(kind, np.str_), np.full(n, side), np.array(xy_mm, float),
+                     np.broadcast_to(yaw_rad, n).astype(float), np.broadcast_to(score, n).astype(float),
+                     np.full(n, float(sigma_mm)), np.full(n, np.radians(sigma_deg)), outlines)
+
+
+def places(followed):
+    return np.array([part.xy_mm for part in followed.parts]).reshape(-1, 2)
+
+
+def yaw_error(found, true, turns):
+    period = 2 * np.pi / turns
+    return abs((found - true + period / 2) % period - period / 2)
+
+
+@pytest.mark.parametrize("seed", range(3))
+def test_each_part_is_found_once_through_jitter_dropped_frames_and_stops(seed):
+    recording = stop_and_go(seed)
+    at, kinds, yaws, seen = scene(recording, seed=seed)
+    followed = follow(seen, recording, CELL)
+    distance, who = cKDTree(at).query(places(followed))
+    assert sorted(who) == list(range(len(at)))
+    assert distance.max() < 0.3
+    for part, one in zip(followed.parts, who, strict=True):
+        assert part.kind == kinds[one]
+        if part.kind != "dome":
+            turns = CELL.parts[part.kind].turns
+            assert yaw_error(part.yaw_rad, yaws[one], turns) < 5 * part.sigma_rad
+    assert followed.drift is not None
+    assert followed.drift.findings == ()
+
+
+def test_recorded_streams_hold_each_part_once(recordings_folder):
+    for folder in sorted(path for path in (recordings_folder / "streams").iterdir() if path.is_dir()):
+        cell = load_cell(folder / "cell.toml")
+        recording = read_recording(folder, cell.belt.counts_modulus, images=False)
+        followed = follow(read_located(folder / "located.csv", recording, list(cell.parts)), recording, cell)
+        columns = {"part": str, "side": str, "x_mm": float, "y_mm": float}
+        truth = read_columns(folder / "truth.csv", columns)
+        distance, who = cKDTree(np.stack([truth["x_mm"], truth["y_mm"]], axis=1)).query(places(followed))
+        assert sorted(who) == list(range(len(truth["part"]))), folder.name
+        assert np.quantile(distance, 0.95) < 0.25, folder.name
+        assert [(p.kind, p.side) for p in followed.parts] == [(truth["part"][k], truth["side"][k]) for k in who]
+        assert followed.drift.findings == (), folder.name
+
+
+def test_touching_parts_of_one_kind_stay_apart():
+    recording = recorded(np.arange(30) * 200)
+    row = np.repeat(np.arange(5, 25), 4)
+    offsets = np.array([[0, 0], [7, 0], [0, 7], [7, 7]])
+    rng = np.random.default_rng(0)
+    xy = np.tile(offsets, (20, 1)) + row[:, None] * 10 * HEADING + rng.normal(0, 0.1, (80, 2))
+    keep = rng.random(80) > 0.3
+    followed = follow(sightings(row[keep], ["plate"] * keep.sum(), xy[keep]), recording, CELL)
+    assert len(followed.parts) == 4
+    assert np.allclose(sorted(places(followed).round().tolist()), sorted(offsets.tolist()))
+
+
+def test_a_part_listed_twice_in_a_frame_is_one():
+    followed = follow(sightings([3, 3], ["lever", "plate"], [[10, 10], [11, 10]], score=[0.6, 0.9]),
+                      recorded(np.zeros(5)), CELL)
+    assert [part.kind for part in followed.parts] == ["plate"]
+    assert followed.part_of.tolist() == [-1, 0]
+
+
+def test_trays_are_fresh_in_every_frame():
+    seen = sightings([0, 1, 1], ["plate"] * 3, [[10, 10], [10, 10], [10, 11]])
+    followed = follow(seen, recorded(np.zeros(2)), TRAY)
+    assert [(part.first_row, part.frames_seen) for part in followed.parts] == [(0, 1), (1, 1)]
+    assert followed.drift is None
+
+
+def test_no_sightings_are_no_parts():
+    followed = follow(Sightings.joined([]), recorded([0, 10]), CELL)
+    assert followed.parts == ()
+    assert followed.part_of.shape == (0,)
+
+
+def test_parts_are_numbered_by_first_sighting_then_from_downstream():
+    recording = recorded([0, 0, 0])
+    seen = sightings([1, 1, 0, 2], ["lever"] * 4, [0 * HEADING, 50 * HEADING, -90 * HEADING, 99 * HEADING])
+    followed = follow(seen, recording, CELL)
+    assert [part.number for part in followed.parts] == [1, 2, 3, 4]
+    assert np.allclose(places(followed) @ HEADING, [-90, 50, 0, 99])
+    assert followed.part_of.tolist() == [2, 1, 0, 3]
+
+
+@settings(max_examples=20, deadline=None)
+@given(st.randoms(use_true_random=False))
+def test_the_order_of_sightings_does_not_matter(random):
+    recording = stop_and_go(frames=60)
+    seen = scene(recording, parts=8)[3]
+    order = list(range(len(seen)))
+    random.shuffle(order)
+    shuffled = Sightings(*(getattr(seen, name)[order] for name in list(vars(seen))[:-1]),
+                         tuple(seen.outline_mm[k] for k in order))
+    one, other = follow(seen, recording, CELL), follow(shuffled, recording, CELL)
+    assert np.array_equal(places(one), places(other))
+    assert [part.yaw_rad for part in one.parts] == [part.yaw_rad for part in other.parts]
+
+
+def test_outliers_are_left_out():
+    row = np.arange(8)
+    xy = np.tile([20.0, 30.0], (8, 1))
+    xy[5] += [2.4, 0.0]
+    yaw = np.zeros(8)
+    yaw[2] = np.pi  # taken the wrong way round once
+    part = follow(sightings(row, ["lever"] * 8, xy, yaw), recorded(np.zeros(8)), CELL).parts[0]
+    assert np.allclose(part.xy_mm, [20, 30], atol=1e-9)
+    assert part.yaw_rad == pytest.approx(0, abs=1e-9)
+    assert part.frames_seen == 8
+
+
+def test_kind_and_side_are_voted():
+    seen = sightings(range(5), ["lever", "plate", "lever", "", "lever"], [[0, 0]] * 5)
+    sides = np.array(["down", "up", "down", "", "down"])
+    part = follow(replace(seen, side=sides), recorded(np.zeros(5)), CELL).parts[0]
+    assert (part.kind, part.side) == ("lever", "down")
+    assert part.known.kind.tolist() == ["lever", "lever", "lever", "lever", "lever"]
+
+
+@settings(max_examples=50, deadline=None)
+@given(st.lists(st.tuples(st.floats(-0.01, 0.01), st.integers(0, 1)), min_size=1, max_size=9), st.floats(-3.1, 3.1))
+def test_yaw_is_the_circular_mean_modulo_the_symmetry(sighted, about):
+    """Against scipy.stats.circmean (Mardia, Jupp 2000) of the sightings folded onto half a turn."""
+    yaws = np.array([about + off + np.pi * half for off, half in sighted])
+    n = len(yaws)
+    part = follow(sightings(range(n), ["plate"] * n, [[0, 0]] * n, yaws), recorded(np.zeros(n)), CELL).parts[0]
+    assert yaw_error(part.yaw_rad, circmean(yaws, high=np.pi), 2) < 1e-6
+    assert np.abs(np.diff(np.unwrap(part.known.yaw_rad))).max(initial=0) < 0.1  # on one branch from the first on
+
+
+def test_what_is_known_rests_on_the_sightings_until_then():
+    recording = stop_and_go(1, frames=120)
+    seen = scene(recording, parts=20, seed=1)[3]
+    followed = follow(seen, recording, CELL)
+    cut = 60
+    early = seen.row <= cut
+    before = follow(Sightings(*(getattr(seen, name)[early] for name in list(vars(seen))[:-1]),
+                              tuple(np.zeros((0, 2)) for _ in range(early.sum()))), recording, CELL)
+    for part, same in zip(followed.parts, before.parts, strict=False):
+        k = part.known.by(cut)
+        assert np.array_equal(part.known.xy_mm[k], same.xy_mm)
+        assert part.known.yaw_rad[k] == same.yaw_rad
+        assert (part.known.kind[k], part.known.side[k], part.known.score[k]) == (same.kind, same.side, same.score)
+    assert followed.parts[0].known.by(-1) == -1
+
+
+def test_predicted_uncertainty_covers_the_errors():
+    recording = stop_and_go(2)
+    at, _, _, seen = scene(recording, parts=200, noise_mm=0.2, seed=2)
+    followed = follow(seen, recording, CELL)
+    error = places(followed) - at[cKDTree(at).query(places(followed))[1]]
+    sigma = np.array([part.sigma_mm for part in followed.parts])
+    assert 0.90 < (np.abs(error) < 1.96 * sigma[:, None]).mean() < 0.99
+
+
+def test_error_common_to_all_sightings_is_not_averaged_away():
+    """Sightings that agree far better than their sigma share an error: more of them do not make a part surer."""
+    recording = recorded(np.arange(40) * 10)
+    rows = np.arange(30)
+    seen = sightings(rows, ["lever"] * 30, rows[:, None] * 0.5 * HEADING, sigma_mm=0.3)
+    assert follow(seen, recording, CELL).parts[0].sigma_mm == pytest.approx(0.3, rel=0.1)
+
+
+def foreign_then(kind, share_frame):
+    """A thing not recognised in rows 0 to 2, about (4, 0), and a part at (0, 0) in later rows."""
+    rows = [0, 1, 2, 2 if share_frame else 3, 4, 5]
+    return sightings(rows, ["", "", "", kind, kind, kind], [[4, 0]] * 3 + [[0, 0]] * 3, outline=SQUARE)
+
+
+def test_a_part_not_recognised_at_first_is_one():
+    outlines = {"lever": SQUARE + np.array([4, 0])}
+    followed = follow(foreign_then("lever", False), recorded(np.zeros(6)), CELL, outlines)
+    assert [(part.kind, part.first_row) for part in followed.parts] == [("lever", 3)]
+    assert followed.part_of.tolist() == [-1, -1, -1, 0, 0, 0]
+
+
+def test_a_foreign_thing_beside_a_part_stays():
+    followed = follow(foreign_then("lever", True), recorded(np.zeros(6)), CELL, {"lever": SQUARE + np.array([4, 0])})
+    assert [part.kind for part in followed.parts] == ["", "lever"]
+    assert followed.parts[0].outline_mm.shape == (4, 2)
+
+
+def test_a_part_mistaken_for_another_kind_once_is_one():
+    seen = sightings([0, 1, 2, 3], ["plate", "lever", "lever", "lever"], [[9, 0], [0, 0], [0, 0], [0, 0]])
+    outlines = {"lever": SQUARE * 0.8 + [4, 0], "plate": SQUARE * 0.8 - [5, 0]}
+    followed = follow(seen, recorded(np.zeros(4)), CELL, outlines)
+    assert [part.kind for part in followed.parts] == ["lever"]
+
+
+def test_overlap_is_the_share_of_the_smaller_polygon():
+    assert overlap(SQUARE, SQUARE + np.array([10, 0])) == pytest.approx(0.5, abs=0.07)
+    assert overlap(SQUARE, SQUARE * 0.3) == 1.0
+    assert overlap(SQUARE, SQUARE + np.array([20.1, 0])) == 0.0
+    assert inside(SQUARE, np.array([[0, 0], [9, 9], [11, 0]])).tolist() == [True, True, False]
+
+
+@settings(max_examples=200, deadline=None)
+@given(st.dictionaries(st.tuples(st.integers(0, 3), st.integers(0, 3)), st.floats(0, 30), max_size=12))
+def test_frames_are_assigned_as_brute_force_would(costs):
+    found = best_pairs([Pair(cost, *key) for key, cost in costs.items()])
+    candidates = [[(s, t) for s, t in zip(range(4), order, strict=True) if (s, t) in costs]
+                  for order in permutations(range(4))]
+    best = min((-len(pairs), sum(costs[pair] for pair in pairs)) for pairs in candidates)
+    assert all(pair in costs for pair in found.items())
+    assert len(set(found.values())) == len(found) == -best[0]
+    assert sum(costs[pair] for pair in found.items()) == pytest.approx(best[1])
+
+
+@pytest.mark.parametrize("percent", [0.8, -0.4, 5.0])
+def test_a_wrong_scale_is_followed_and_named(percent):
+    recording = recorded(5000 + np.arange(300) * 200)
+    at, _, _, seen = scene(recording, scale=1 + percent / 100)
+    followed = follow(seen, recording, CELL)
+    assert len(followed.parts) == len(at)
+    assert followed.drift.along_mm == pytest.approx(percent, abs=0.05)
+    assert abs(followed.drift.across_mm) < 0.05
+    (told,) = followed.drift.findings
+    assert told.startswith(f"sightings drift {followed.drift.along_mm:+.2f} mm per 100 mm along the belt: "
+                           "recheck mm_per_count (")
+    assert float(told.split("(")[1].split()[0]) == pytest.approx(0.05 * (1 + percent / 100), rel=1e-3)
+
+
+def test_a_wrong_heading_is_named():
+    recording = recorded(5000 + np.arange(300) * 200)
+    followed = follow(scene(recording, turn_deg=0.3)[3], recording, CELL)
+    (told,) = followed.drift.findings
+    assert "across the belt: recheck heading_deg" in told
+    assert float(told.split("(")[1].split()[0]) == pytest.approx(0.3, abs=0.05)
+
+
+@pytest.mark.parametrize("delay_s", [0.006, -0.006])
+def test_late_time_stamps_are_named(delay_s):
+    recording = stop_and_go(5)
+    followed = follow(scene(recording, parts=100, delay_s=delay_s)[3], recording, CELL)
+    assert followed.drift.delay_s == pytest.approx(delay_s, abs=0.0015)
+    told = [one for one in followed.drift.findings if "time stamps" in one]
+    assert len(told) == 1
+    assert ("after" if delay_s > 0 else "before") in told[0]
+
+
+@pytest.mark.parametrize("seed", range(8))
+def test_sound_sightings_drift_nowhere(seed):
+    recording = stop_and_go(seed)
+    drift = follow(scene(recording, noise_mm=0.3, seed=seed)[3], recording, CELL).drift
+    assert drift.findings == ()
+    assert abs(drift.along_mm) < 5 * drift.along_error_mm
+    assert abs(drift.across_mm) < 5 * drift.across_error_mm
