@@ -1,13 +1,9 @@
-"""What the commands share: progress on the terminal, tables a person can read, files written whole or not at all."""
+"""What the commands share: progress on the terminal, tables a person can read."""
 
-import os
-import tempfile
 from collections.abc import Iterable, Iterator, Sequence
-from contextlib import contextmanager
-from pathlib import Path
 from typing import TypeVar
 
-from cameras.faults import InputFault, printable
+from cameras.faults import printable
 
 T = TypeVar("T")
 
@@ -38,22 +34,3 @@ def show_table(title: str, header: Sequence[str], rows: Iterable[Sequence[object
     for row in rows:
         table.add_row(*(Text(printable(value)) for value in row))
     Console(highlight=False).print(table)
-
-
-@contextmanager
-def written_whole(path: str | Path) -> Iterator[Path]:
-    """A path to write to, moved to `path` when the block ends well and removed when it does not."""
-    path = Path(path)
-    try:
-        path.parent.mkdir(parents=True, exist_ok=True)
-        handle, name = tempfile.mkstemp(prefix=f".{path.name}.", suffix=path.suffix, dir=path.parent)
-    except OSError as error:
-        raise InputFault(path, "", f"cannot be written ({error.strerror})", "choose another place") from None
-    os.close(handle)
-    part = Path(name)
-    try:
-        yield part
-        part.chmod(0o644)
-        os.replace(part, path)
-    finally:
-        part.unlink(missing_ok=True)
