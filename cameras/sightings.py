@@ -40,6 +40,11 @@ class Sightings:
     def __len__(self) -> int:
         return len(self.row)
 
+    def where(self, kept: NDArray[np.bool_]) -> "Sightings":
+        """Those of them that are kept (n,)."""
+        columns = {f.name: getattr(self, f.name)[kept] for f in fields(self) if f.name != "outline_mm"}
+        return Sightings(**columns, outline_mm=tuple(o for o, k in zip(self.outline_mm, kept, strict=True) if k))
+
     @classmethod
     def joined(cls, several: Iterable["Sightings"]) -> "Sightings":
         """Several sightings as one, in the order given; none of them makes an empty one."""

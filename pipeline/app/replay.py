@@ -1,7 +1,123 @@
-"""Commands: see `register`."""
+"""Commands: replay a recording, plan from one image."""
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
 
 import typer
+
+from pipeline.app.shown import progress, show_table
+
+if TYPE_CHECKING:
+    from pipeline.replay import Run
+    from pipeline.study import Seen
 
 
 def register(app: typer.Typer) -> None:
     """Add this module's commands."""
+    app.command()(replay)
+    app.command()(plan)
+
+
+Recorded = Annotated[Path, typer.Argument(help="Folder with frames.csv and its images.")]
+CellFile = Annotated[Path, typer.Option(help="The cell file.")]
+Out = Annotated[Path, typer.Option(help="Folder to write to.")]
+Order = Annotated[str, typer.Option(help="arrival, nearest or lookahead; otherwise the cell's.")]
+Detections = Annotated[Path | None, typer.Option(help="Detections made elsewhere, in pixels, instead of images.")]
+Located = Annotated[Path | None, typer.Option(help="Poses made elsewhere, in the cell frame, instead of images.")]
+Horizon = Annotated[int, typer.Option(min=0, help="Parts looked at together; 0: the cell's.")]
+LeastScore = Annotated[float, typer.Option(min=0, max=1, help="Parts found with less are not picked.")]
+
+
+def replay(
+    recording: Recorded, cell: CellFile, out: Out, order: Order = "", trajectory: Annotated[
+        bool, typer.Option("--trajectory", help="Also write the joints every 4 ms.")] = False,
+    detections: Detections = None, located: Located = None, horizon: Horizon = 0, least_score: LeastScore = 0.5,
+    overlays: Annotated[bool, typer.Option(help="Write each image with what was found drawn on it.")] = True,
+) -> None:
+    """Replay a recording: find, follow, filter, order, time and simulate; write tables, pictures and a report.
+
+    Example: sanderling replay demo_images/bells --cell demo_images/bells/cell.toml --out out/bells
+    """
+    from pipeline.cell import load_cell
+    from pipeline.outputs import write_run
+    from pipeline.study import run, setting
+
+    whole = load_cell(cell)
+    seen = _seen(whole, recording, detections, located)
+    chosen = setting(seen, least_score)
+    order, horizon = order or whole.order.policy, horizon or whole.order.horizon
+    done = run(chosen, order, horizon, _clock(seen))
+    figures = write_run(out, seen, chosen, done, horizon, trajectory, overlays and detections is None and located is None)
+    _tell(done, figures)
+    print(f"-> {out}")
+
+
+def plan(
+    recording: Recorded, cell: CellFile, out: Out,
+    frame: Annotated[int, typer.Option(help="Number of the image in frames.csv.")],
+    order: Order = "", detections: Detections = None, located: Located = None, horizon: Horizon = 0,
+    least_score: LeastScore = 0.5,
+) -> None:
+    """Plan from one image: what can be picked of what it shows, in which order, and what each choice costs.
+
+    Example: sanderling plan demo_images/bells --frame 5 --cell demo_images/bells/cell.toml --out out/plan
+    """
+    from pipeline.cell import load_cell
+    from pipeline.outputs import write_run
+    from pipeline.study import one_frame, run, setting
+
+    whole = load_cell(cell)
+    seen = one_frame(whole, recording, _source(detections, located), frame)
+    chosen = setting(seen, least_score)
+    order, horizon = order or whole.order.policy, horizon or whole.order.horizon
+    done = run(chosen, order, horizon)
+    figures = write_run(out, seen, chosen, done, horizon, True, detections is None and located is None)
+    show_table("Plan", ("pick", "part", "at", "decided s", "gripped s", "released s", "to", "elbow"),
+               [(n, pick.part.kind, f"{pick.part.xy_mm[0]:.1f}, {pick.part.xy_mm[1]:.1f}", f"{pick.decided_s:.2f}",
+                 f"{pick.cycle.grasp_start_s:.2f}", f"{pick.cycle.release_end_s:.2f}", f"{pick.place} {pick.slot + 1}",
+                 ("right", "left")[pick.cycle.hold.elbow]) for n, pick in enumerate(done.picks, 1)])  # fmt: skip
+    _tell(done, figures)
+    print(f"-> {out}")
+
+
+def _source(detections: Path | None, located: Path | None):  # type: ignore[no-untyped-def]
+    from pipeline.study import Source
+
+    return Source(detections, located)
+
+
+def _seen(whole, recording: Path, detections: Path | None, located: Path | None) -> "Seen":  # type: ignore[no-untyped-def]
+    from pipeline.study import see
+
+    return see(whole, recording, _source(detections, located), lambda rows: progress(rows, len(rows), "find"))  # type: ignore[arg-type]
+
+
+def _tell(done: "Run", figures: dict[str, object]) -> None:
+    """The figures of a run, and why parts were missed."""
+    decide, find = figures["decide_ms"], figures["find_ms"]
+    show_table(f"Replay by {done.order}", ("", ""), [
+        ("parts seen", figures["parts_seen"]),
+        ("picked", figures["picked"]),
+        ("picks a minute", f"{figures['picks_per_min']:.1f}"),
+        ("arm busy", f"{100 * figures['arm_busy']:.0f} %"),  # type: ignore[operator]
+        ("joint travel a pick", f"{figures['joint_travel_deg_per_pick']:.0f} deg"),
+        ("to decide, median and most", f"{decide['median']:.1f} ms, {decide['max']:.1f} ms"),  # type: ignore[index]
+        ("to find, median and most", f"{find['median']:.1f} ms, {find['max']:.1f} ms"),  # type: ignore[index]
+    ])  # fmt: skip
+    if figures["missed"]:
+        reasons: dict[str, list[str]] = {}
+        for part, fate in zip(done.parts, done.fates, strict=True):
+            if fate:
+                reasons.setdefault(fate.reason, []).append(f"part {part.number}: {fate.detail}")
+        show_table("Missed", ("reason", "parts", "for instance"),
+                   [(reason, len(lines), lines[0]) for reason, lines in sorted(reasons.items())])
+    for note in done.notes:
+        print(note)
+
+
+def _clock(seen: "Seen"):  # type: ignore[no-untyped-def]
+    """A progress bar over the recording's time."""
+    from pipeline.app.shown import advancing
+
+    times = seen.recording.times_s
+    return advancing(float(times[0]), float(times[-1]), "replay")

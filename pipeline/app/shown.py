@@ -1,6 +1,6 @@
 """What the commands share: progress on the terminal, tables a person can read."""
 
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from typing import TypeVar
 
 from cameras.faults import printable
@@ -24,13 +24,35 @@ def progress(items: Iterable[T], total: int, label: str) -> Iterator[T]:
 
 def show_table(title: str, header: Sequence[str], rows: Iterable[Sequence[object]]) -> None:
     """Print a table; text from files is cleaned for the terminal and is never read as markup."""
+    from rich import box
     from rich.console import Console
     from rich.table import Table
     from rich.text import Text
 
-    table = Table(title=Text(title), title_justify="left", header_style="bold")
+    table = Table(title=Text(title), title_justify="left", header_style="bold", box=box.SIMPLE_HEAD,
+                  show_header=any(header))
     for k, name in enumerate(header):
         table.add_column(name, justify="left" if k == 0 else "right")
     for row in rows:
         table.add_row(*(Text(printable(value)) for value in row))
     Console(highlight=False).print(table)
+
+
+def advancing(start: float, end: float, label: str) -> Callable[[float], None]:
+    """A function that moves a progress bar on stderr to a value between start and end, and ends it there."""
+    from rich.console import Console
+    from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
+
+    console = Console(stderr=True)
+    if not console.is_terminal:
+        return lambda value: None
+    bar = Progress(TextColumn("{task.description}"), BarColumn(), TimeRemainingColumn(), console=console, transient=True)
+    task = bar.add_task(label, total=end - start)
+    bar.start()
+
+    def moved(value: float) -> None:
+        bar.update(task, completed=min(value, end) - start)
+        if value >= end:
+            bar.stop()
+
+    return moved

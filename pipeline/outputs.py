@@ -1,0 +1,49 @@
+"""The folder that a replay writes: tables, summary, pictures, report. Each file is written whole or not at all."""
+
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from cameras.written import written_whole
+from pipeline.finding import write_overlays
+from pipeline.page import write_page
+from pipeline.replay import Run, Setting
+from pipeline.study import Seen
+from pipeline.tables import summary, write_parts, write_picks, write_summary, write_trajectory
+
+
+def write_run(out: Path, seen: Seen, setting: Setting, run: Run, horizon: int, trajectory: bool,
+              overlays: bool) -> dict[str, Any]:
+    """Write everything about a run; its figures, as in summary.json."""
+    figures = summary(run, horizon, seen.find_s.tolist(), _more(seen, run))
+    with written_whole(out / "parts.csv") as part:
+        write_parts(part, run, seen.recording)
+    with written_whole(out / "picks.csv") as part:
+        write_picks(part, run)
+    if trajectory:
+        with written_whole(out / "trajectory.csv") as part:
+            write_trajectory(part, run)
+    if overlays:
+        write_overlays(out / "frames", seen.recording, seen.cell, seen.sightings)
+    with written_whole(out / "report.html") as part:
+        write_page(part, seen, setting, run, figures)
+    with written_whole(out / "summary.json") as part:
+        write_summary(part, figures)
+    return figures
+
+
+def _more(seen: Seen, run: Run) -> dict[str, Any]:
+    """Further figures: how the cycle splits, how sightings drift."""
+    cycles = [pick.cycle for pick in run.picks]
+    split = {
+        "to_part": [c.met_s - c.depart_s for c in cycles], "down": [c.grasp_start_s - c.met_s for c in cycles],
+        "grasp": [c.grasp_end_s - c.grasp_start_s for c in cycles], "up": [c.left_s - c.grasp_end_s for c in cycles],
+        "across": [c.there_s - c.left_s for c in cycles], "set_down": [c.release_end_s - c.there_s for c in cycles],
+    }  # fmt: skip
+    drift = seen.followed.drift
+    return {
+        "cell": seen.cell.name,
+        "cycle_s": {name: round(float(np.mean(times)), 4) if times else 0.0 for name, times in split.items()},
+        "drift": list(drift.findings) if drift is not None else [],
+    }
