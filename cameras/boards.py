@@ -8,10 +8,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cameras.faults import InputFault, printable
+from cameras.image import read_image
 
 FloatArray = NDArray[np.float64]
-MOST_BYTES = 256 * 1024 * 1024
-MOST_PIXELS = 200_000_000
 _FEWEST_CORNERS = 6  # of a ChArUco board partly in view
 
 
@@ -45,28 +44,11 @@ class View:
     points_mm: FloatArray
 
 
-def read_grey(path: Path) -> NDArray[np.uint8]:
-    """An image as 8-bit grey (height, width). Raises InputFault for a file that is no image or far too large."""
-    try:
-        if path.stat().st_size > MOST_BYTES:
-            raise InputFault(path, "", f"larger than {MOST_BYTES >> 20} MB", "give an image of a board")
-        data = np.fromfile(path, dtype=np.uint8)
-    except FileNotFoundError:
-        raise InputFault(path, "", "no such file", "check the path") from None
-    except OSError as error:
-        raise InputFault(path, "", f"cannot be read ({error.strerror})", "check the path") from None
-    try:
-        image = cv2.imdecode(data, cv2.IMREAD_GRAYSCALE) if len(data) else None
-    except cv2.error:
-        image = None
-    if image is None or image.size > MOST_PIXELS:
-        raise InputFault(path, "", "not an image that can be read", "give a PNG, JPEG, TIFF or BMP file")
-    return np.asarray(image, dtype=np.uint8)
-
-
 def view_of(path: Path, board: Board) -> View | None:
-    """The board in an image file; None where it is not found."""
-    image = read_grey(path)
+    """The board in an image file; None where it is not found. Raises InputFault for a file that is no image."""
+    image = read_image(path)
+    if image.ndim == 3:
+        image = cv2.cvtColor(image, cv2.COLOR_BGR2GRAY).astype(np.uint8)
     found = _charuco(image, board) if board.dictionary else _chessboard(image, board)
     if found is None:
         return None

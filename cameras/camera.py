@@ -30,11 +30,11 @@ height, no lens, so that height makes no difference to it."""
 class CameraMap:
     """Pixel (u, v) to cell frame (x, y) at a height, and back. Heights are z in the cell frame, mm.
 
-    basis: see `Basis`.  lens: for a map without one it only shifts and scales pixels.
+    basis: see `Basis`.  lens: for a map without one it shifts and scales pixels, with one radial term at the most.
     projection (3, 4): cell point (x, y, z, 1) to a multiple of (ray, 1); its last row is positive before the camera.
     plane_mm: height of the touched plane.
-    covariance: of what was fitted; (15, 15) for a pose: the lens's nine, a small rotation in the camera frame (rad)
-    and a shift (mm); else (12, 12) of the projection's numbers by rows.  freedom: degrees of freedom it rests on.
+    covariance: of what was fitted: the lens's nine, then for a pose (15, 15) a small rotation (rad) and a shift (mm) in
+    the camera frame, else (21, 21) the projection's numbers by rows.  freedom: degrees of freedom it rests on.
     rms_mm: root mean square of the distance between touched and mapped points; leave_one_out_rms_mm: the same for
     each touch under the map fitted without it, None where that leaves too few.  touches: how many it was fitted to.
     touched_px (k, 2): convex hull of the touched marks in the image.
@@ -103,23 +103,37 @@ class CameraMap:
 
     def covariance_mm2(self, points_mm: ArrayLike, height_mm: ArrayLike | None = None) -> FloatArray:
         """(..., 2, 2) covariance of where the map puts the pixel of a point: by first order from the fit's own."""
-        points = self.points(points_mm, height_mm)
-        lenses, projections = self._deviations
-        at = self.to_pixel(points)
-        many = (len(lenses), *(1,) * (points.ndim - 1))
-        moved = _seen(points, projections.reshape(*many, 3, 4), lenses.reshape(*many, 9)) - at
-        per_mm = np.linalg.solve(self._pixel_per_mm(points), np.moveaxis(moved, 0, -1))
-        return np.asarray(per_mm @ np.swapaxes(per_mm, -1, -2))
+        moved = self._moved(self.points(points_mm, height_mm))
+        return np.asarray(moved @ np.swapaxes(moved, -1, -2))
 
     def sigma_mm(self, points_mm: ArrayLike, height_mm: ArrayLike | None = None) -> FloatArray:
         """(...) predicted standard deviation of one coordinate of the map at points (..., 2 or 3)."""
         return np.asarray(np.sqrt(np.trace(self.covariance_mm2(points_mm, height_mm), axis1=-2, axis2=-1) / 2.0))
 
-    def shifted(self, change: FloatArray) -> "CameraMap":
-        """The map with what was fitted changed by `change` (15,) or (12,), in the order of `covariance`."""
+    def yaw_sigma_rad(self, points_mm: ArrayLike, height_mm: ArrayLike | None = None) -> FloatArray:
+        """(...) predicted standard deviation of the yaw of something small at points (..., 2 or 3)."""
+        points, reach = self.points(points_mm, height_mm), 10.0
+        over_x, over_y = (self._moved(points + step) - self._moved(points - step) for step in reach * np.eye(3)[:2])
+        turned = (over_x[..., 1, :] - over_y[..., 0, :]) / (4 * reach)
+        return np.asarray(np.linalg.norm(turned, axis=-1))
+
+    def lens_known(self) -> "CameraMap":
+        """The map as unsure as it would be if the lens file were exact: covariance given the lens."""
         if self.basis != "pose":
-            return replace(self, projection=self.projection + change.reshape(3, 4))
+            return self
+        lens, pose = slice(0, 9), slice(9, 15)
+        c, rest = self.covariance, np.zeros((15, 15))
+        size = self._scale
+        inner = np.linalg.pinv(c[lens, lens] / np.outer(size[lens], size[lens]), rcond=1e-10, hermitian=True)
+        cross = c[pose, lens] / size[lens]
+        rest[pose, pose] = c[pose, pose] - cross @ inner @ cross.T
+        return replace(self, covariance=rest)
+
+    def shifted(self, change: FloatArray) -> "CameraMap":
+        """The map with what was fitted changed by `change` (15,) or (21,), in the order of `covariance`."""
         lens = replace(self.lens, parameters=self.lens.parameters + change[:9])
+        if self.basis != "pose":
+            return replace(self, lens=lens, projection=self.projection + change[9:].reshape(3, 4))
         projection = rotation(change[9:12]) @ self.projection
         projection[:, 3] += change[12:]
         return replace(self, lens=lens, projection=projection)
@@ -129,6 +143,13 @@ class CameraMap:
         step = 0.01 * np.eye(3)[:2].reshape(2, *(1,) * (points.ndim - 1), 3)
         slope = (self.to_pixel(points + step) - self.to_pixel(points - step)) / 0.02
         return np.moveaxis(slope, 0, -1)
+
+    def _moved(self, points: FloatArray) -> FloatArray:
+        """(..., 2, m) where the pixel of each point would be put by the maps of `_deviations`, less the point."""
+        lenses, projections = self._deviations
+        many = (len(lenses), *(1,) * (points.ndim - 1))
+        seen = _seen(points, projections.reshape(*many, 3, 4), lenses.reshape(*many, 9)) - self.to_pixel(points)
+        return np.asarray(np.linalg.solve(self._pixel_per_mm(points), np.moveaxis(seen, 0, -1)), dtype=np.float64)
 
     @cached_property
     def _deviations(self) -> tuple[FloatArray, FloatArray]:
@@ -179,13 +200,13 @@ def load_camera(path: str | Path) -> CameraMap:
     """Read a camera file. Raises InputFault naming file, key, fault and remedy."""
     file = JsonFile(path, "camera", CAMERA_FORMAT, _KEYS, _WRITER)
     basis = _basis(file)
-    many = 15 if basis == "pose" else 12
+    many = 15 if basis == "pose" else 21
     covariance = file.numbers("covariance", (many, many))
     if (np.diag(covariance) < 0).any() or not np.allclose(covariance, covariance.T):
         raise file.fault("covariance", "is no covariance")
     alone = file.values.get("leave_one_out_rms_mm") is None
     return CameraMap(
-        basis=basis, lens=lens_of(file, covariance[:9, :9] if basis == "pose" else np.zeros((9, 9))),
+        basis=basis, lens=lens_of(file, covariance[:9, :9]),
         projection=file.numbers("projection", (3, 4)), plane_mm=file.number("plane_mm"), covariance=covariance,
         freedom=file.number("freedom"), rms_mm=file.number("rms_mm"),
         leave_one_out_rms_mm=None if alone else file.number("leave_one_out_rms_mm"),

@@ -12,7 +12,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 CELL_PX = 4
-DIRECTIONS = 8
+TAN_EIGHTH = np.tan(np.pi / 8)
 NOISE_FACTOR = 4.0
 LEAST_GRADIENT = 16.0  # of a 3 x 3 Sobel filter at half size: a step of 4 grey levels
 
@@ -44,32 +44,44 @@ def edge_map(grey: NDArray[np.uint8]) -> EdgeMap:
     return EdgeMap(*_pooled(dx, dy, least), least)
 
 
+@njit("i8(f8, f8)", cache=True, inline="always")
+def _sector(x, y):  # type: ignore[no-untyped-def]
+    """Which eighth of half a turn the direction (x, y) lies in, up to its sign."""
+    if y < 0.0 or (y == 0.0 and x < 0.0):
+        x, y = -x, -y
+    if x > 0.0:
+        return (0 if y < TAN_EIGHTH * x else 1) if y < x else (2 if x > TAN_EIGHTH * y else 3)
+    return (4 if -x < TAN_EIGHTH * y else 5) if -x < y else (6 if y > TAN_EIGHTH * -x else 7)
+
+
 @njit("Tuple((f4[:,::1], u1[:,::1], u1[:,::1]))(i2[:,::1], i2[:,::1], f8)", cache=True)
 def _pooled(dx, dy, least):  # type: ignore[no-untyped-def]
     rows, columns = dx.shape[0] // 2, dx.shape[1] // 2
     strength = np.zeros((rows, columns), np.float32)
     own = np.zeros((rows, columns), np.uint8)
-    spread = np.zeros((rows, columns), np.uint8)
     floor = np.int32(least * least)
-    sector = np.pi / 8
     for j in range(rows):
         for i in range(columns):
             most = np.int32(0)
+            bits = np.uint8(0)
             for k in range(2):
                 for m in range(2):
                     gx, gy = np.int32(dx[2 * j + k, 2 * i + m]), np.int32(dy[2 * j + k, 2 * i + m])
                     square = gx * gx + gy * gy
                     most = max(most, square)
                     if square > floor:
-                        angle = np.arctan2(np.float32(gy), np.float32(gx))
-                        own[j, i] |= np.uint8(1 << (int(np.floor(angle / sector)) & 7))
+                        bits |= np.uint8(1 << _sector(float(gx), float(gy)))
+            own[j, i] = bits
             strength[j, i] = np.sqrt(np.float32(most))
-    for j in range(1, rows - 1):
+    across = own.copy()
+    for j in range(rows):
         for i in range(1, columns - 1):
-            for k in range(-1, 2):
-                for m in range(-1, 2):
-                    spread[j, i] |= own[j + k, i + m]
-    return strength, own, spread
+            across[j, i] = own[j, i - 1] | own[j, i] | own[j, i + 1]
+    near = across.copy()
+    for j in range(1, rows - 1):
+        for i in range(columns):
+            near[j, i] = across[j - 1, i] | across[j, i] | across[j + 1, i]
+    return strength, own, near
 
 
 @njit("f8(u1[:,::1], f8, f8)", cache=True, inline="always")

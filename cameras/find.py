@@ -15,19 +15,22 @@ from cameras.blobs import Blobs, blobs_of
 from cameras.edges import CELL_PX, EdgeMap, edge_map
 from cameras.match import Fit, Template, fit_pose, template_of
 from cameras.model import Model
-from cameras.search import TURN_STEP_RAD, coarse_points, placements
+from cameras.search import TURN_STEP_RAD, coarse_points, peaks, placements, room_for
 from cameras.sightings import Sightings
-from cameras.view import CameraMap, Views, views_of
+from cameras.view import CameraMap, Views, unproject, views_of
 
 FloatArray = NDArray[np.float64]
+Grey = NDArray[np.uint8]
 
 DEFAULT_SCORE = 0.6
-COARSE_SHARE = 0.55
-MOST_TRIED = 6
+MOST_PEAKS = 40
+TRIED_ON_ONE, TRIED_ON_MORE = 6, 5
+PROMISING = 0.4
+SETTLED = 0.92
+STEP_SHARE = 0.12  # of the edge map's threshold: the least step of grey levels that the fit takes for an edge
 OVERLAP = 0.2
 UNKNOWN_SHARE = 0.25
 UNKNOWN_LEAST_MM2 = 25.0
-INNER_SHARE = 0.45
 
 
 class Finder(Protocol):
@@ -56,7 +59,8 @@ class _Kind:
     coarse: FloatArray
     anchor: FloatArray
     model: Model
-    turns: int
+    steps: int
+    step_rad: float
 
 
 @dataclass(frozen=True)
@@ -65,6 +69,17 @@ class _Placed:
     fit: Fit
     xy_mm: FloatArray
     polygon_px: FloatArray
+
+    def explains(self, u: float, v: float, yaw: float, kind: _Kind, affine: FloatArray) -> bool:
+        """Whether a rough placement (grip point in cells) lies inside this fit, which is too good to be bettered."""
+        if self.fit.outline_share < SETTLED or (self.kind.name == kind.name and self.kind.model.mirrored_alike
+                                                and self.kind.down != kind.down):  # fmt: skip
+            return False
+        cosine, sine = np.cos(yaw), np.sin(yaw)
+        x, y = kind.anchor
+        at = affine @ np.array([cosine * x - sine * y, sine * x + cosine * y]) + [u, v]
+        pixel = (float(CELL_PX * at[0] + 1.5), float(CELL_PX * at[1] + 1.5))
+        return cv2.pointPolygonTest(self.polygon_px.astype(np.float32), pixel, measureDist=False) >= 0
 
 
 class PartFinder:
@@ -75,7 +90,9 @@ class PartFinder:
 
     def __init__(self, parts: Iterable[TaughtPart], surface_mm: float, least_score: float = DEFAULT_SCORE) -> None:
         self.parts, self.surface_mm, self.least_score = tuple(parts), surface_mm, least_score
-        self.kinds = [_kind(part, down) for part in self.parts for down in (False, True)]
+        self.kinds = [_kind(part, down) for part in self.parts for down in (False, True) if part.model.side_told or not down]
+        areas = [cv2.contourArea(part.model.outline_mm.astype(np.float32)) for part in self.parts]
+        self.least_cells = 0.5 * min(areas, default=100.0)
         self.highest_mm = max((part.height_mm for part in self.parts), default=10.0)
         self._views: Views | None = None
         self._camera: CameraMap | None = None
@@ -101,44 +118,52 @@ class PartFinder:
             self._camera, self._shape = camera, shape
         return self._views
 
-    def _on_patch(
-        self, grey: NDArray[np.uint8], camera: CameraMap, views: Views, edges: EdgeMap, blobs: Blobs, patch: int
-    ) -> list[_Placed]:
+    def _on_patch(self, grey: Grey, camera: CameraMap, views: Views, edges: EdgeMap, blobs: Blobs, patch: int) -> list[_Placed]:
+        """Fits on one patch: from the best rough placement down, none where a good fit already stands."""
         box = blobs.box[patch]
         centre_px = CELL_PX * 0.5 * (box[:2] + box[2:]) + 0.5 * (CELL_PX - 1)
         place = int(views.nearest(camera.to_cell(centre_px[None], self.surface_mm))[0])
         affine = np.ascontiguousarray(views.coefficients[place][:, 1:3]) / CELL_PX
-        room = np.empty((2048, 4))
-        rough: list[tuple[float, _Kind, float, float, float]] = []
-        for kind in self.kinds:
-            turns = 1 if kind.turns == 0 else max(int(round(2 * np.pi / kind.turns / TURN_STEP_RAD)), 1)
-            step = 2 * np.pi / max(kind.turns, 1) / turns
-            n = placements(edges.own, edges.near, blobs.label, patch + 1, kind.coarse, affine, kind.anchor, turns, step, box,
-                           COARSE_SHARE, room)  # fmt: skip
-            radius = kind.model.radius_mm * float(np.sqrt(abs(np.linalg.det(affine))))
-            rough += [(score, kind, u, v, yaw) for score, u, v, yaw in _peaks(room[:n], radius, 2 * np.pi / max(kind.turns, 1))]
-        rough.sort(key=lambda one: -one[0])
-        area = float(blobs.cells[patch])
-        most = MOST_TRIED + 6 * int(area / 500)
-        tried = [self._fitted(grey, camera, views, one, edges.least) for one in rough[: 3 * most]]
-        return [one for one in tried if one is not None]
+        rough = []
+        for number, kind in enumerate(self.kinds):
+            room = room_for(box, kind.steps)
+            placements(edges.own, edges.near, blobs.label, patch + 1, kind.coarse, affine, kind.anchor, kind.steps,
+                       kind.step_rad, box, room)  # fmt: skip
+            found = peaks(room)[:MOST_PEAKS]
+            rough.append(np.column_stack([found, np.full(len(found), float(number))]))
+        every = np.concatenate(rough)
+        every = every[np.argsort(-every[:, 0], kind="stable")]
+        most = TRIED_ON_ONE + TRIED_ON_MORE * int(blobs.cells[patch] / self.least_cells)
+        placed: list[_Placed] = []
+        tried = 0
+        for _, u, v, yaw, number in every:
+            if tried >= most:
+                break
+            kind = self.kinds[int(number)]
+            if any(one.explains(u, v, yaw, kind, affine) for one in placed):
+                continue
+            tried += 1
+            one = self._fitted(grey, views, kind, CELL_PX * np.array([u, v]) + 0.5 * (CELL_PX - 1), yaw, place, edges.least)
+            if one is not None:
+                placed.append(one)
+        return placed
 
     def _fitted(
-        self, grey: NDArray[np.uint8], camera: CameraMap, views: Views, rough: tuple[float, _Kind, float, float, float], least: float
+        self, grey: Grey, views: Views, kind: _Kind, at_px: FloatArray, yaw: float, place: int, least: float
     ) -> _Placed | None:
-        _, kind, u, v, yaw = rough
-        middle = float(np.mean(kind.template.heights[:2]))
-        xy = camera.to_cell(np.array([[u, v]]) * CELL_PX + 0.5 * (CELL_PX - 1), self.surface_mm + middle)[0]
-        place = int(views.nearest(xy[None])[0])
-        centre = views.places_mm[place]
-        fit = fit_pose(grey, views.coefficients[place], kind.template, (*(xy - centre), yaw), 0.12 * least, 0.4)
+        start, middle = np.empty(2), float(np.mean(kind.template.heights[:2]))
+        for _ in range(2):  # the second time from the place that is nearest to the part itself
+            unproject(views.coefficients[place], at_px[0], at_px[1], middle, start)
+            place = int(views.nearest((views.places_mm[place] + start)[None])[0])
+        unproject(views.coefficients[place], at_px[0], at_px[1], middle, start)
+        fit = fit_pose(grey, views.coefficients[place], kind.template, (start[0], start[1], yaw), STEP_SHARE * least, PROMISING)
         if fit is None or fit.outline_share < self.least_score:
             return None
-        polygon = fit.polygon_px
         rows, columns = grey.shape
+        polygon = fit.polygon_px
         if polygon.min() < 0.5 or polygon[:, 0].max() > columns - 1.5 or polygon[:, 1].max() > rows - 1.5:
             return None
-        return _Placed(kind, fit, centre + fit.pose[:2], polygon)
+        return _Placed(kind, fit, views.places_mm[place] + fit.pose[:2], polygon)
 
     def _unknown(self, kept: list[_Placed], blobs: Blobs, camera: CameraMap) -> list[tuple[FloatArray, FloatArray]]:
         """Centre and outline about it, in mm, of what no part explains and no border cuts."""
@@ -173,7 +198,10 @@ def grey_of(image: NDArray[np.uint8]) -> NDArray[np.uint8]:
 def _kind(part: TaughtPart, down: bool) -> _Kind:
     template = template_of(part.model, down)
     outline_only = template.points[template.points[:, 5] == 0.0]
-    return _Kind(part.name, down, template, coarse_points(outline_only), _anchor(template.outline), part.model, part.turns)
+    period = 2.0 * np.pi / max(part.turns, 1)
+    steps = 1 if part.turns == 0 else max(int(round(period / TURN_STEP_RAD)), 1)
+    return _Kind(part.name, down, template, coarse_points(outline_only), _anchor(template.outline), part.model, steps,
+                 period / steps)  # fmt: skip
 
 
 def _anchor(outline: FloatArray) -> FloatArray:
@@ -185,23 +213,6 @@ def _anchor(outline: FloatArray) -> FloatArray:
     depth = cv2.distanceTransform(mask, cv2.DIST_L2, 5)
     v, u = np.unravel_index(int(np.argmax(depth)), depth.shape)
     return np.asarray((np.array([u, v], float) - 4) / scale + low)
-
-
-def _peaks(hits: FloatArray, radius: float, period: float) -> list[tuple[float, float, float, float]]:
-    """Of placements (n, 4: score, u, v, yaw) the best, each at least three cells or 15 degrees from any better."""
-    kept: list[tuple[float, float, float, float]] = []
-    for score, u, v, yaw in hits[np.argsort(-hits[:, 0], kind="stable")]:
-        near = False
-        for _, a, b, other in kept:
-            turn = abs((yaw - other + 0.5 * period) % period - 0.5 * period)
-            if abs(u - a) <= 3 and abs(v - b) <= 3 and turn < 0.27:
-                near = True
-                break
-        if not near:
-            kept.append((float(score), float(u), float(v), float(yaw)))
-            if len(kept) >= 24:
-                break
-    return kept
 
 
 def _best(placed: list[_Placed], shape: tuple[int, int], overlap: float) -> list[_Placed]:

@@ -1,4 +1,6 @@
-"""Linear starts for the plane map: homographies by normalised direct linear transformation, and a robust choice."""
+"""Homographies by normalised direct linear transformation, and the one that most points agree on."""
+
+from math import comb, log
 
 import numpy as np
 from numpy.typing import NDArray
@@ -46,22 +48,26 @@ def mapped(plane: FloatArray, points: FloatArray) -> FloatArray:
         return np.asarray(out[..., :2] / out[..., 2:])
 
 
-def robust_homography(from_points: FloatArray, to_points: FloatArray, trials: int = 600, seed: int = 0) -> FloatArray:
-    """The homography (3, 3) through four of the (n, 2) points with the least median distance to all `to_points`.
+def agreed_homography(
+    from_points: FloatArray, to_points: FloatArray, trials: int = 2000, seed: int = 0
+) -> tuple[FloatArray, NDArray[np.bool_]]:
+    """The homography (3, 3) that most of the (n, 2) points agree on best, and which those are (n,).
 
-    Least median of squares (Rousseeuw 1984): holds while less than half of the points are bad. The same seed gives the
-    same choice. With four points it is the homography through them.
+    Of homographies through four points each, the one whose agreement is least likely to be chance (a contrario, Moisan
+    and Stival 2004): with p_k the share of the field within the k-th smallest distance, chance is as rare as
+    C(n, k) C(k, 4) p_k**(k - 4). It needs no threshold and no majority. The same seed makes the same choice.
     """
     n = len(from_points)
-    if n <= 4:
-        return linear_homography(from_points, to_points)
-    fours = np.argsort(np.random.default_rng(seed).random((trials, n)), axis=1)[:, :4]
+    fours = np.argsort(np.random.default_rng(seed).random((trials if n > 4 else 1, n)), axis=1)[:, :4]
     with np.errstate(all="ignore"):
         planes = linear_homography(from_points[fours], to_points[fours])
         apart = np.linalg.norm(mapped(planes, from_points) - to_points, axis=-1)
-    # with 8 numbers fitted, the half that must agree is counted beyond the four used
-    rank = min(n - 1, (n + 4) // 2)
-    median = np.partition(np.where(np.isfinite(apart), apart, np.inf), rank, axis=1)[:, rank]
-    best = planes[int(np.argmin(median))]
-    close = apart[int(np.argmin(median))] <= 2.5 * max(float(median.min()), 1e-12)
-    return linear_homography(from_points[close], to_points[close]) if close.sum() >= 4 else best
+    apart = np.where(np.isfinite(apart), apart, np.inf)
+    size = np.maximum(np.ptp(to_points, axis=0), 1e-12)
+    # nothing is nearer than a millionth of the field: exact points would else agree by fours alone
+    share = np.clip(np.pi * np.sort(apart, axis=1) ** 2 / size.prod(), 1e-12, 1.0)
+    k = np.arange(4, n + 1)
+    chance = np.array([log(comb(n, int(i)) * comb(int(i), 4)) for i in k]) + (k - 4) * np.log(share[:, 3:])
+    best, many = np.unravel_index(int(np.argmin(chance)), chance.shape)
+    agreeing = apart[best] <= np.partition(apart[best], many + 3)[many + 3]
+    return linear_homography(from_points[agreeing], to_points[agreeing]), agreeing

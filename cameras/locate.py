@@ -19,6 +19,7 @@ Rows = NDArray[np.int64]
 SIGMA_PX = 0.3  # what a detection made elsewhere is taken to be good for, unless its table says otherwise
 SIGMA_MM = 0.3
 SIGMA_DEG = 0.5
+UNRECOGNISED = "unknown"  # as good as an empty name, where no kind is called that
 FARTHEST_MM = 1e6
 FARTHEST_PX = 1e6
 
@@ -56,9 +57,9 @@ def read_detections(
     """Sightings from `frame,part,u_px,v_px,angle_deg,score[,side][,sigma_px][,sigma_deg]`: grip frames in raw images.
 
     cameras: the map of each camera the recording names ("" where it names none). heights_mm: of the face that is seen,
-    z in the cell frame, for each kind; an empty `part` is a thing not recognised, at heights_mm[""] or in the
-    calibrated plane. A part not among the kinds is refused: it would be followed and never gripped. Without `side` all
-    lie up; sigmas default to SIGMA_PX and SIGMA_DEG. Raises InputFault naming file and line.
+    z in the cell frame, for each kind; an empty or `unknown` part is a thing not recognised, at heights_mm[""] or in
+    the calibrated plane. A part not among the kinds is refused: it would be followed and never gripped. Without `side`
+    all lie up; sigmas default to SIGMA_PX and SIGMA_DEG. Raises InputFault naming file and line.
     """
     path = Path(path)
     columns = {"frame": int, "part": str, "u_px": float, "v_px": float, "angle_deg": float, "score": float}
@@ -86,9 +87,9 @@ def read_detections(
 def read_located(path: str | Path, recording: Recording, kinds: Collection[str]) -> Sightings:
     """Sightings from `frame,part,x_mm,y_mm,yaw_deg,score[,side][,sigma_mm][,sigma_deg]`: poses in the cell frame.
 
-    Each pose is at the counts of its frame. An empty `part` is a thing not recognised; a part not among `kinds` is
-    refused. Without `side` all lie up; sigmas default to SIGMA_MM and SIGMA_DEG. Raises InputFault naming file and
-    line.
+    Each pose is at the counts of its frame. An empty or `unknown` part is a thing not recognised; a part not among
+    `kinds` is refused. Without `side` all lie up; sigmas default to SIGMA_MM and SIGMA_DEG. Raises InputFault naming
+    file and line.
     """
     path = Path(path)
     columns = {"frame": int, "part": str, "x_mm": float, "y_mm": float, "yaw_deg": float, "score": float}
@@ -106,6 +107,8 @@ def _checked(path: Path, table: dict[str, Column], recording: Recording, kinds: 
     rows = recording.row_of(table["frame"])
     _refuse(path, table, rows < 0, "frame", "is not in frames.csv", "use the numbers of its column frame")
     named = table["part"]
+    if UNRECOGNISED not in kinds:
+        named = np.where(named == UNRECOGNISED, "", named)
     strange = ~np.isin(named, ["", *kinds])
     if strange.any():
         near = difflib.get_close_matches(str(named[strange][0]), list(kinds), n=1, cutoff=0.0)

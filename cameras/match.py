@@ -18,7 +18,9 @@ from cameras.view import project, slopes
 FloatArray = NDArray[np.float64]
 
 HIT_PX = 1.2
+INNER_SHARE, INNER_WORTH = 0.45, 0.3  # of inner edges, what a part the right side up shows at the least; its weight
 PIXEL_SIGMA = 0.25
+DOWN_FACING, DOWN_AWAY, DOWN_SIGMA = 0.5, 0.8, 0.25  # of the height: what a part shows turned over was not taught
 CORRELATED = 3.0  # neighbouring edge points err together
 
 
@@ -27,13 +29,15 @@ class Template:
     """A model ready to be laid on images, for one side.
 
     points (n, 6): x, y, nx, ny in the grip frame (mirrored for the side down), grey step, group (0 outline, k inner).
-    heights (g,), sigmas (g,): foot and top of the outline's wall, then one of each inner contour.
-    outline (k, 2): polygon.
+    heights (g,), sigmas (g,): of the outline where it faces the camera and where away, then of each inner contour.
+    away (2,): how far the taught points would lie towards the camera's foot for each millimetre that they are higher
+    than `heights` says; zero where what is seen is not what was taught.  outline (k, 2): polygon.
     """
 
     points: FloatArray
     heights: FloatArray
     sigmas: FloatArray
+    away: FloatArray
     outline: FloatArray
     round: bool
 
@@ -43,21 +47,21 @@ def template_of(model: Model, down: bool) -> Template:
     groups = [model.outline] if down else [model.outline, *model.inner]
     points = np.concatenate([np.column_stack([one.points_mm, one.normals, one.steps, np.full(len(one.steps), float(k))])
                              for k, one in enumerate(groups)])
-    wall, top = model.outline.height_mm, model.height_mm
-    wall_sigma = model.outline.height_sigma_mm
+    top = model.height_mm
     if down:
-        heights, sigmas = [top - wall, top], [wall_sigma, 0.15 * top]
+        heights, sigmas = [DOWN_FACING * top, DOWN_AWAY * top], [DOWN_SIGMA * top] * 2
         points = points * np.array([1.0, -1.0, 1.0, -1.0, 1.0, 1.0])
     else:
-        heights = [0.0, wall] + [one.height_mm for one in model.inner]
-        sigmas = [0.05 * top, wall_sigma] + [one.height_sigma_mm for one in model.inner]
+        heights = [model.facing_height_mm, model.outline.height_mm] + [one.height_mm for one in model.inner]
+        sigmas = [model.facing_sigma_mm, model.outline.height_sigma_mm] + [one.height_sigma_mm for one in model.inner]
     outline = model.outline_mm[::-1] * np.array([1.0, -1.0]) if down else model.outline_mm.copy()
-    return Template(np.ascontiguousarray(points), np.array(heights), np.maximum(np.array(sigmas), 0.02),
+    away = np.zeros(2) if down else model.away.copy()
+    return Template(np.ascontiguousarray(points), np.array(heights), np.maximum(np.array(sigmas), 0.02), away,
                     np.ascontiguousarray(outline), model.turns == 0)  # fmt: skip
 
 
-@njit("i8(u1[:,::1], f8[:,::1], f8[:,::1], f8[::1], f8[::1], f8[::1], f8, f8, i8, f8, f8[:,::1], f8[:,::1])", cache=True)
-def _step(image, view, points, pose, heights, prior, reach, least, stride, with_edges, normal, out):  # type: ignore[no-untyped-def]
+@njit("i8(u1[:,::1], f8[:,::1], f8[:,::1], f8[::1], f8[::1], f8[::1], f8[::1], f8, f8, i8, f8, f8[:,::1], f8[:,::1])", cache=True)
+def _step(image, view, points, taught, pose, heights, prior, reach, least, stride, with_edges, normal, out):  # type: ignore[no-untyped-def]
     """Normal equations of one step. out (n, 4): residual px, step, hit, predicted inside; returns how many were hit."""
     size = 3 + heights.shape[0]
     normal[:, :] = 0.0
@@ -70,15 +74,17 @@ def _step(image, view, points, pose, heights, prior, reach, least, stride, with_
     det = local[0, 0] * local[1, 1] - local[0, 1] * local[1, 0]
     away_x = (local[1, 1] * local[0, 2] - local[0, 1] * local[1, 2]) / det
     away_y = (-local[1, 0] * local[0, 2] + local[0, 0] * local[1, 2]) / det
+    back_x, back_y = cosine * taught[0] - sine * taught[1], sine * taught[0] + cosine * taught[1]
     hits = 0
     for k in range(0, points.shape[0], stride):
-        px, py = points[k, 0], points[k, 1]
-        rx, ry = cosine * px - sine * py, sine * px + cosine * py
         nx, ny = cosine * points[k, 2] - sine * points[k, 3], sine * points[k, 2] + cosine * points[k, 3]
         group = int(points[k, 5])
         at = group + 1
         if group == 0:
             at = 1 if nx * away_x + ny * away_y > 0.0 else 0
+        higher = heights[at] - prior[at]
+        px, py = points[k, 0] - higher * taught[0], points[k, 1] - higher * taught[1]
+        rx, ry = cosine * px - sine * py, sine * px + cosine * py
         x, y, z = pose[0] + rx, pose[1] + ry, heights[at]
         u, v = project(view, x, y, z)
         slopes(view, x, y, z, local)
@@ -103,7 +109,7 @@ def _step(image, view, points, pose, heights, prior, reach, least, stride, with_
             hits += 1
         jx, jy = nu * local[0, 0] + nv * local[1, 0], nu * local[0, 1] + nv * local[1, 1]
         row[0], row[1], row[2] = jx, jy, -jx * ry + jy * rx
-        jz = nu * local[0, 2] + nv * local[1, 2]
+        jz = nu * local[0, 2] + nv * local[1, 2] - jx * back_x - jy * back_y
         for a in range(4):
             ia = a if a < 3 else 3 + at
             ja = row[a] if a < 3 else jz
@@ -137,8 +143,8 @@ def _solve(normal, prior, sigmas, heights, is_round, moved, shares, cov):  # typ
     moved[:] = cov @ right
 
 
-@njit("f8(u1[:,::1], f8[:,::1], f8[:,::1], f8[::1], f8[::1], f8[::1], f8, f8, f8, i8, i8, b1, f8[:,::1], f8[:,::1])", cache=True)
-def settle(image, view, points, pose, heights, sigmas, reach, last_reach, least, stride, steps, is_round, cov, out):  # type: ignore[no-untyped-def]
+@njit("f8(u1[:,::1], f8[:,::1], f8[:,::1], f8[::1], f8[::1], f8[::1], f8[::1], f8, f8, f8, i8, i8, b1, f8[:,::1], f8[:,::1])", cache=True)
+def settle(image, view, points, taught, pose, heights, sigmas, reach, last_reach, least, stride, steps, is_round, cov, out):  # type: ignore[no-untyped-def]
     """Gauss-Newton steps in place on `pose` (x, y from the place, yaw) and `heights`; the share of points met last.
 
     The reach shrinks evenly from `reach` to `last_reach`. cov: inverse of the last normal equations.
@@ -150,14 +156,14 @@ def settle(image, view, points, pose, heights, sigmas, reach, last_reach, least,
     hits = 0
     for k in range(steps):
         now = reach + (last_reach - reach) * k / max(steps - 1, 1)
-        hits = _step(image, view, points, pose, heights, prior, now, least, stride, 1.0, normal, out)
+        hits = _step(image, view, points, taught, pose, heights, prior, now, least, stride, 1.0, normal, out)
         _solve(normal, prior, sigmas, heights, is_round, moved, sigmas, cov)
         far = np.hypot(moved[0], moved[1])
         if not far < 4.0 or not abs(moved[2]) < 0.5:
             return -1.0
         pose += moved[:3]
         heights += moved[3:]
-    hits = _step(image, view, points, pose, heights, prior, last_reach, least, stride, 1.0, normal, out)
+    hits = _step(image, view, points, taught, pose, heights, prior, last_reach, least, stride, 1.0, normal, out)
     return hits / ((points.shape[0] + stride - 1) // stride)
 
 
@@ -196,19 +202,20 @@ def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, sta
     pose, heights = np.array(start, dtype=np.float64), template.heights.copy()
     size = 3 + len(heights)
     cov, out = np.empty((size, size)), np.zeros((len(template.points), 4))
-    share = settle(image, view, template.points, pose, heights, template.sigmas, 9.0, 4.0, least, 4, 4, template.round, cov, out)
+    share = settle(image, view, template.points, template.away, pose, heights, template.sigmas, 9.0, 4.0, least, 4, 4, template.round, cov, out)
     if share < promising:
         return None
     heights = template.heights.copy()
-    share = settle(image, view, template.points, pose, heights, template.sigmas, 3.0, 2.0, least, 1, 4, template.round, cov, out)
+    share = settle(image, view, template.points, template.away, pose, heights, template.sigmas, 3.0, 2.0, least, 1, 4, template.round, cov, out)
     if share < 0.0 or np.hypot(pose[0] - start[0], pose[1] - start[1]) > 6.0:
         return None
     outline = template.points[:, 5] == 0.0
     outline_share = float(np.mean(out[outline, 2]))
     inner_share = float(np.mean(out[~outline, 2])) if not outline.all() else 1.0
     score = float(np.mean(out[:, 2]))
+    worth = outline_share + (0.0 if outline.all() else INNER_WORTH * (inner_share - INNER_SHARE))
     scale = CORRELATED * PIXEL_SIGMA**2
     polygon = np.empty_like(template.outline)
     outline_pixels(view, template.outline, pose, 0.5 * (heights[0] + heights[1]), polygon)
     return Fit(pose, heights, float(np.sqrt(scale * 0.5 * (cov[0, 0] + cov[1, 1]))), float(np.sqrt(scale * cov[2, 2])),
-               outline_share, inner_share, score, outline_share + 0.3 * score, polygon)  # fmt: skip
+               outline_share, inner_share, score, worth, polygon)  # fmt: skip

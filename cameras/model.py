@@ -43,10 +43,11 @@ class Contour:
 class Model:
     """What a part of one kind looks like, right side up. Millimetres, grip frame (the tool tip at the origin).
 
-    outline_mm (k, 2): its plan as a polygon, counter-clockwise.  outline: points along it; their height is that of
-    the wall: seen from the side the outline is the wall's top where it faces away from the camera, its foot where it
-    faces the camera.  inner: edges inside the outline.  height_mm: of the top face.  turns: how many yaws look alike,
-    0 for all.  proposed_turns: what the outline alone suggests.  side_told: whether up can be told from down.
+    outline_mm (k, 2): its plan as a polygon, counter-clockwise.  outline: points along it; their height is that where
+    it faces away from the camera: there a wall's top is seen.  facing_height_mm, facing_sigma_mm: where it faces the
+    camera, down to the wall's foot.  inner: edges inside the outline.  height_mm: of the top face.  away (2,): how far
+    a point was seen displaced for each millimetre of height when taught.  turns: how many yaws look alike, 0 for all.
+    proposed_turns: what the outline alone suggests.  side_told: whether up can be told from down.
     """
 
     part: str
@@ -57,11 +58,15 @@ class Model:
     mirrored_alike: bool
     outline_mm: FloatArray
     outline: Contour
+    facing_height_mm: float
+    facing_sigma_mm: float
+    away: FloatArray
     inner: tuple[Contour, ...]
 
     def __post_init__(self) -> None:
         """Make the polygon read-only."""
         self.outline_mm.flags.writeable = False
+        self.away.flags.writeable = False
 
     @property
     def radius_mm(self) -> float:
@@ -74,6 +79,8 @@ class Model:
             "format": FORMAT, "part": self.part, "height_mm": self.height_mm, "turns": self.turns,
             "proposed_turns": self.proposed_turns, "side_told": self.side_told, "mirrored_alike": self.mirrored_alike,
             "outline_mm": np.round(self.outline_mm, 3).tolist(),
+            "away": np.round(self.away, 5).tolist(), "facing_height_mm": round(self.facing_height_mm, 3),
+            "facing_sigma_mm": round(self.facing_sigma_mm, 3),
             "outline": _packed(self.outline), "inner": [_packed(one) for one in self.inner],
         }, indent=None, separators=(",", ":")) + "\n"  # fmt: skip
 
@@ -124,6 +131,9 @@ class _Reader:
             side_told=self.flag(raw, "side_told"), mirrored_alike=self.flag(raw, "mirrored_alike"),
             outline_mm=self.table(raw, "outline_mm", "outline_mm", 2, 3),
             outline=self.contour(raw.get("outline"), "outline", 8),
+            facing_height_mm=self.number(raw, "facing_height_mm", -1000.0, 1000.0),
+            facing_sigma_mm=self.number(raw, "facing_sigma_mm", 0.0, 1000.0),
+            away=self.table({"away": [raw.get("away")]}, "away", "away", 2, 1)[0],
             inner=tuple(self.contour(one, f"inner[{k}]", 1) for k, one in enumerate(inner)),
         )  # fmt: skip
 

@@ -14,10 +14,14 @@ from scipy.spatial import ConvexHull
 
 from cameras.camera import CameraMap
 from cameras.faults import InputFault
-from cameras.lens import Lens
+from cameras.lens import NAMES, Lens
 from cameras.plane_start import linear_start
 
 FloatArray = NDArray[np.float64]
+K1 = NAMES.index("k1")
+FEWEST_FOR_DISTORTION = 9  # touches; with fewer, curvature and bad touches look alike
+_GATE = 4.0  # standard deviations; one good touch in 3000 lies beyond
+_FLOOR_MM = 1e-7  # residuals below it are rounding
 _ROUNDS = 20
 
 
@@ -27,6 +31,7 @@ class PlaneFit:
 
     residuals_mm (n, 2): mapped less touched.  left_out_mm (n, 2): the same under the map fitted without that touch.
     kept (n,): False for a touch left out of the fit as bad.  sigma_mm: standard deviation of one coordinate of a touch.
+    slope (n, 2, q): of the residuals over the q numbers fitted.
     """
 
     map: CameraMap
@@ -36,40 +41,54 @@ class PlaneFit:
     left_out_mm: FloatArray
     kept: NDArray[np.bool_]
     sigma_mm: float
+    slope: FloatArray
 
 
 def fit_plane(
-    pixels: ArrayLike, points: ArrayLike, lens: Lens | None = None, file: str | Path = "touches"
+    pixels: ArrayLike,
+    points: ArrayLike,
+    lens: Lens | None = None,
+    image_size_px: tuple[int, int] | None = None,
+    file: str | Path = "touches",
 ) -> CameraMap:
     """The map alone; see `fit_touches`."""
-    return fit_touches(pixels, points, lens, file).map
+    return fit_touches(pixels, points, lens, image_size_px, file).map
 
 
 def fit_touches(
-    pixels: ArrayLike, points: ArrayLike, lens: Lens | None = None, file: str | Path = "touches"
+    pixels: ArrayLike,
+    points: ArrayLike,
+    lens: Lens | None = None,
+    image_size_px: tuple[int, int] | None = None,
+    file: str | Path = "touches",
 ) -> PlaneFit:
     """Fit a map to marks seen at pixels (n, 2) and known at points (n, 2: z = 0, or n, 3) of the cell frame, mm.
 
-    With a lens the pose is fitted, and the lens within what its own covariance allows; without, the projection of a
-    pinhole camera where marks lie at two heights, else a homography to which height makes no difference.
+    With a lens the pose is fitted, and the lens within what its own covariance allows. Without one, the projection of a
+    pinhole camera where marks lie at two heights, else a homography to which height makes no difference; to either a
+    radial distortion about the middle of the image (of the marks, where its size is not given) if they ask for it.
     Raises InputFault, naming `file`, for fewer than four marks, marks on one line and numbers not finite.
     """
     pixels, points = _checked(np.asarray(pixels, np.float64), np.asarray(points, np.float64), file)
-    start = linear_start(pixels, points, lens, file)
-    free, tied = _free(start, points)
-    fitted, found = 2 * len(pixels) - (free.shape[1] - tied), start
-    off = _off(found, pixels, points)
-    kept, sigma = _agreeing(off, fitted, 6.0)
-    for _ in range(_ROUNDS):
-        found = _refined(start, free, tied, pixels[kept], points[kept], sigma)
-        off = _off(found, pixels, points)
-        before = kept
-        kept, sigma = _agreeing(off, fitted, 4.0)
-        if (before == kept).all():
-            break
-    if kept.sum() < max(4, len(kept) / 2):
-        raise InputFault(file, "", "the touches agree on no map", "check pixels, positions, counts and the lens file")
-    return _judged(found, free, tied, pixels, points, kept)
+    seen_by = _no_lens(pixels, image_size_px) if lens is None else lens
+    start, agreeing = linear_start(pixels, points, seen_by, lens is not None, file)
+    found = None
+    if lens is None and len(pixels) >= FEWEST_FOR_DISTORTION:
+        found = _settled(start, *_free(start, points, True), pixels, points, agreeing)
+        found = found if abs(found.map.lens.parameters[K1]) > 3 * found.map.lens.standard_errors[K1] else None
+    if found is None:
+        found = _settled(start, *_free(start, points, False), pixels, points, agreeing)
+    if found.kept.sum() < max(4, 0.3 * len(pixels)):
+        raise InputFault(file, "", f"only {found.kept.sum()} of {len(pixels)} touches agree on a map",
+                         "check pixels, positions, counts and the lens file")
+    return found
+
+
+def _no_lens(pixels: FloatArray, image_size_px: tuple[int, int] | None) -> Lens:
+    """Stands in for a lens: moves the middle to 0 and scales to a size near 1."""
+    middle = pixels.mean(axis=0) if image_size_px is None else (np.array(image_size_px) - 1) / 2
+    scale = float(np.linalg.norm(pixels - middle, axis=1).mean())
+    return Lens(np.array([scale, scale, *middle, 0, 0, 0, 0, 0]), image_size_px)
 
 
 def _checked(pixels: FloatArray, points: FloatArray, file: str | Path) -> tuple[FloatArray, FloatArray]:
@@ -87,10 +106,10 @@ def _checked(pixels: FloatArray, points: FloatArray, file: str | Path) -> tuple[
     return pixels, points
 
 
-def _free(start: CameraMap, points: FloatArray) -> tuple[FloatArray, int]:
-    """Directions (15 or 12, q) in which a map may change, and how many of the first are tied to the lens file.
+def _free(start: CameraMap, points: FloatArray, radial: bool) -> tuple[FloatArray, int]:
+    """Directions (15 or 21, q) in which a map may change, and how many of the first are tied to the lens file.
 
-    A tied direction is one standard deviation of the lens long.
+    A tied direction is one standard deviation of the lens long. Without a lens `radial` frees k1.
     """
     if start.basis == "pose":
         deviation = start.lens.standard_errors
@@ -109,8 +128,10 @@ def _free(start: CameraMap, points: FloatArray) -> tuple[FloatArray, int]:
     at = np.flatnonzero(some.ravel())
     along = (start.projection.ravel() / size)[at]
     across = np.linalg.svd(along[None])[2][1:].T
-    free = np.zeros((12, len(at) - 1))
-    free[at] = size[at, None] * across
+    free = np.zeros((21, len(at) - 1 + radial))
+    free[9 + at, radial:] = size[at, None] * across
+    if radial:
+        free[NAMES.index("k1"), 0] = 1.0
     return free, 0
 
 
@@ -119,16 +140,37 @@ def _off(found: CameraMap, pixels: FloatArray, points: FloatArray) -> FloatArray
     return np.nan_to_num(found.to_cell(pixels, points[:, 2]) - points[:, :2], nan=1e6)
 
 
-def _agreeing(off: FloatArray, fitted: int, times: float) -> tuple[NDArray[np.bool_], float]:
-    """Which touches lie within `times` standard deviations, and that deviation, from the median distance.
+def _settled(
+    start: CameraMap, free: FloatArray, tied: int, pixels: FloatArray, points: FloatArray, kept: NDArray[np.bool_]
+) -> PlaneFit:
+    """The fit to those touches that lie within the gate of it; from `kept`, until no touch joins or leaves.
 
-    The distance of a touch with equal Gaussian errors in x and y has the median 1.1774 standard deviations (Rayleigh).
-    `fitted`: residuals beyond the parameters fitted to them; none are turned away where there is hardly any.
+    First the gate goes by the median, so that a few bad touches do not widen it for one another; then, as the median
+    of a few touches is rough, by the standard deviation of those left.
     """
-    apart = np.linalg.norm(off, axis=1)
-    spread = float(np.median(apart)) / 1.1774 * np.sqrt(2 * len(off) / max(fitted, 1))
-    sigma = max(spread, 1e-7)
-    return (apart <= times * sigma) | (fitted < 4), sigma
+    sigma = max(float(np.sqrt((_off(start, pixels, points)[kept] ** 2).mean())), _FLOOR_MM)
+    spare = 2 * len(pixels) - (free.shape[1] - tied)
+    if spare < 4:  # with a touch to spare, none can be told to be the bad one
+        kept = np.ones(len(pixels), dtype=bool)
+    for by_median in (True, False):
+        for _ in range(_ROUNDS):
+            found = _refined(start, free, tied, pixels[kept], points[kept], sigma)
+            fit = _judged(found, free, tied, pixels, points, kept)
+            sigma = fit.sigma_mm
+            near = _near(fit, by_median)
+            if spare < 4 or (near == kept).all() or near.sum() < 4:
+                break
+            kept = near
+    return fit
+
+
+def _near(fit: PlaneFit, by_median: bool) -> NDArray[np.bool_]:
+    """Which touches lie within the gate; of one left out the map itself is uncertain too."""
+    apart, sigma = np.linalg.norm(fit.residuals_mm, axis=1), fit.sigma_mm
+    if by_median:  # of the distance with equal errors in x and y (Rayleigh): 1.1774 standard deviations
+        sigma = float(np.median(apart[fit.kept])) / 1.1774 * np.sqrt(2 * fit.kept.sum() / max(fit.map.freedom, 1.0))
+    doubt = np.where(fit.kept, 0.0, fit.map.sigma_mm(fit.points))
+    return np.asarray(apart <= _GATE * np.hypot(max(sigma, _FLOOR_MM), doubt))
 
 
 def _refined(
@@ -148,30 +190,39 @@ def _judged(
     found: CameraMap, free: FloatArray, tied: int, pixels: FloatArray, points: FloatArray, kept: NDArray[np.bool_]
 ) -> PlaneFit:
     """The fit with its covariance and leave-one-out residuals, from the slope of the residuals at the solution."""
-    off = _off(found, pixels, points)
-    slope = _slope(found, free, pixels, points)
-    used, prior = slope[kept], np.diag(np.arange(free.shape[1]) < tied).astype(float)
-    flat = used.reshape(-1, free.shape[1])
-    squares, freedom, sigma = float((off[kept] ** 2).sum()), 0.0, 1e-7
+    off, slope = _off(found, pixels, points), _slope(found, free, pixels, points)
+    flat, prior = slope[kept].reshape(-1, free.shape[1]), np.diag(np.arange(free.shape[1]) < tied)
+    squares, freedom, sigma = float((off[kept] ** 2).sum()), 0.0, _FLOOR_MM
     for _ in range(10):  # the weight of the lens file against the touches depends on sigma, and sigma on it
         inverse = _inverse(flat.T @ flat / sigma**2 + prior)
-        freedom = max(len(flat) - float(np.trace(flat @ inverse @ flat.T)) / sigma**2, 0.0)
-        sigma = max(np.sqrt(squares / max(freedom, 1.0)), 1e-7)
-    inverse = _inverse(flat.T @ flat / sigma**2 + prior)
-    lever = used @ inverse @ np.swapaxes(used, -1, -2) / sigma**2
-    left = off.copy()
-    with np.errstate(all="ignore"):
-        rest = np.eye(2) - lever
-        alone = np.linalg.det(rest) > 1e-9
-    left[kept] = np.where(alone[:, None], np.linalg.solve(np.where(alone[:, None, None], rest, np.eye(2)),
-                                                          off[kept][..., None])[..., 0], np.nan)
+        freedom = len(flat) - float(np.sum(flat @ inverse * flat)) / sigma**2
+        sigma = max(float(np.sqrt(squares / max(freedom, 1.0))), _FLOOR_MM)
+    if freedom < 0.5:  # nothing tells how good the touches are: a pixel is assumed
+        freedom, sigma = 0.0, float(np.median(found.mm_per_pixel(points)))
+        inverse = _inverse(flat.T @ flat / sigma**2 + prior)
+    left = _left_out(off, slope, inverse / sigma**2, kept)
     left_rms = float(np.sqrt((left[kept] ** 2).sum(axis=1).mean()))
+    covariance = free @ inverse @ free.T
     told = replace(
-        found, covariance=free @ inverse @ free.T, freedom=freedom, touches=int(kept.sum()),
+        found, covariance=covariance, lens=replace(found.lens, covariance=covariance[:9, :9]), freedom=freedom, touches=int(kept.sum()),
         rms_mm=float(np.sqrt(squares / kept.sum())), leave_one_out_rms_mm=left_rms if np.isfinite(left_rms) else None,
         touched_px=pixels[kept][ConvexHull(pixels[kept]).vertices],
     )  # fmt: skip
-    return PlaneFit(told, pixels, points, off, left, kept, sigma if freedom > 0 else float("nan"))
+    return PlaneFit(told, pixels, points, off, left, kept, sigma, slope)
+
+
+def _left_out(off: FloatArray, slope: FloatArray, inverse: FloatArray, kept: NDArray[np.bool_]) -> FloatArray:
+    """(n, 2) residual of each touch under the map fitted without it; NaN where the others do not determine it.
+
+    Residual over 1 less leverage (Cook and Weisberg 1982, section 2.2): exact where the map is linear in its numbers.
+    """
+    lever = slope[kept] @ inverse @ np.swapaxes(slope[kept], -1, -2)
+    rest = np.eye(2) - lever
+    lone = np.linalg.det(rest) < 1e-6
+    rest[lone] = np.nan
+    left = off.copy()
+    left[kept] = np.linalg.solve(rest, off[kept][..., None])[..., 0]
+    return left
 
 
 def _slope(found: CameraMap, free: FloatArray, pixels: FloatArray, points: FloatArray) -> FloatArray:

@@ -8,7 +8,7 @@ from numpy.typing import NDArray
 
 from cameras.camera import Basis, CameraMap
 from cameras.faults import InputFault
-from cameras.homography import normalising, robust_homography
+from cameras.homography import agreed_homography, mapped
 from cameras.lens import Lens
 
 FloatArray = NDArray[np.float64]
@@ -16,8 +16,13 @@ _OFF_PLANE_MM = 2.0  # a touch this far from the touched plane counts as one at 
 _OFF_PLANE_TOUCHES = 3  # that many of them fix the three numbers that height adds, with something to spare
 
 
-def linear_start(pixels: FloatArray, points: FloatArray, lens: Lens | None, file: str | Path) -> CameraMap:
-    """A map near enough to be refined, from the touches of the plane with most of them."""
+def linear_start(
+    pixels: FloatArray, points: FloatArray, lens: Lens, measured: bool, file: str | Path
+) -> tuple[CameraMap, NDArray[np.bool_]]:
+    """A map near enough to be refined, from the touches of the plane with most of them, and which (n,) agree on it.
+
+    `measured`: whether the lens was, so that a pose can be had; else it only shifts and scales pixels.
+    """
     heights = points[:, 2]
     near = np.abs(heights[:, None] - heights) <= _OFF_PLANE_MM
     on_plane = near[int(np.argmax(near.sum(axis=1)))]
@@ -25,40 +30,35 @@ def linear_start(pixels: FloatArray, points: FloatArray, lens: Lens | None, file
     if on_plane.sum() < 4 or thinness(points[on_plane, :2]) < 0.01:
         raise InputFault(file, "", "all marks of one height lie on a line, or they are fewer than 4",
                          "touch marks spread over the whole field")
-    seen_by = _shift_and_scale(pixels) if lens is None else lens
-    rays = seen_by.rays(pixels)
+    rays = lens.rays(pixels)
     if not np.isfinite(rays).all():
         at = int(np.argmin(np.isfinite(rays).all(axis=1)))
         raise InputFault(file, f"touch {at + 1}", "lies outside what the lens file describes", "check pixels and lens")
-    outline = robust_homography(rays[on_plane], points[on_plane, :2])
-    if np.linalg.cond(outline / np.abs(outline).max(axis=1, keepdims=True)) > 1e8:
+    to_cell, agree = agreed_homography(rays[on_plane], points[on_plane, :2])
+    if thinness(mapped(to_cell, rays[on_plane])[agree]) < 0.01 or np.linalg.cond(to_cell) > 1e9:
         raise InputFault(file, "", "too many of the marks lie on one line", "touch marks spread over the whole field")
-    columns: FloatArray = np.linalg.inv(outline).astype(np.float64)
-    columns /= columns[2] @ [*points[on_plane, :2].mean(axis=0), 1.0]
-    if lens is not None:
-        basis: Basis = "pose"
+    agreeing = np.zeros(len(pixels), dtype=bool)
+    agreeing[on_plane] = agree
+    columns: FloatArray = np.linalg.inv(to_cell).astype(np.float64)
+    columns /= columns[2] @ [*points[agreeing, :2].mean(axis=0), 1.0]
+    off_plane = np.flatnonzero(~on_plane)
+    basis: Basis = "pose" if measured else "rays" if len(off_plane) >= _OFF_PLANE_TOUCHES else "plane"
+    if basis == "pose":
         projection = _pose(columns, plane_mm)
     else:
-        basis = "rays" if (~on_plane).sum() >= _OFF_PLANE_TOUCHES else "plane"
         third = np.zeros(3)
         if basis == "rays":
-            third = _height_column(columns, rays[~on_plane], points[~on_plane], plane_mm)
+            third, agree = _height_column(columns, rays[off_plane], points[off_plane], plane_mm)
+            agreeing[off_plane] = agree
         projection = np.column_stack([columns[:, :2], third, columns[:, 2] - plane_mm * third])
-    size = 15 if basis == "pose" else 12
-    return CameraMap(basis, seen_by, projection, plane_mm, np.zeros((size, size)), 0.0, 0.0)
+    size = 15 if basis == "pose" else 21
+    return CameraMap(basis, lens, projection, plane_mm, np.zeros((size, size)), 0.0, 0.0), agreeing
 
 
 def thinness(points: FloatArray) -> float:
     """How wide a cloud of points (n, 2) is for its length: 0 on a line, 1 for a disc."""
     long, wide = np.linalg.svd(points - points.mean(axis=0), compute_uv=False)[:2]
     return float(wide / long) if long > 0 else 0.0
-
-
-def _shift_and_scale(pixels: FloatArray) -> Lens:
-    """Stands in for a lens: pixels brought near 0, sized near 1."""
-    norm = normalising(pixels)
-    scale = 1.0 / norm[0, 0]
-    return Lens(np.array([scale, scale, -norm[0, 2] * scale, -norm[1, 2] * scale, 0, 0, 0, 0, 0]))
 
 
 def _pose(columns: FloatArray, plane_mm: float) -> FloatArray:
@@ -70,8 +70,10 @@ def _pose(columns: FloatArray, plane_mm: float) -> FloatArray:
     return np.column_stack([turn, at - plane_mm * turn[:, 2]])
 
 
-def _height_column(columns: FloatArray, rays: FloatArray, points: FloatArray, plane_mm: float) -> FloatArray:
-    """The third column (3,) of a projection whose others are known, from marks off the plane.
+def _height_column(
+    columns: FloatArray, rays: FloatArray, points: FloatArray, plane_mm: float
+) -> tuple[FloatArray, NDArray[np.bool_]]:
+    """The third column (3,) of a projection whose others are known, from marks (n) off the plane; which agree on it.
 
     Of all pairs of marks (two fix it) the one whose column sees the other marks best, by their median.
     """
@@ -81,12 +83,12 @@ def _height_column(columns: FloatArray, rays: FloatArray, points: FloatArray, pl
     rows_u, rows_v = np.hstack([one, zero, -rays[:, :1]]), np.hstack([zero, one, -rays[:, 1:]])
     rows = up[..., None] * np.stack([rows_u, rows_v], axis=1)
     wanted = rays * flat[:, 2:] - flat[:, :2]
-    best, least = np.zeros(3), np.inf
+    best, least, agreeing = np.zeros(3), np.inf, np.ones(len(rays), dtype=bool)
     for first, second in combinations(range(min(len(rays), 24)), 2):
         pair = [first, second]
         third = np.linalg.lstsq(rows[pair].reshape(4, 3), wanted[pair].ravel(), rcond=None)[0]
         seen = flat + up * third
-        apart = float(np.median(np.linalg.norm(seen[:, :2] / seen[:, 2:] - rays, axis=1)))
-        if apart < least:
-            best, least = third, apart
-    return best
+        apart = np.linalg.norm(seen[:, :2] / seen[:, 2:] - rays, axis=1)
+        if np.median(apart) < least:
+            best, least, agreeing = third, float(np.median(apart)), apart <= 4 * np.median(apart) + 1e-9
+    return best, agreeing

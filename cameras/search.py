@@ -11,11 +11,16 @@ from numpy.typing import NDArray
 FloatArray = NDArray[np.float64]
 
 TURN_STEP_RAD = np.radians(6.0)
-MOST_HITS = 4096
+LEAST_SHARE = 0.65
+GLANCE = 14  # points looked at first
+GLANCE_LEAST = 7
+SLACK_CELLS = 3
+BLOCK_CELLS = 3
+TURN_BINS = 6
 
 
 def coarse_points(points: FloatArray, spacing_mm: float = 2.0) -> FloatArray:
-    """Every few millimetres one of a template's points (n, 6), outline first, in a fixed scattered order."""
+    """Every few millimetres one of a template's points (n, 6), in a fixed scattered order: x, y, nx, ny."""
     kept: list[int] = []
     xy = points[:, :2]
     for k in range(len(points)):
@@ -26,60 +31,92 @@ def coarse_points(points: FloatArray, spacing_mm: float = 2.0) -> FloatArray:
     return np.ascontiguousarray(points[chosen[order]][:, :4])
 
 
-@njit("i8(u1[:,::1], u1[:,::1], i4[:,::1], i8, f8[:,::1], f8[:,::1], f8[::1], i8, f8, i8[::1], f8, f8[:,::1])", cache=True)
-def placements(own, near, label, patch, points, affine, anchor, turns, step, box, least, out):  # type: ignore[no-untyped-def]
-    """Placements on one patch whose share of met points is `least` or more; out rows: score, column, row, turn rad.
+def peaks(blocks: FloatArray) -> FloatArray:
+    """Of the best placements (rows, columns, bins, 4) of blocks those no neighbour beats: (n, 4), best first."""
+    score = blocks[..., 0]
+    wide = np.pad(score, 1, constant_values=-1.0)
+    if score.shape[2] > 2:
+        wide[..., 0], wide[..., -1] = wide[..., -2], wide[..., 1]  # turns close on themselves
+    best = np.full_like(score, -1.0)
+    for j in range(3):
+        for i in range(3):
+            for k in range(3):
+                if (j, i, k) != (1, 1, 1):
+                    part = wide[j : j + score.shape[0], i : i + score.shape[1], k : k + score.shape[2]]
+                    earlier = (j, i, k) < (1, 1, 1)
+                    np.maximum(best, part if earlier else part - 1e-9, out=best)
+    found = blocks[(score > 0.0) & (score > best)]
+    return np.asarray(found[np.argsort(-found[:, 0], kind="stable")])
 
-    The score is the mean of the shares met within a cell and exactly.
 
+@njit("void(f8[:,::1], f8[:,::1], f8, i8[::1], i8[::1], u1[::1], f8[::1])", cache=True)
+def _turned(points, affine, angle, du, dv, mask, reach):  # type: ignore[no-untyped-def]
+    """Offsets in cells and direction masks of points turned by an angle; reach: least and greatest offsets."""
+    cosine, sine = np.cos(angle), np.sin(angle)
+    reach[0], reach[1], reach[2], reach[3] = 1e9, 1e9, -1e9, -1e9
+    for k in range(points.shape[0]):
+        x, y = cosine * points[k, 0] - sine * points[k, 1], sine * points[k, 0] + cosine * points[k, 1]
+        nx, ny = cosine * points[k, 2] - sine * points[k, 3], sine * points[k, 2] + cosine * points[k, 3]
+        u, v = affine[0, 0] * x + affine[0, 1] * y, affine[1, 0] * x + affine[1, 1] * y
+        du[k], dv[k] = int(np.round(u)), int(np.round(v))
+        tu, tv = -affine[0, 0] * ny + affine[0, 1] * nx, -affine[1, 0] * ny + affine[1, 1] * nx
+        sector = np.arctan2(-tu, tv) / (np.pi / 8)
+        first = int(np.floor(sector))
+        other = first + 1 if sector - first > 0.5 else first - 1
+        mask[k] = np.uint8((1 << (first & 7)) | (1 << (other & 7)))
+        reach[0], reach[1] = min(reach[0], u), min(reach[1], v)
+        reach[2], reach[3] = max(reach[2], u), max(reach[3], v)
+
+
+@njit("void(u1[:,::1], u1[:,::1], i4[:,::1], i8, f8[:,::1], f8[:,::1], f8[::1], i8, f8, i8[::1], f8[:,:,:,::1])", cache=True)
+def placements(own, near, label, patch, points, affine, anchor, turns, step, box, blocks):  # type: ignore[no-untyped-def]
+    """Best placement in each block of cells over one patch, and in each bin of turns: blocks (rows, columns, bins, 4).
+
+    Each: score (mean of the shares of points met within a cell and exactly; 0: none), column, row, turn in radians.
     affine (2, 2): cells per millimetre.  anchor (2,): a point well inside the outline, which must lie on the patch.
-    box: the patch's; a placement must keep within it, three cells of slack.  turns: how many steps of `step` radians.
+    box: the patch's, first and last column and row; a placement keeps within it but for some slack.
     """
     rows, columns = near.shape
     n = points.shape[0]
-    du, dv = np.empty(n, np.int64), np.empty(n, np.int64)
-    mask = np.empty(n, np.uint8)
-    allowed = int(n * (1.0 - least))
-    count = 0
-    slack = 3
+    du, dv, mask, reach = np.empty(n, np.int64), np.empty(n, np.int64), np.empty(n, np.uint8), np.empty(4)
+    blocks[:, :, :, 0] = 0.0
+    allowed = int(n * (1.0 - LEAST_SHARE))
     for turn in range(turns):
+        _turned(points, affine, turn * step, du, dv, mask, reach)
         cosine, sine = np.cos(turn * step), np.sin(turn * step)
-        low_u, low_v, high_u, high_v = 1e9, 1e9, -1e9, -1e9
-        for k in range(n):
-            x, y = cosine * points[k, 0] - sine * points[k, 1], sine * points[k, 0] + cosine * points[k, 1]
-            nx, ny = cosine * points[k, 2] - sine * points[k, 3], sine * points[k, 2] + cosine * points[k, 3]
-            u, v = affine[0, 0] * x + affine[0, 1] * y, affine[1, 0] * x + affine[1, 1] * y
-            du[k], dv[k] = int(np.round(u)), int(np.round(v))
-            tu, tv = -affine[0, 0] * ny + affine[0, 1] * nx, -affine[1, 0] * ny + affine[1, 1] * nx
-            sector = np.arctan2(-tu, tv) / (np.pi / 8)
-            first = int(np.floor(sector))
-            other = first + 1 if sector - first > 0.5 else first - 1
-            mask[k] = np.uint8((1 << (first & 7)) | (1 << (other & 7)))
-            low_u, high_u = min(low_u, u), max(high_u, u)
-            low_v, high_v = min(low_v, v), max(high_v, v)
-        au = int(np.round(affine[0, 0] * (cosine * anchor[0] - sine * anchor[1]) + affine[0, 1] * (sine * anchor[0] + cosine * anchor[1])))
-        av = int(np.round(affine[1, 0] * (cosine * anchor[0] - sine * anchor[1]) + affine[1, 1] * (sine * anchor[0] + cosine * anchor[1])))
-        from_u = max(int(np.ceil(box[0] - slack - low_u)), int(np.ceil(-low_u)))
-        to_u = min(int(np.floor(box[2] + slack - high_u)), int(np.floor(columns - 1 - high_u)))
-        from_v = max(int(np.ceil(box[1] - slack - low_v)), int(np.ceil(-low_v)))
-        to_v = min(int(np.floor(box[3] + slack - high_v)), int(np.floor(rows - 1 - high_v)))
-        for j in range(from_v, to_v + 1):
-            for i in range(from_u, to_u + 1):
-                aj, ai = j + av, i + au
-                if aj < 0 or ai < 0 or aj >= rows or ai >= columns or label[aj, ai] != patch:
+        ax, ay = cosine * anchor[0] - sine * anchor[1], sine * anchor[0] + cosine * anchor[1]
+        au = int(np.round(affine[0, 0] * ax + affine[0, 1] * ay))
+        av = int(np.round(affine[1, 0] * ax + affine[1, 1] * ay))
+        from_u = int(np.ceil(max(box[0] - SLACK_CELLS, 0) - reach[0]))
+        from_v = int(np.ceil(max(box[1] - SLACK_CELLS, 0) - reach[1]))
+        to_u = int(np.floor(min(box[2] + SLACK_CELLS, columns - 1) - reach[2]))
+        to_v = int(np.floor(min(box[3] + SLACK_CELLS, rows - 1) - reach[3]))
+        part = int(turn * blocks.shape[2] / turns)
+        for j in range(max(from_v, -av), min(to_v, rows - 1 - av) + 1):
+            for i in range(max(from_u, -au), min(to_u, columns - 1 - au) + 1):
+                if label[j + av, i + au] != patch:
                     continue
-                missed = 0
-                exact = 0
+                missed, exact = 0, 0
                 for k in range(n):
                     r, c = j + dv[k], i + du[k]
                     if r < 0 or c < 0 or r >= rows or c >= columns or near[r, c] & mask[k] == 0:
                         missed += 1
-                        if missed > allowed:
+                        if missed > allowed or (k < GLANCE and missed > GLANCE - GLANCE_LEAST):
+                            missed = n
                             break
                     elif own[r, c] & mask[k] != 0:
                         exact += 1
-                if missed <= allowed and count < out.shape[0]:
-                    out[count, 0] = 0.5 * (n - missed + exact) / n
-                    out[count, 1], out[count, 2], out[count, 3] = i, j, turn * step
-                    count += 1
-    return count
+                if missed > allowed:
+                    continue
+                score = 0.5 * (n - missed + exact) / n
+                bj = min(max((j - box[1]) // BLOCK_CELLS + 8, 0), blocks.shape[0] - 1)
+                bi = min(max((i - box[0]) // BLOCK_CELLS + 8, 0), blocks.shape[1] - 1)
+                if score > blocks[bj, bi, part, 0]:
+                    blocks[bj, bi, part, 0], blocks[bj, bi, part, 1] = score, i
+                    blocks[bj, bi, part, 2], blocks[bj, bi, part, 3] = j, turn * step
+
+
+def room_for(box: NDArray[np.int64], turns: int) -> FloatArray:
+    """An array for the best placements over a patch's box: a part's grip point may lie some way outside it."""
+    rows, columns = (int(box[3] - box[1]) // BLOCK_CELLS + 17, int(box[2] - box[0]) // BLOCK_CELLS + 17)
+    return np.empty((rows, columns, min(turns, TURN_BINS), 4))

@@ -112,18 +112,29 @@ def _to_line(points: FloatArray, first: FloatArray, second: FloatArray, apart: F
     return np.where(length > 1e-9, np.minimum(across, apart), apart)
 
 
-def wall_height(pixels: FloatArray, frame: Frame, top_mm: float, turns: int) -> tuple[float, float]:
-    """Height of the outline's wall, and its sigma, at which the plan of the outline (pixels (n, 2)) repeats itself."""
+def wall_heights(
+    pixels: FloatArray, frame: Frame, top_mm: float, turns: int
+) -> tuple[tuple[float, float], float]:
+    """Heights of the outline (pixels (n, 2)) where it faces the camera and where away, at which its plan repeats; sigma."""
     foot = frame.from_pixels(pixels, 0.0)
     along = np.roll(foot, -2, axis=0) - np.roll(foot, 2, axis=0)
     normal = np.column_stack([along[:, 1], -along[:, 0]])
     x, y = foot.T
     if np.sum(x * np.roll(y, -1) - y * np.roll(x, -1)) < 0.0:
         normal = -normal
-    facing = (normal @ frame.away() > 0.0)[:, None]
-    heights = np.linspace(0.0, top_mm, HEIGHT_STEPS)
-    cost = np.array([_misses(np.where(facing, frame.from_pixels(pixels, h), foot)[::2], turns) for h in heights])
-    return _least(heights, cost, frame, len(pixels) // 2, top_mm)
+    away = (normal @ frame.away() > 0.0)[:, None]
+    steps = np.linspace(0.0, top_mm, HEIGHT_STEPS)
+    levels = [frame.from_pixels(pixels, h) for h in steps]
+    best = np.array([0, 0])
+    cost = np.array([_misses(level[::2], turns) for level in levels])
+    best[:] = int(np.argmin(cost))
+    for side in (0, 1, 0, 1):
+        cost = np.array([_misses(np.where(away, levels[best[1] if side == 0 else k], levels[k if side == 0 else best[0]])[::2],
+                                 turns) for k in range(len(steps))])  # fmt: skip
+        best[side] = int(np.argmin(cost))
+    slope = float(np.linalg.norm(frame.away()))
+    sigma = min(0.05 / max(slope, 1e-6), 0.25 * top_mm)
+    return (float(steps[best[0]]), float(steps[best[1]])), max(sigma, 0.03 * top_mm)
 
 
 def edge_height(line: FloatArray, every: FloatArray, frame: Frame, top_mm: float, turns: int) -> tuple[float, float]:

@@ -11,7 +11,7 @@ from cameras.edges import MOST_SAMPLES, edge_along, edge_map
 from cameras.faults import InputFault
 from cameras.model import MOST_CONTOURS, Contour, Model
 from cameras.outline import rough_outline
-from cameras.symmetry import alike_under_turn, edge_height, repeated, turns_seen, wall_height
+from cameras.symmetry import alike_under_turn, edge_height, repeated, turns_seen, wall_heights
 from cameras.view import CameraMap
 
 FloatArray = NDArray[np.float64]
@@ -20,8 +20,7 @@ Grey = NDArray[np.uint8]
 SPACING_MM = 0.8
 LEAST_INNER_MM = 4.0
 MARGIN_PX = 14
-UNKNOWN_WALL = 0.6  # of the height, where one view cannot tell it
-UNKNOWN_WALL_SIGMA = 0.3
+UNKNOWN_FACING, UNKNOWN_AWAY, UNKNOWN_SIGMA = 0.5, 0.6, 0.25  # of the height, where one view cannot tell it
 
 
 @dataclass(frozen=True)
@@ -69,15 +68,17 @@ def teach(grey: Grey, camera: CameraMap, surface_mm: float, taught: Taught, file
     if len(chain) < 8:
         raise InputFault(file, "--tool", "no outline can be told from the belt", "take a sharper image, or change the light")
     pixels, steps = snapped(grey, chain)
-    wall, sigma = UNKNOWN_WALL * taught.height_mm, UNKNOWN_WALL_SIGMA * taught.height_mm
+    top = taught.height_mm
+    heights, sigma = (UNKNOWN_FACING * top, UNKNOWN_AWAY * top), UNKNOWN_SIGMA * top
     if taught.turns != 1:
-        wall, sigma = wall_height(pixels, frame, taught.height_mm, taught.turns)
-    outline, polygon = _outline(pixels, steps, frame, wall, sigma)
-    inner = _inner(grey, polygon, frame, taught, wall)
+        heights, sigma = wall_heights(pixels, frame, top, taught.turns)
+    outline, polygon = _outline(pixels, steps, frame, heights, sigma)
+    inner = _inner(grey, polygon, frame, taught)
     mirrored = alike_under_turn(polygon, polygon * np.array([1.0, -1.0]), mirrored=True)
     edge_mm = SPACING_MM * sum(len(one.steps) for one in inner)
     told = not mirrored or edge_mm > 0.15 * SPACING_MM * len(outline.steps)
-    return Model(taught.part, taught.height_mm, taught.turns, turns_seen(polygon), told, mirrored, polygon, outline, inner)
+    return Model(taught.part, taught.height_mm, taught.turns, turns_seen(polygon), told, mirrored, polygon,
+                 outline, heights[0], sigma, frame.away(), inner)
 
 
 def _window(grey: Grey, frame: GripFrame, taught: Taught, file: str) -> tuple[Grey, FloatArray, NDArray[np.uint8]]:
@@ -152,12 +153,11 @@ def snapped(grey: Grey, chain: FloatArray) -> tuple[FloatArray, FloatArray]:
 
 
 def _outline(
-    pixels: FloatArray, steps: FloatArray, frame: GripFrame, wall: float, sigma: float
+    pixels: FloatArray, steps: FloatArray, frame: GripFrame, heights: tuple[float, float], sigma: float
 ) -> tuple[Contour, FloatArray]:
     """The outline's plan: seen points brought to the foot or the top of the wall, as they face the camera or not."""
-    foot, top = frame.from_pixels(pixels, 0.0), frame.from_pixels(pixels, wall)
-    facing = outward(foot) @ frame.away()
-    plan = np.where(facing[:, None] > 0.0, top, foot)
+    near, far = frame.from_pixels(pixels, heights[0]), frame.from_pixels(pixels, heights[1])
+    plan = np.where((outward(near) @ frame.away() > 0.0)[:, None], far, near)
     size = float(np.linalg.norm(np.diff(plan, axis=0), axis=1).sum())
     polygon = even(plan, 0.4, 0.25)
     if _area(polygon) < 0.0:
@@ -167,7 +167,7 @@ def _outline(
     nearest = np.argmin(np.linalg.norm(points[:, None] - plan[None], axis=2), axis=1)
     spread = cv2.blur(np.ascontiguousarray(steps[nearest][:, None]), (1, 5)).ravel()
     spread = spread if size > 0 else steps[nearest]
-    return Contour(points, normals, spread, wall, sigma), polygon
+    return Contour(points, normals, spread, heights[1], sigma), polygon
 
 
 def _area(polygon: FloatArray) -> float:
@@ -175,7 +175,7 @@ def _area(polygon: FloatArray) -> float:
     return 0.5 * float(np.sum(x * np.roll(y, -1) - y * np.roll(x, -1)))
 
 
-def _inner(grey: Grey, polygon: FloatArray, frame: GripFrame, taught: Taught, wall: float) -> tuple[Contour, ...]:
+def _inner(grey: Grey, polygon: FloatArray, frame: GripFrame, taught: Taught) -> tuple[Contour, ...]:
     """The longest edges inside the outline, each at the height that fits the part's symmetry, or the top face's."""
     top = taught.height_mm
     shape = frame.to_pixels(polygon, 0.5 * top)
@@ -198,7 +198,7 @@ def _inner(grey: Grey, polygon: FloatArray, frame: GripFrame, taught: Taught, wa
         j, i = np.nonzero(label == k)
         if len(i) >= 6:
             kept.append(_sharp(grey, np.column_stack([i, j]) + low, dx[j, i], dy[j, i]))
-    return _levelled([one for one in kept if len(one) >= 4], frame, taught, wall)
+    return _levelled([one for one in kept if len(one) >= 4], frame, taught)
 
 
 def _sharp(grey: Grey, pixels: NDArray[np.int64], dx: NDArray[np.int16], dy: NDArray[np.int16]) -> FloatArray:
@@ -216,7 +216,7 @@ def _sharp(grey: Grey, pixels: NDArray[np.int64], dx: NDArray[np.int16], dy: NDA
     return np.array(rows).reshape(-1, 5)
 
 
-def _levelled(lines: list[FloatArray], frame: GripFrame, taught: Taught, wall: float) -> tuple[Contour, ...]:
+def _levelled(lines: list[FloatArray], frame: GripFrame, taught: Taught) -> tuple[Contour, ...]:
     """Inner lines in the grip frame at their heights, thinned; for symmetric parts only what repeats."""
     top = taught.height_mm
     every = np.concatenate(lines) if lines else np.zeros((0, 5))

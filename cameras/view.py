@@ -96,3 +96,17 @@ def slopes(c, x, y, z, out):  # type: ignore[no-untyped-def]
         out[k, 1] = c[k, 2] + x * c[k, 4] + 2 * y * c[k, 5] + x * x * c[k, 7] + 2 * x * y * c[k, 8] \
             + 3 * y * y * c[k, 9] + z * c[k, 12]  # fmt: skip
         out[k, 2] = c[k, 10] + x * c[k, 11] + y * c[k, 12] + 2 * z * c[k, 13]
+
+
+@njit("void(f8[:,::1], f8, f8, f8, f8[::1])", cache=True)
+def unproject(c, u, v, z, out):  # type: ignore[no-untyped-def]
+    """The point (2,) at height z that is seen at pixel u, v; by Newton's method from the place itself."""
+    local = np.empty((2, 3))
+    out[0], out[1] = 0.0, 0.0
+    for _ in range(4):
+        slopes(c, out[0], out[1], z, local)
+        at_u, at_v = project(c, out[0], out[1], z)
+        det = local[0, 0] * local[1, 1] - local[0, 1] * local[1, 0]
+        du, dv = u - at_u, v - at_v
+        out[0] += (local[1, 1] * du - local[0, 1] * dv) / det
+        out[1] += (local[0, 0] * dv - local[1, 0] * du) / det
