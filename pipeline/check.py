@@ -84,8 +84,8 @@ def _slots(reacher: Reacher) -> Iterator[Verdict]:
     for place in reacher.slots():
         served = place.share[:, 2] > 0
         missing = ", ".join(str(slot) for slot in place.slot[~served][:8])
-        found = f"all {len(place)} slots served" if served.all() else f"{served.sum()} of {len(place)} slots served, not {missing}"
-        yield Verdict(f"place {place.where[0]}", bool(served.all()), found)
+        found = f"{served.sum()} of {len(place)} slots served" + (f", not {missing}" if missing else "")
+        yield Verdict(f"place {place.where[0]}", not missing, found)
 
 
 def _carry(cell: Cell) -> Iterator[Verdict]:

@@ -28,6 +28,8 @@ FOLDS = 10
 LEAST_TIMING_S = 1e-4  # no stopwatch is taken to be better than this when asked what a table can tell
 VAGUE = 0.25  # a limit known no better than to this share is not identified
 FARTHEST = np.log(100.0)  # a limit is sought within this factor of the cell file's
+GRID = np.log(np.geomspace(1 / 16, 16, 13))  # factors on each limit that a start is looked for among
+GRID_ROUNDS = 3
 RISE_S = 0.02  # the rise of the acceleration to start from where the cell file has no jerk limit
 
 
@@ -79,7 +81,7 @@ def fit_moves(moves: Moves, arm: Arm) -> Fit:
     found = _least_squares(moves, guess)
     residual = _residual(found, moves)
     error = _share_error(found, moves, residual)
-    identified = error <= VAGUE
+    identified = (error <= VAGUE) & _bounded(moves, found, error)
     kept = np.where(identified, np.exp(found), _limits_of(arm))
     unlimited = np.column_stack([np.zeros((4, 2), bool), np.isinf(arm.limits.jerk)]) & ~identified
     return Fit(np.where(unlimited, np.inf, kept), error, identified, residual, _rms(residual),
@@ -109,17 +111,66 @@ def _residual(logs: Floats, moves: Moves) -> Floats:
 
 
 def _least_squares(moves: Moves, guess: Floats) -> Floats:
-    """Logarithms (4, 3) of the limits; the pull to the guess is far below the noise and holds what no move feels."""
+    """Logarithms (4, 3) of the limits."""
+    starts = [guess, _nearby(moves, guess)]
+    return min((_descend(moves, guess, start)[0] for start in starts), key=lambda logs: _cost(logs, moves))
 
-    def misfit(logs: Floats) -> Floats:
-        return np.concatenate([_residual(logs.reshape(4, 3), moves), 1e-6 * (logs - guess.ravel())])
 
-    rates = np.linspace(-1.5, 1.5, 13)  # the whole arm slower or quicker in time, to start near
-    rough = [guess + rate * np.array([1, 2, 3]) for rate in rates]
-    starts = [guess, min(rough, key=lambda logs: float(np.sum(_residual(logs, moves) ** 2)))]
-    bounds = (guess.ravel() - FARTHEST, guess.ravel() + FARTHEST)
-    fits = [least_squares(misfit, start.ravel(), bounds=bounds, x_scale=0.1, xtol=1e-10) for start in starts]
-    return np.asarray(min(fits, key=lambda fit: float(fit.cost)).x.reshape(4, 3))
+def _descend(moves: Moves, guess: Floats, start: Floats, held: int = -1) -> tuple[Floats, float]:
+    """Least squares from a start, with one of the twelve held if asked: logarithms (4, 3), sum of squares.
+
+    The pull to the guess is far below the noise: it keeps still what no move feels.
+    """
+    free = np.arange(12) != held
+
+    def whole(part: Floats) -> Floats:
+        logs = start.ravel().copy()
+        logs[free] = part
+        return logs.reshape(4, 3)
+
+    def misfit(part: Floats) -> Floats:
+        return np.concatenate([_residual(whole(part), moves), 1e-6 * (part - guess.ravel()[free])])
+
+    middle = guess.ravel()[free]
+    first = np.clip(start.ravel()[free], middle - FARTHEST, middle + FARTHEST)
+    bounds = (middle - 1.001 * FARTHEST, middle + 1.001 * FARTHEST)
+    logs = whole(least_squares(misfit, first, bounds=bounds, x_scale=0.1, xtol=1e-10).x)
+    return logs, _cost(logs, moves)
+
+
+def _cost(logs: Floats, moves: Moves) -> float:
+    return float(np.sum(_residual(logs, moves) ** 2))
+
+
+def _bounded(moves: Moves, found: Floats, error: Floats) -> NDArray[np.bool_]:
+    """Whether the moves speak against each limit (4, 3) being VAGUE less and VAGUE more, the others fitted anew.
+
+    The profile sum of squares has to rise by twice the noise, squared (Seber, Wild, section 5.2): the errors from
+    the slopes alone take no notice of a limit that is felt from one side only.
+    """
+    least = _cost(found, moves)
+    rise = 4 * max(least / max(len(moves) - 12, 1), LEAST_TIMING_S**2)
+    bounded = error <= VAGUE
+    for k in np.flatnonzero(bounded):
+        for off in (-VAGUE, VAGUE):
+            start = found + off * np.eye(12)[k].reshape(4, 3)
+            bounded.flat[k] &= _descend(moves, found, start, int(k))[1] > least + rise
+    return bounded
+
+
+def _nearby(moves: Moves, guess: Floats) -> Floats:
+    """The best of a grid of limits, one joint after the other, so that the descent starts in the right valley."""
+    way = moves.end - moves.start
+    logs = guess.copy()
+    steps = np.stack(np.meshgrid(GRID, GRID, GRID), axis=-1).reshape(-1, 3)
+    for joint in (0, 1, 2, 3) * GRID_ROUNDS:
+        times = axis_time(way, *np.exp(logs).T)
+        times[:, joint] = 0.0
+        tried = guess[joint] + steps
+        own = axis_time(way[:, joint, None], *np.exp(tried).T)  # (n, tried)
+        misses = moves.time_s[:, None] - np.maximum(own, times.max(axis=1)[:, None])
+        logs[joint] = tried[np.argmin((misses**2).sum(axis=0))]
+    return logs
 
 
 def _share_error(logs: Floats, moves: Moves, residual: Floats) -> Floats:
