@@ -75,7 +75,7 @@ def fit_touches(
     found = None
     if lens is None and len(pixels) >= FEWEST_FOR_DISTORTION:
         found = _settled(start, *_free(start, points, True), pixels, points, agreeing)
-        found = found if abs(found.map.lens.parameters[K1]) > 3 * found.map.lens.standard_errors[K1] else None
+        found = found if abs(found.map.lens.parameters[K1]) > 2 * found.map.lens.standard_errors[K1] else None
     if found is None:
         found = _settled(start, *_free(start, points, False), pixels, points, agreeing)
     if found.kept.sum() < max(4, 0.3 * len(pixels)):
@@ -204,7 +204,8 @@ def _judged(
     left_rms = float(np.sqrt((left[kept] ** 2).sum(axis=1).mean()))
     covariance = free @ inverse @ free.T
     told = replace(
-        found, covariance=covariance, lens=replace(found.lens, covariance=covariance[:9, :9]), freedom=freedom, touches=int(kept.sum()),
+        found, covariance=covariance, freedom=freedom, touches=int(kept.sum()),
+        lens=replace(found.lens, covariance=covariance[:9, :9]),
         rms_mm=float(np.sqrt(squares / kept.sum())), leave_one_out_rms_mm=left_rms if np.isfinite(left_rms) else None,
         touched_px=pixels[kept][ConvexHull(pixels[kept]).vertices],
     )  # fmt: skip
