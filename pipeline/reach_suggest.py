@@ -12,10 +12,9 @@ from pipeline.reach import Reacher, yaws_of
 Floats = NDArray[np.float64]
 
 STEP_MM = 10.0
-SHIFTS_MM = np.arange(-120.0, 121.0, 20.0)
+SHIFTS_MM = np.arange(-120.0, 121.0, 30.0)
 LANES, ROWS, ANGLES = 5, 12, 24  # points and yaws looked at for each base position
 NEARLY = 0.95  # a point counts as gripped where this share of the best point's yaws can be
-LANES_SHARE = 0.98  # a lane counts as good as the best where this share of its window is gripped
 
 
 @dataclass(frozen=True)
@@ -68,7 +67,7 @@ def _merit(one: Reacher, here: Reacher, lanes: tuple[float, float]) -> tuple[int
 
 
 def _best_lanes(here: Reacher) -> tuple[float, float]:
-    """The widest band across the belt whose lanes are gripped along the whole window, or nearly as far as the best."""
+    """The band across the belt of which most is gripped: its width times the share of the window of its worst lane."""
     spots = here.window(STEP_MM, ANGLES)
     share = spots.share[:, 2]
     if not share.any():
@@ -78,7 +77,9 @@ def _best_lanes(here: Reacher) -> tuple[float, float]:
     lanes = np.unique(across)
     gripped = share >= NEARLY * share.max()
     covered = np.array([gripped[across == lane].mean() for lane in lanes])
-    return _longest_run(covered >= LANES_SHARE * covered.max(), lanes) or (float(lanes[0]), float(lanes[-1]))
+    bands = [(first, last) for first in range(len(lanes)) for last in range(first, len(lanes))]
+    first, last = max(bands, key=lambda band: (band[1] - band[0] + 1) * covered[band[0]:band[1] + 1].min())
+    return float(lanes[first]), float(lanes[last])
 
 
 def _longest_window(one: Reacher, lanes: tuple[float, float]) -> tuple[float, float] | None:
