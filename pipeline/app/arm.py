@@ -5,7 +5,8 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from pipeline.app.shown import show_table, written_whole
+from cameras.written import written_whole
+from pipeline.app.shown import show_table
 
 if TYPE_CHECKING:
     from pipeline.cell import Cell
