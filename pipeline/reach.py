@@ -22,6 +22,7 @@ Floats = NDArray[np.float64]
 TURNING = [0, 1, 3]
 J4_TURNS = np.arange(-2, 3)
 BLOCK = 20_000  # poses looked at together
+MOST_STATIONS = 200  # along and across a window, however large it is
 
 
 @dataclass(frozen=True, eq=False)
@@ -39,7 +40,7 @@ class Postures:
 class Spots:
     """n points seen over a number of tool yaws each: one row of reach.csv a point."""
 
-    where: tuple[str, ...]  # (n,) "window", or the place
+    where: tuple[str, ...]  # (n,) "window" of the belt, "surface" of a tray, or the place
     slot: NDArray[np.int64]  # (n,) number of the slot, -1 in the window
     tip_mm: Floats  # (n, 3)
     angles: NDArray[np.int64]  # (n,) how many yaws were looked at
@@ -121,9 +122,8 @@ class Reacher:
         """The belt window, or all around the arm where there is none, as far as the arm reaches to either side."""
         along, across, reach = self.span_mm()
         low, high = (self.cell.belt and self.cell.belt.window_mm) or (along - reach, along + reach)
-        s = np.linspace(low, high, max(2, 1 + round((high - low) / step_mm)))
-        w = np.arange(across - reach, across + reach + step_mm / 2, step_mm)
-        return self.spots("window", self.grid_mm(s, w), yaws_of(angles))
+        grid = self.grid_mm(stations(low, high, step_mm), stations(across - reach, across + reach, step_mm))
+        return self.spots("window" if self.cell.belt else "surface", grid, yaws_of(angles))
 
     @property
     def grasp_mm(self) -> float:
@@ -146,6 +146,11 @@ class Reacher:
 def yaws_of(number: int) -> Floats:
     """Yaws (number,) that share a turn evenly, from 0, rad."""
     return 2 * np.pi * np.arange(number) / number
+
+
+def stations(low: float, high: float, step_mm: float) -> Floats:
+    """Distances from low to high, about a step apart."""
+    return np.linspace(low, high, min(max(2, 1 + round((high - low) / step_mm)), MOST_STATIONS))
 
 
 def _summed(postures: Postures, n: int, m: int) -> tuple[Floats, Floats, Floats, NDArray[np.int64], Floats]:

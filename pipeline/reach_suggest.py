@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 
 from cameras.faults import InputFault
 from pipeline.cell import Cell
-from pipeline.reach import Reacher, yaws_of
+from pipeline.reach import Reacher, stations, yaws_of
 
 Floats = NDArray[np.float64]
 
@@ -85,10 +85,11 @@ def _best_lanes(here: Reacher) -> tuple[float, float]:
 def _longest_window(one: Reacher, lanes: tuple[float, float]) -> tuple[float, float] | None:
     """The longest stretch along the belt on which every lane is gripped at nearly as many yaws as at the best point."""
     along, _, reach = one.span_mm()
-    steps = np.arange(np.ceil((along - reach) / STEP_MM), (along + reach) / STEP_MM) * STEP_MM
+    steps = stations(np.ceil((along - reach) / STEP_MM) * STEP_MM, along + reach, STEP_MM)
     spots = one.spots("window", one.grid_mm(steps, np.linspace(*lanes, LANES)), yaws_of(ANGLES))
     share = spots.share[:, 2].reshape(len(steps), LANES).min(axis=1)
-    return _longest_run((share >= NEARLY * share.max()) & (share > 0), steps)
+    run = _longest_run((share >= NEARLY * share.max()) & (share > 0), steps)
+    return None if run is None else (float(np.ceil(run[0])), float(np.floor(run[1])))
 
 
 def _longest_run(good: NDArray[np.bool_], at: Floats) -> tuple[float, float] | None:
