@@ -4,6 +4,9 @@ from pathlib import Path
 
 import pytest
 
+from cameras.boards import checked_board, view_of
+from cameras.lens_fit import LensFit, fit_lens
+
 ROOT = Path(__file__).resolve().parents[1]
 
 
@@ -31,3 +34,14 @@ def recordings_folder() -> Path:
 def demo() -> Path:
     """The recording that comes with the project."""
     return ROOT / "demo_images" / "bells"
+
+
+@pytest.fixture(scope="session")
+def lens_fits(recordings_folder: Path) -> dict[str, LensFit]:
+    """The lens of two rendered recordings, fitted to their own board images."""
+    board = checked_board("9x6", 20.0, "", 0.0)
+    fits = {}
+    for name in ("bells", "mixed"):
+        files = sorted((recordings_folder / name / "calibration" / "lens").glob("*.png"))
+        fits[name] = fit_lens([view for view in (view_of(file, board) for file in files) if view is not None])
+    return fits
