@@ -304,6 +304,19 @@ def test_a_wrong_scale_is_followed_and_named(percent):
     assert float(told.split("(")[1].split()[0]) == pytest.approx(0.05 * (1 + percent / 100), rel=1e-3)
 
 
+def test_a_wrong_height_is_told_from_a_wrong_scale():
+    """What lies higher than the map is told drifts by parallax: only that kind does."""
+    recording = recorded(5000 + np.arange(300) * 200)
+    seen = scene(recording, parts=120)[3]
+    along = np.where(seen.kind == "plate", seen.xy_mm @ HEADING, 0.0)
+    seen = replace(seen, xy_mm=seen.xy_mm + 0.004 * along[:, None] * HEADING)
+    drift = follow(seen, recording, CELL).drift
+    (told,) = drift.findings
+    assert told.startswith("sightings of plate drift +")
+    assert "height_mm" in told
+    assert {name: round(along, 1) for name, along, _ in drift.by_kind} == {"dome": 0.0, "lever": 0.0, "plate": 0.4}
+
+
 def test_a_wrong_heading_is_named():
     recording = recorded(5000 + np.arange(300) * 200)
     followed = follow(scene(recording, turn_deg=0.3)[3], recording, CELL)

@@ -7,6 +7,8 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 from scipy.optimize import linear_sum_assignment
+from scipy.sparse import coo_matrix
+from scipy.sparse.csgraph import connected_components
 from scipy.spatial import cKDTree
 
 FloatArray = NDArray[np.float64]
@@ -64,14 +66,27 @@ def best_pairs(pairs: list[Pair]) -> dict[int, int]:
     sightings, things = {p.sighting for p in pairs}, {p.thing for p in pairs}
     if len(sightings) == len(pairs) == len(things):
         return {p.sighting: p.thing for p in pairs}
-    rows, columns = {s: k for k, s in enumerate(sorted(sightings))}, {t: k for k, t in enumerate(sorted(things))}
-    none = 1.0 + sum(p.cost for p in pairs)  # dearer than any pairs together, so that most pairs come first
-    table = np.full((len(rows), len(columns)), none)
-    for p in pairs:
-        table[rows[p.sighting], columns[p.thing]] = p.cost
-    chosen = zip(*linear_sum_assignment(table), strict=True)
-    by_row, by_column = sorted(sightings), sorted(things)
-    return {by_row[r]: by_column[c] for r, c in chosen if table[r, c] < none}
+    chosen: dict[int, int] = {}
+    for cluster in _clusters(pairs):
+        rows, columns = np.unique([p.sighting for p in cluster]), np.unique([p.thing for p in cluster])
+        none = 1.0 + sum(p.cost for p in cluster)  # dearer than any pairs together, so that most pairs come first
+        table = np.full((len(rows), len(columns)), none)
+        for p in cluster:
+            table[np.searchsorted(rows, p.sighting), np.searchsorted(columns, p.thing)] = p.cost
+        chosen.update({int(rows[r]): int(columns[c]) for r, c in zip(*linear_sum_assignment(table), strict=True)
+                       if table[r, c] < none})
+    return chosen
+
+
+def _clusters(pairs: list[Pair]) -> list[list[Pair]]:
+    """Pairs in groups that share no sighting and no thing."""
+    nodes = np.unique([[p.sighting, -1 - p.thing] for p in pairs], return_inverse=True)[1].reshape(-1, 2)
+    links = coo_matrix((np.ones(len(pairs)), nodes.T), shape=(nodes.max() + 1,) * 2)
+    label = connected_components(links, directed=False)[1][nodes[:, 0]]
+    groups: dict[int, list[Pair]] = {}
+    for one, p in zip(label.tolist(), pairs, strict=True):
+        groups.setdefault(one, []).append(p)
+    return list(groups.values())
 
 
 def rough_drift(row: IntArray, at_mm: FloatArray, travel_mm: FloatArray) -> FloatArray:

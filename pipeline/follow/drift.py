@@ -22,6 +22,7 @@ class Drift:
     along_mm, across_mm: in 100 mm of travel as the counts tell it; across is to the left of the heading.
     delay_s: by which images are taken after their counts are read; NaN where the belt's speed did not vary enough.
     parts: how many were seen in more than one place.  mm_per_count: as given.
+    by_kind: name, along_mm and its error of each kind of which enough parts were.
     """
 
     along_mm: float
@@ -32,15 +33,20 @@ class Drift:
     delay_error_s: float
     parts: int
     mm_per_count: float
+    by_kind: tuple[tuple[str, float, float], ...] = ()
 
     @property
     def findings(self) -> tuple[str, ...]:
         """One sentence for each drift that is clear and worth mending; none where all is well."""
         told = []
-        if _clear(self.along_mm, self.along_error_mm, WORTH_MM):
+        alone = self._kinds_alone()
+        if alone:
+            told.append("sightings of " + ", ".join(f"{name} drift {along:+.2f} mm" for name, along, _ in alone)
+                        + " per 100 mm along the belt, others do not: recheck height_mm, as seen by the camera")
+        elif _clear(self.along_mm, self.along_error_mm, WORTH_MM):
             better = self.mm_per_count * (1 + self.along_mm / 100)
             told.append(f"sightings drift {self.along_mm:+.2f} mm per 100 mm along the belt: recheck mm_per_count "
-                        f"({better:.6g} would remove it), or the scale of the plane map")
+                        f"({better:.6g} would remove it), the scale of the plane map, or the parts' heights")
         if _clear(self.across_mm, self.across_error_mm, WORTH_MM):
             turn = np.degrees(np.arctan2(self.across_mm, 100 + self.along_mm))
             told.append(f"sightings drift {self.across_mm:+.2f} mm per 100 mm across the belt: recheck heading_deg "
@@ -50,6 +56,13 @@ class Drift:
             told.append(f"sightings shift with the belt's speed, as if images were taken {ms} {late} their counts: "
                         "recheck the time stamps, and when the counts are read")
         return tuple(told)
+
+    def _kinds_alone(self) -> tuple[tuple[str, float, float], ...]:
+        """The kinds that drift clearly, where at least one other kind clearly drifts less: parallax, not the belt."""
+        drifting = [one for one in self.by_kind if _clear(one[1], one[2], WORTH_MM)]
+        still = [one for one in self.by_kind if abs(one[1]) < WORTH_MM]
+        return tuple(one for one in drifting
+                     if any(_clear(one[1] - other[1], float(np.hypot(one[2], other[2])), WORTH_MM) for other in still))
 
 
 def _clear(value: float, error: float, worth: float) -> bool:
@@ -76,7 +89,8 @@ def fit_drift(group: IntArray, thing: IntArray, at_mm: FloatArray, sigma_mm: Flo
             return None
         along, across = _fit(cause, places[:, 0], weight), _fit(cause[:, :1], places[:, 1], weight)
         off = np.abs(np.stack([places[:, 0] - cause @ along, places[:, 1] - cause[:, 0] * across[0]], axis=1))
-        keep = (off <= OUTLIERS * 1.4826 * np.median(off[keep], axis=0) + 1e-9).all(axis=1)
+        telling = keep & (np.bincount(group, keep)[group] > 1)  # a group of one is never off its own mean
+        keep = (off <= OUTLIERS * 1.4826 * np.median(off[telling], axis=0) + 1e-9).all(axis=1)
     along_errors = _errors(cause, places[:, 0] - cause @ along, weight, thing)
     across_error = _errors(cause[:, :1], places[:, 1] - cause[:, 0] * across[0], weight, thing)[0]
     whole_counts = abs(mm_per_count) / max(float(np.ptp(speed_mm_s)), 1e-9)  # all sightings at a stop share one count

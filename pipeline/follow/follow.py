@@ -1,7 +1,7 @@
 """Sightings of a whole recording to its parts."""
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 
 import numpy as np
@@ -60,14 +60,14 @@ class _Sorted:
 
 
 def follow(
-    sightings: Sightings, recording: Recording, cell: Cell, outlines_mm: Mapping[str, FloatArray] | None = None
+    sightings: Sightings, recording: Recording, cell: Cell, outlines_mm: Mapping[str, FloatArray | float] | None = None
 ) -> Followed:
     """Parts of a recording from its sightings: one row each, however often seen.
 
     Parts on a belt are carried to counts 0 by the counts recorded with each frame; on a tray every frame is a fresh
     one. Parts are numbered from 1 by first sighting, then from furthest downstream. Same input, same numbers.
     outlines_mm: of each kind, (k, 2) in its grip frame. Where given, a part that was mistaken for another kind or pose
-    in some of its frames is not listed twice.
+    in some of its frames is not listed twice; a radius tells too little for that.
     """
     names = ["", *sorted(cell.parts)]
     heading, travel_mm = _carried(recording, cell)
@@ -82,7 +82,7 @@ def follow(
     by_thing = _sorted(thing, sightings.row)
     known = _estimated(by_thing, seen, turns)
     drift = None if cell.belt is None else _drift(by_thing, known, seen, recording, travel_mm, heading,
-                                                  cell.belt.mm_per_count)
+                                                  cell.belt.mm_per_count, names)
     return Followed(_parts(by_thing, known, seen, turns, names), drift, thing)
 
 
@@ -117,13 +117,13 @@ def _estimated(by_thing: _Sorted, seen: _Seen, turns: IntArray) -> Estimates:
 
 
 def _mere_views(by_thing: _Sorted, seen: _Seen, known: Estimates, names: list[str],
-                outlines_mm: Mapping[str, FloatArray]) -> NDArray[np.bool_]:
+                outlines_mm: Mapping[str, FloatArray | float]) -> NDArray[np.bool_]:
     """(things + 1,) whether each thing is another view of a stronger one; the last entry stands for no thing."""
     outlines, rows = [], []
     for a, b in pairwise(by_thing.start.tolist()):
         mine, kind = by_thing.order[a:b], int(known.kind[b - 1])
         own = outlines_mm.get(names[kind])
-        if own is None or not kind:
+        if own is None or np.isscalar(own) or not kind:
             outlines.append(_outline(mine, kind, seen, known.xy_mm[b - 1]))
         else:
             cos, sin = np.cos(known.yaw_rad[b - 1]), np.sin(known.yaw_rad[b - 1])
@@ -154,18 +154,25 @@ def _sorted(thing: IntArray, row: IntArray) -> _Sorted:
 
 
 def _drift(by_thing: _Sorted, known: Estimates, seen: _Seen, recording: Recording, travel_mm: FloatArray,
-           heading: FloatArray, mm_per_count: float) -> Drift | None:
+           heading: FloatArray, mm_per_count: float, names: list[str]) -> Drift | None:
     kind_of = known.kind[by_thing.start[1:] - 1]
     same = (kind_of[by_thing.thing] > 0) & (seen.kind[by_thing.order] == kind_of[by_thing.thing])
     order, thing = by_thing.order[same], by_thing.thing[same]
     if not len(order) or len(recording) < 2:
         return None
-    row = seen.sightings.row[order]
-    camera = np.unique(recording.cameras, return_inverse=True)[1][row]
+    camera = np.unique(recording.cameras, return_inverse=True)[1][seen.sightings.row[order]]
     group = np.unique(thing * (len(recording) + 1) + camera, return_inverse=True)[1]
     speed = np.gradient(travel_mm, recording.times_s)
-    return fit_drift(group, thing, seen.at_mm[order], seen.sightings.sigma_mm[order], travel_mm[row], speed[row],
-                     heading, mm_per_count)
+
+    def fitted(which: NDArray[np.bool_]) -> Drift | None:
+        row = seen.sightings.row[order[which]]
+        return fit_drift(group[which], thing[which], seen.at_mm[order[which]], seen.sightings.sigma_mm[order[which]],
+                         travel_mm[row], speed[row], heading, mm_per_count)
+
+    drift = fitted(np.ones(len(order), dtype=bool))
+    kinds = ((names[code], fitted(seen.kind[order] == code)) for code in np.unique(seen.kind[order]))
+    by_kind = tuple((name, one.along_mm, one.along_error_mm) for name, one in kinds if one is not None)
+    return None if drift is None else replace(drift, by_kind=by_kind)
 
 
 def _parts(by_thing: _Sorted, known: Estimates, seen: _Seen, turns: IntArray, names: list[str]) -> tuple[Part, ...]:
