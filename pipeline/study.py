@@ -54,7 +54,7 @@ def see(cell: Cell, folder: Path, source: Source, rows: Rows = iter) -> Seen:
     """Read a recording and everything that lies in it. Raises InputFault."""
     recording = _read(cell, folder, source)
     sightings, find_s = sightings_of(cell, recording, source, rows)
-    return Seen(cell, recording, sightings, follow(sightings, recording, cell), find_s)
+    return Seen(cell, recording, sightings, follow(sightings, recording, cell, outlines(cell)), find_s)
 
 
 def one_frame(cell: Cell, folder: Path, source: Source, frame: int) -> Seen:
@@ -66,7 +66,7 @@ def one_frame(cell: Cell, folder: Path, source: Source, frame: int) -> Seen:
                          f"choose one from {recording.frame.min()} to {recording.frame.max()}")
     sightings, find_s = sightings_of(cell, recording, source, lambda rows: [row])
     sightings = sightings.where(sightings.row == row)
-    return Seen(cell, recording, sightings, follow(sightings, recording, cell), find_s[find_s > 0])
+    return Seen(cell, recording, sightings, follow(sightings, recording, cell, outlines(cell)), find_s[find_s > 0])
 
 
 def sightings_of(cell: Cell, recording: Recording, source: Source, rows: Rows = iter) -> tuple[Sightings, FloatArray]:
