@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 from pipeline.belt import BeltState
 from pipeline.motion.across import TURNING
 from pipeline.motion.cycle import Mover
+from pipeline.motion.flip import flip_time
 from pipeline.motion.lift import Lift
 from pipeline.move_time import rest_to_moving_kernel
 
@@ -91,7 +92,7 @@ class Legs:
         _leg_times(
             np.ascontiguousarray(starts[:, TURNING]), out, np.ascontiguousarray(lane[:, :, TURNING]), speed, usable,
             t_at, np.ascontiguousarray(nodes.drop[:, TURNING]), back, opens, closes, self._tables, self._limits,
-            self.mover.motion.grasp_s, self.mover.motion.release_s, still, start_s, contact, finish,
+            self.mover.motion.grasp_s, self.mover.motion.release_s, self.mover.singular, still, start_s, contact, finish,
         )  # fmt: skip
         return LegTimes(start_s, start_of + 1, contact, finish)
 
@@ -151,10 +152,10 @@ def _lift_times(table: FloatArray, across: float) -> tuple[float, float]:
             table[2, k - 1] + share * (table[2, k] - table[2, k - 1]))
 
 
-@njit("float64(float64[::1], float64[::1], float64[::1], float64[:, ::1])", cache=True)
-def _across(start: FloatArray, end: FloatArray, speed: FloatArray, limits: FloatArray) -> float:
-    """Least time from rest at start (3,) to end (3,) at a speed (3,)."""
-    longest = 0.0
+@njit("float64(float64[::1], float64[::1], float64[::1], float64[:, ::1], float64)", cache=True)
+def _across(start: FloatArray, end: FloatArray, speed: FloatArray, limits: FloatArray, singular: float) -> float:
+    """Least time from rest at start (3,) to a part at end (3,) with a speed (3,)."""
+    longest = flip_time(start[1], end[1], singular)
     for j in range(3):
         needed = rest_to_moving_kernel(end[j] - start[j], speed[j], limits[0, j], limits[1, j], limits[2, j])
         if not needed <= 1e9:
@@ -165,12 +166,12 @@ def _across(start: FloatArray, end: FloatArray, speed: FloatArray, limits: Float
 
 @njit(
     "float64(float64[:, ::1], float64[:, ::1], boolean[::1], float64[::1], float64[::1], float64, float64[:, ::1], "
-    "float64[:, ::1], float64, float64)",
+    "float64[:, ::1], float64, float64, float64)",
     cache=True,
 )
 def _carry(
     lane: FloatArray, speed: FloatArray, usable: NDArray[np.bool_], t_at: FloatArray, slot: FloatArray,
-    contact: float, table: FloatArray, limits: FloatArray, grasp_s: float, release_s: float,
+    contact: float, table: FloatArray, limits: FloatArray, grasp_s: float, release_s: float, singular: float,
 ) -> float:  # fmt: skip
     """From contact to the end of release."""
     m = len(t_at)
@@ -189,7 +190,7 @@ def _carry(
             joints[j] = lane[k, j] + share * ahead
             faster = speed[k + 1, j] - speed[k, j] if m > 1 else 0.0
             back[j] = -(speed[k, j] + share * faster)
-        across = _across(slot, joints, back, limits)  # read backwards: from the part to rest over the slot
+        across = _across(slot, joints, back, limits, singular)  # read backwards: from the part to rest over the slot
         rise, total = _lift_times(table, across)
     return grasp_s + total + release_s
 
@@ -197,14 +198,14 @@ def _carry(
 @njit(
     "void(float64[:, ::1], int64[:, ::1], float64[:, :, ::1], float64[:, :, ::1], boolean[:, ::1], float64[:, ::1], "
     "float64[:, ::1], int64[::1], float64[::1], float64[::1], float64[:, :, ::1], float64[:, ::1], float64, float64, "
-    "boolean, float64[::1], float64[:, :, ::1], float64[:, :, ::1])",
+    "float64, boolean, float64[::1], float64[:, :, ::1], float64[:, :, ::1])",
     cache=True,
     nogil=True,
 )
 def _leg_times(
     starts: FloatArray, out: NDArray[np.int64], lane: FloatArray, speed: FloatArray, usable: NDArray[np.bool_],
     t_at: FloatArray, slot: FloatArray, back: NDArray[np.int64], opens: FloatArray, closes: FloatArray,
-    tables: FloatArray, limits: FloatArray, grasp_s: float, release_s: float, still: bool, start_s: FloatArray,
+    tables: FloatArray, limits: FloatArray, grasp_s: float, release_s: float, singular: float, still: bool, start_s: FloatArray,
     contact: FloatArray, finish: FloatArray,
 ) -> None:  # fmt: skip
     """Fill contact and finish (a, g, k)."""
@@ -215,13 +216,13 @@ def _leg_times(
             carry[k] = np.inf
             if usable[b, k]:
                 carry[k] = _carry(lane[b], speed[b], usable[b], t_at[b], slot[b], t_at[b, k], tables[back[b]], limits,
-                                  grasp_s, release_s)
+                                  grasp_s, release_s, singular)
         for a in range(len(starts)):
             table = tables[out[a, b]]
             for k in range(m):
                 departs[k] = arrives[k] = np.nan
                 if usable[b, k]:
-                    across = _across(starts[a], lane[b, k], speed[b, k], limits)
+                    across = _across(starts[a], lane[b, k], speed[b, k], limits, singular)
                     rise, total = _lift_times(table, across)
                     departs[k] = t_at[b, k] - across - rise
                     arrives[k] = departs[k] + total

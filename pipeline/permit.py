@@ -7,11 +7,13 @@ from numpy.typing import NDArray
 
 from pipeline.grasp import Grasping, Refusal
 from pipeline.motion.across import TURNING
-from pipeline.motion.cycle import Cycle, Mover
+from pipeline.motion.cycle import Cycle, Mover, Transfer
+from pipeline.motion.flip import BESIDE_S
 
 FloatArray = NDArray[np.float64]
 FOLLOWED = 12  # times looked at while the tool is with the part
 STEP_S = 0.008  # between postures held against keep-outs
+SLACK_S = 0.008
 WINDOW_MM = 1e-3
 ROUNDING = 1e-9
 
@@ -48,9 +50,11 @@ class Permit:
         if not np.isfinite(joints).all():
             return Refusal("out_of_reach", "leaves the reach of the arm while it is followed")
         joints[:, 2] = self.mover.joints(cycle, t)[:, 2]
-        bend, singular = np.abs(joints[:, 1]), self.grasping.singular
-        if (bend < singular).any() or (bend > np.pi - singular).any():
-            return Refusal("joint_limit", "comes too near the stretched or folded arm while it is followed")
+        beside = np.concatenate([np.linspace(cycle.met_s - BESIDE_S + SLACK_S, cycle.met_s, 9),
+                                 np.linspace(cycle.left_s, cycle.left_s + BESIDE_S - SLACK_S, 9)])
+        bend = np.abs(np.concatenate([joints[:, 1], self.mover.joints(cycle, beside)[:, 1]]))
+        if bend.min() < self.grasping.singular or bend.max() > np.pi - self.grasping.singular:
+            return Refusal("joint_limit", "comes too near the stretched or folded arm beside the part")
         over = _over(joints.min(axis=0), joints.max(axis=0), self.grasping.lower, self.grasping.upper)
         if over is not None:
             return over
@@ -88,14 +92,25 @@ class Permit:
     def _keepouts(self, cycle: Cycle) -> Refusal | None:
         if not self.grasping.cell.keepouts:
             return None
-        count = int((cycle.release_end_s - cycle.depart_s) / STEP_S) + 2
-        t = np.linspace(cycle.depart_s, cycle.release_end_s, count)
-        near = self.grasping.keepouts.near(self.mover.joints(cycle, t))
+        return self._near(self.mover.joints(cycle, _times(cycle.depart_s, cycle.release_end_s)))
+
+    def home_refused(self, home: Transfer) -> Refusal | None:
+        """Why the way home may not be taken, or None."""
+        return self._near(self.mover.transfer_joints(home, _times(home.depart_s, home.end_s)))
+
+    def _near(self, joints: FloatArray) -> Refusal | None:
+        if not self.grasping.cell.keepouts:
+            return None
+        near = self.grasping.keepouts.near(joints)
         worst = int(near.gap_mm.argmin())
         if near.gap_mm[worst] >= 0:
             return None
         name = self.grasping.keepouts.names[near.keepout[worst]]
         return Refusal("keepout", f"would enter {name or 'a keep-out'} by {-near.gap_mm[worst]:.1f} mm on the way")
+
+
+def _times(first: float, last: float) -> FloatArray:
+    return np.linspace(first, last, int((last - first) / STEP_S) + 2)
 
 
 def _over(low: FloatArray, high: FloatArray, lower: FloatArray, upper: FloatArray) -> Refusal | None:

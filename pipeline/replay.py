@@ -14,6 +14,7 @@ from pipeline.cell import Cell
 from pipeline.follow import Part
 from pipeline.grasp import Grasping, Refusal
 from pipeline.legs import Legs
+from pipeline.motion.across import APART_J1, APART_J2, TOGETHER
 from pipeline.motion.cycle import Cycle, Hold, Mover, Transfer
 from pipeline.motion.lift import MotionFault
 from pipeline.permit import Permit
@@ -26,6 +27,7 @@ FloatArray = NDArray[np.float64]
 LEAST_SCORE = 0.5
 MOST_TRIES = 24  # grasps tried at one moment before the arm waits for news
 NEWS_S = 1e-6
+SHAPES = tuple((out, back) for back in (TOGETHER, APART_J2, APART_J1) for out in (TOGETHER, APART_J2, APART_J1))
 
 
 @dataclass(frozen=True)
@@ -141,8 +143,7 @@ class _Clock:
             else:
                 now = self._carry_out(pick)
         last = max(float(self.set.recording.times_s[-1]), self.picks[-1].cycle.release_end_s if self.picks else 0.0)
-        home = self.set.mover.home(self.picks[-1].cycle) if self.picks else None
-        return Run(self.set.parts, tuple(self.picks), self._fates(), self.name, self.set.mover, start, last, home,
+        return Run(self.set.parts, tuple(self.picks), self._fates(), self.name, self.set.mover, start, last, self._home(),
                    tuple(self.decide_s))
 
     def _decide(self, now: float) -> Pick | None:
@@ -156,7 +157,7 @@ class _Clock:
                 break
             one, hold, drop_joints, drop_pose = scene.grasp(picked.node)
             spent = time.perf_counter() - begun
-            cycle = self._cycle(now, one, hold, drop_joints)
+            cycle = self._cycle(now, one, hold, drop_joints, scene.met_from_mm(picked.node))
             if isinstance(cycle, Cycle):
                 self.decide_s.append(spent)
                 return Pick(one.part, now, cycle, one.place, one.slot, drop_pose, picked, len(scene.candidates), spent)
@@ -164,15 +165,23 @@ class _Clock:
             banned.add((one.row, int(scene.node_of[picked.node][1])))
         return None
 
-    def _cycle(self, now: float, one: Candidate, hold: Hold, drop_joints: FloatArray) -> Cycle | Refusal:
-        """The cycle of a grasp, or why it can't be carried out."""
-        try:
-            cycle = self.set.mover.pick(self.joints, now, hold, drop_joints)
-        except MotionFault as fault:
-            return Refusal("joint_limit", str(fault))
-        if cycle is None:
-            return Refusal("too_late", "the arm can't meet it inside the window")
-        return self.permit.refused(cycle, float(self.watch.until_s[one.row])) or cycle
+    def _cycle(self, now: float, one: Candidate, hold: Hold, drop_joints: FloatArray, from_mm: float) -> Cycle | Refusal:
+        """The cycle of a grasp, or why it can't be carried out: the ways around keep-outs are tried in turn."""
+        met_from = self.set.mover.passes(hold, from_mm) if np.isfinite(from_mm) else -np.inf
+        refused: Refusal | None = None
+        for shapes in SHAPES:
+            try:
+                cycle = self.set.mover.pick(self.joints, now, hold, drop_joints, met_from, shapes)
+            except MotionFault as fault:
+                return Refusal("joint_limit", str(fault))
+            if cycle is None:
+                return Refusal("too_late", "the arm can't meet it inside the window")
+            refused = self.permit.refused(cycle, float(self.watch.until_s[one.row]))
+            if refused is None:
+                return cycle
+            if refused.reason != "keepout":
+                break
+        return refused or Refusal("too_late", "no way to it")
 
     def _carry_out(self, pick: Pick) -> float:
         """Let the pick happen; the time the arm is free again."""
@@ -201,3 +210,8 @@ class _Clock:
         if tried is not None and tried.reason == "keepout":
             return tried
         return Refusal("too_late", tried.detail if tried else "left the window while the arm was busy with others")
+
+    def _home(self) -> Transfer | None:
+        """The way home after the last pick; None where there is none past the keep-outs."""
+        ways = (self.set.mover.home(self.picks[-1].cycle, shape) for shape in (TOGETHER, APART_J2, APART_J1) if self.picks)
+        return next((way for way in ways if self.permit.home_refused(way) is None), None)

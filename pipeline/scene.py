@@ -22,7 +22,7 @@ ROOM_MM = 0.2  # kept between the jaws and what else lies there
 NEAR_MM = 150.0
 MOST_GRASPS = 4  # of a part are handed to the policy
 MOVED_MM, TURNED_RAD = 0.5, 0.02  # an estimate that has moved more has its grasps worked out anew
-AWAY_RAD = 0.02  # s a radian: how much a J4 far from where it stands counts against a grasp
+AWAY_S, NARROW_S = 0.02, 0.3  # what counts against a grasp: each radian of J4 from where it stands, a lane it can't use
 
 
 @dataclass(frozen=True)
@@ -51,6 +51,13 @@ class Scene:
         k, row = self.node_of[node].tolist()
         one = self.candidates[k]
         return one, one.holds.holds[one.grasps.hold[row]], one.grasps.drop_joints[row], one.grasps.drop_pose[row]
+
+    def met_from_mm(self, node: int) -> float:
+        """How far along the part must be before it can be met with this grasp; -inf where anywhere will do."""
+        k, row = self.node_of[node].tolist()
+        one = self.candidates[k]
+        usable = one.holds.usable[one.grasps.hold[row]]
+        return -np.inf if usable[0] else float(one.holds.along_mm[usable.argmax()])
 
 
 class SceneBuilder:
@@ -178,7 +185,8 @@ class SceneBuilder:
         hold = one.grasps.hold[rows]
         pair = 2 * one.holds.elbow[hold] + self.grasping.arm.elbow_of(one.grasps.drop_joints[rows])
         turn = one.holds.joints[hold, one.holds.joints.shape[1] // 2, 3]
-        cost = one.grasps.carry_s[rows] + AWAY_RAD * np.abs(np.nan_to_num(turn) - j4)
+        narrow = 1.0 - one.holds.usable[hold].mean(axis=1)
+        cost = one.grasps.carry_s[rows] + AWAY_S * np.abs(np.nan_to_num(turn) - j4) + NARROW_S * narrow
         order = np.lexsort((rows, cost))
         firsts = [int(order[np.flatnonzero(pair[order] == p)[0]]) for p in np.unique(pair)]
         rest = [int(r) for r in order if r not in firsts]

@@ -18,8 +18,9 @@ from numpy.typing import NDArray
 from pipeline.arm import Arm
 from pipeline.belt import Belt
 from pipeline.cell import Cell
-from pipeline.motion.across import TURNING, Across, State, Way, at_rest
+from pipeline.motion.across import TOGETHER, TURNING, Across, State, Way, at_rest
 from pipeline.motion.curve import Curve
+from pipeline.motion.flip import flip_time
 from pipeline.motion.lift import Lift, LiftLimits
 
 FloatArray = NDArray[np.float64]
@@ -76,7 +77,8 @@ class Mover:
     def __init__(self, cell: Cell, arm: Arm, belt: Belt) -> None:
         self.arm, self.belt, self.motion = arm, belt, cell.motion
         self.window_mm = cell.belt.window_mm if cell.belt else None
-        self.across = Across(arm)
+        self.singular = float(np.radians(cell.motion.singularity_deg))
+        self.across = Across(arm, self.singular)
         self._lift_limits = lift_limits(cell, arm)
         self.lift = lru_cache(maxsize=512)(self._lift)
 
@@ -109,23 +111,27 @@ class Mover:
             return None
         return state
 
-    def pick(self, start: FloatArray, free_s: float, hold: Hold, place_joints: FloatArray) -> Cycle | None:
+    def pick(self, start: FloatArray, free_s: float, hold: Hold, place_joints: FloatArray, met_from_s: float = -np.inf,
+             shapes: tuple[int, int] = (TOGETHER, TOGETHER)) -> Cycle | None:
         """The soonest pick of a part by an arm at rest at start (4,) from free_s on; None where it can't be met.
 
+        met_from_s: the part is met no sooner. shapes: of the ways to the part and to the slot, see Across.between.
         Raises MotionFault where ruckig refuses a move.
         """
         lift = self.lift_from(start, hold.z_mm)
-        meeting = self._meet_soonest(start, free_s, hold, lift)
+        meeting = self._meet_soonest(start, free_s, hold, lift, shapes[0])
+        if meeting is not None and meeting.met_s < met_from_s:
+            meeting = self._meet_at(start, met_from_s, hold, lift, shapes[0])
         if meeting is not None and self.window_mm is not None:
             enters = self.passes(hold, self.window_mm[0])
             if meeting.depart_s + lift.total_s(meeting.move.duration) < enters:
-                meeting = self._meet_late(start, enters, hold, lift)
+                meeting = self._contact_at(start, enters, hold, lift, shapes[0])
         if meeting is None:
             return None
         down = lift.curve(meeting.move.duration)
         grasp_start = meeting.depart_s + down.end_s
         grasp_end = grasp_start + self.motion.grasp_s
-        leaving = self._leave(hold, grasp_end, place_joints)
+        leaving = self._leave(hold, grasp_end, place_joints, shapes[1])
         if leaving is None:
             return None
         up = self.lift(round(hold.z_mm, 6), round(float(self.arm.forward(place_joints)[2]), 6)).curve(
@@ -140,13 +146,13 @@ class Mover:
                      tuple(curve.later(across_s) for curve in meeting.move.curves),
                      tuple(curve.later(left) for curve in leaving.move.curves), height)
 
-    def home(self, cycle: Cycle) -> Transfer:
+    def home(self, cycle: Cycle, shape: int = TOGETHER) -> Transfer:
         """From the end of a cycle to the arm's home, at home's height or, where that is below it, the clear height."""
         start, end = cycle.end_joints, np.array(self.arm.home)
         height = max(float(self.arm.forward(end)[2]), self.motion.clear_height_mm)
         end[2] = quill(self.arm, height, end[3])
         lift = self.lift_from(start, height)
-        move = self.across.between(at_rest(start), at_rest(end))
+        move = self.across.between(at_rest(start), at_rest(end), shape=shape)
         depart = cycle.release_end_s
         across_s, up = depart + lift.rise_s(move.duration), lift.curve(move.duration).later(depart)
         return Transfer(depart, max(across_s + move.duration, up.end_s),
@@ -157,10 +163,10 @@ class Mover:
         target = along_mm - float(hold.at_mm @ self.belt.heading)
         return self.belt.when(target)
 
-    def _meet_soonest(self, start: FloatArray, free_s: float, hold: Hold, lift: Lift) -> "_Leg | None":
+    def _meet_soonest(self, start: FloatArray, free_s: float, hold: Hold, lift: Lift, shape: int) -> "_Leg | None":
         rise = lift.rise_s(np.inf)
         for _ in range(SETTLING):
-            move = self.across.meet(at_rest(start), free_s + rise, lambda t: self.state_on(hold, t))
+            move = self.across.meet(at_rest(start), free_s + rise, lambda t: self.state_on(hold, t), shape)
             if move is None:
                 return None
             needed = lift.rise_s(move.duration)
@@ -169,24 +175,32 @@ class Mover:
             rise = needed
         return _Leg(free_s, rise, move)
 
-    def _meet_late(self, start: FloatArray, contact_s: float, hold: Hold, lift: Lift) -> "_Leg | None":
-        """The way that makes contact at contact_s, begun as late as that allows."""
-        if not np.isfinite(contact_s):
+    def _meet_at(self, start: FloatArray, met_s: float, hold: Hold, lift: Lift, shape: int) -> "_Leg | None":
+        """The way that meets the part at met_s, begun as late as that allows."""
+        state = self.state_on(hold, met_s) if np.isfinite(met_s) else None
+        if state is None:
             return None
-        met = contact_s
+        least = flip_time(float(start[1]), float(state[0][1]), self.singular)
+        if not np.isfinite(least):
+            return None
+        move = self.across.between(at_rest(start), state, least, shape)
+        rise = lift.rise_s(move.duration)
+        return _Leg(met_s - move.duration - rise, rise, move)
+
+    def _contact_at(self, start: FloatArray, contact_s: float, hold: Hold, lift: Lift, shape: int) -> "_Leg | None":
+        """The way that makes contact at contact_s, begun as late as that allows."""
+        met, leg = contact_s, None
         for _ in range(SETTLING):
-            state = self.state_on(hold, met)
-            if state is None:
+            leg = self._meet_at(start, met, hold, lift, shape)
+            if leg is None:
                 return None
-            move = self.across.between(at_rest(start), state)
-            rise, total = lift.rise_s(move.duration), lift.total_s(move.duration)
-            late = contact_s - (total - rise - move.duration) - met
+            late = contact_s - leg.depart_s - lift.total_s(leg.move.duration)
             if abs(late) < SETTLED_S:
                 break
             met += late
-        return _Leg(met - move.duration - rise, rise, move)
+        return leg
 
-    def _leave(self, hold: Hold, grasp_end: float, place_joints: FloatArray) -> "_Leg | None":
+    def _leave(self, hold: Hold, grasp_end: float, place_joints: FloatArray, shape: int) -> "_Leg | None":
         """From the part to rest over the slot."""
         lift = self.lift(round(hold.z_mm, 6), round(float(self.arm.forward(place_joints)[2]), 6))
         rise = lift.rise_s(np.inf)
@@ -194,7 +208,10 @@ class Mover:
             state = self.state_on(hold, grasp_end + rise)
             if state is None:
                 return None
-            move = self.across.between(state, at_rest(place_joints))
+            least = flip_time(float(place_joints[1]), float(state[0][1]), self.singular)
+            if not np.isfinite(least):
+                return None
+            move = self.across.between(state, at_rest(place_joints), least, shape)
             needed = lift.rise_s(move.duration)
             if needed <= rise + SETTLED_S:
                 break
@@ -231,6 +248,11 @@ class _Leg:
     depart_s: float
     rise_s: float
     move: Way
+
+    @property
+    def met_s(self) -> float:
+        """When the way across ends."""
+        return self.depart_s + self.rise_s + self.move.duration
 
 
 def turned(arm: Arm, joints: FloatArray, yaw: float, turn: int) -> FloatArray:
