@@ -67,9 +67,11 @@ class Arm:
         self.link_radius_mm = float(arm.link_radius_mm)
         self.offset_mm = _fixed(tool.offset_mm)
         self.tool_yaw, self.tool_length_mm = float(np.radians(tool.yaw_deg)), float(tool.length_mm)
+        beyond = self.limits.lower[0] < -np.pi or self.limits.upper[0] > np.pi
+        j1_middle = (self.limits.lower[0] + self.limits.upper[0]) / 2 if beyond else 0.0
         self._constants = _fixed([
             *self.sense, self.link1_mm, self.link2_mm, *self.base_mm[:2], self.base_yaw,
-            self.flange_z_mm - self.tool_length_mm, self.lead, *self.offset_mm, self.tool_yaw,
+            self.flange_z_mm - self.tool_length_mm, self.lead, *self.offset_mm, self.tool_yaw, j1_middle,
         ])  # fmt: skip
 
     def headings(self, joints: ArrayLike) -> tuple[Floats, Floats, Floats]:
@@ -96,9 +98,12 @@ class Arm:
     def inverse(self, poses: ArrayLike) -> Floats:
         """Joints (..., 2, 4) for (..., 4) tool tips, elbow right, then left; NaN where `reason` has one.
 
-        J1 and J4 lie in (-pi, pi]; limits are not applied.
+        J4 lies in (-pi, pi], and so does J1, unless its limits reach beyond: then in the turn about their middle.
+        The limits themselves are not applied. Raises ValueError for another last dimension than 4.
         """
         p = np.asarray(poses, np.float64)
+        if p.shape[-1:] != (4,):
+            raise ValueError(f"poses of shape {p.shape}, not (..., 4)")
         joints = np.empty((*p.shape[:-1], 2, 4))
         _solve(np.ascontiguousarray(p).reshape(-1, 4), self._constants, joints.reshape(-1, 8))
         return joints
@@ -216,7 +221,7 @@ def _wrapped(angle: float) -> float:
 @njit("void(float64[:, ::1], Array(float64, 1, 'C', readonly=True), float64[:, ::1])", cache=True, nogil=True)
 def _solve(poses: Floats, k: Floats, joints: Floats) -> None:
     """Both elbows' joints (n, 8) for tool tips (n, 4); k are the arm's constants."""
-    s1, s2, s3, s4, l1, l2, base_x, base_y, base_yaw, z0, lead, off_x, off_y, tool_yaw = k
+    s1, s2, s3, s4, l1, l2, base_x, base_y, base_yaw, z0, lead, off_x, off_y, tool_yaw, j1_middle = k
     straight = off_x == 0.0 and off_y == 0.0
     for i in range(len(poses)):
         x, y, flange = poses[i, 0] - base_x, poses[i, 1] - base_y, poses[i, 3] - tool_yaw
@@ -237,7 +242,7 @@ def _solve(poses: Floats, k: Floats, joints: Floats) -> None:
             up = 1.0 - 2.0 * side
             a = outward - up * inner
             j4 = _wrapped(s4 * (flange - a - up * bend))
-            joints[i, 4 * side] = _wrapped(s1 * (a - base_yaw))
+            joints[i, 4 * side] = j1_middle + _wrapped(s1 * (a - base_yaw) - j1_middle)
             joints[i, 4 * side + 1] = up * s2 * bend
             joints[i, 4 * side + 2] = s3 * (poses[i, 2] - z0 - lead * s4 * j4)
             joints[i, 4 * side + 3] = j4

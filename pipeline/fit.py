@@ -30,6 +30,7 @@ VAGUE = 0.25  # a limit known no better than to this share is not identified
 FARTHEST = np.log(100.0)  # a limit is sought within this factor of the cell file's
 GRID = np.log(np.geomspace(1 / 16, 16, 13))  # factors on each limit that a start is looked for among
 GRID_ROUNDS = 3
+GRID_MOVES = 200  # of a longer table only so many are looked at for the start
 RISE_S = 0.02  # the rise of the acceleration to start from where the cell file has no jerk limit
 
 
@@ -160,7 +161,8 @@ def _bounded(moves: Moves, found: Floats, error: Floats) -> NDArray[np.bool_]:
 
 def _nearby(moves: Moves, guess: Floats) -> Floats:
     """The best of a grid of limits, one joint after the other, so that the descent starts in the right valley."""
-    way = moves.end - moves.start
+    some = slice(None, None, 1 + len(moves) // GRID_MOVES)
+    way, measured = (moves.end - moves.start)[some], moves.time_s[some, None]
     logs = guess.copy()
     steps = np.stack(np.meshgrid(GRID, GRID, GRID), axis=-1).reshape(-1, 3)
     for joint in (0, 1, 2, 3) * GRID_ROUNDS:
@@ -168,7 +170,7 @@ def _nearby(moves: Moves, guess: Floats) -> Floats:
         times[:, joint] = 0.0
         tried = guess[joint] + steps
         own = axis_time(way[:, joint, None], *np.exp(tried).T)  # (n, tried)
-        misses = moves.time_s[:, None] - np.maximum(own, times.max(axis=1)[:, None])
+        misses = measured - np.maximum(own, times.max(axis=1)[:, None])
         logs[joint] = tried[np.argmin((misses**2).sum(axis=0))]
     return logs
 

@@ -84,7 +84,7 @@ def rings(graph: "nx.DiGraph[int]") -> list[tuple[int, ...]]:
 class Near:
     """What of the arm is nearest to which keep-out in each of n postures."""
 
-    gap_mm: Floats  # (n,) negative: inside by as much; inf: above all of them
+    gap_mm: Floats  # (n,) negative: inside by as much; inf: above all of them; NaN: no posture
     keepout: Ints  # (n,) number of the keep-out, -1 for none
     body: Ints  # (n,) LINK_1, LINK_2, TIP or JAW + number of the jaw
 
@@ -117,6 +117,7 @@ class Keepouts:
                 self._jaws.starts, self._jaws.radius, self._areas.points, self._areas.starts, self._tops,
                 answer.gap_mm, answer.keepout, answer.body,
             )  # fmt: skip
+        answer.gap_mm[~np.isfinite(q).all(axis=1)] = np.nan
         return answer
 
     def clearance(self, joints: ArrayLike) -> Floats:

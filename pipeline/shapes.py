@@ -66,16 +66,18 @@ def gaps(
 
     tips: (g, 3) x, y mm, yaw rad of the grasps; the thing at poses (p, 3) has outline number kinds (p,). Negative:
     they overlap by as much. Gaps above `near_mm` may be given too small, by the circles about the shapes. Without
-    jaws the room is infinite.
+    jaws the room is infinite. Raises IndexError for a kind without an outline.
     """
+    of_kind = np.ascontiguousarray(kinds, np.int64).reshape(-1)
+    if of_kind.size and not 0 <= of_kind.min() <= of_kind.max() < len(outlines):
+        raise IndexError(f"kinds {of_kind.min()} to {of_kind.max()} for {len(outlines)} outlines")
     places = np.ascontiguousarray(poses, np.float64).reshape(-1, 3)
     grasps = np.ascontiguousarray(tips, np.float64).reshape(-1, 3)
     room, nearest = np.full((len(grasps), len(places)), np.inf), np.zeros((len(grasps), len(places)), np.int64)
     if len(jaws) and room.size:
         _gaps(
             jaws.points, jaws.starts, jaws.radius, grasps, outlines.points, outlines.starts, outlines.radius,
-            outlines.reach, np.ascontiguousarray(kinds, np.int64).reshape(-1), places, float(jaws.reach.max()),
-            near_mm, room, nearest,
+            outlines.reach, of_kind, places, float(jaws.reach.max()), near_mm, room, nearest,
         )  # fmt: skip
     return room, nearest
 

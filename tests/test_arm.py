@@ -230,6 +230,19 @@ def test_any_leading_shape(shape: tuple[int, ...]) -> None:
     assert arm.follow(joints, np.ones(2), np.zeros(2))[1].shape == (*shape, 4)
 
 
+@given(st.floats(0, 270))
+def test_a_j1_whose_limits_lie_to_one_side_is_solved_on_that_side(degrees: float) -> None:
+    """From 0 to 270 degrees: what other arms call -100 is 260 here."""
+    arm = plain_arm(arm__j1__min=0.0, arm__j1__max=270.0)
+    joints = np.array([np.radians(degrees), 1.0, 20.0, 0.5])
+    assert arm.inverse(arm.forward(joints))[RIGHT] == pytest.approx(joints, abs=1e-9)
+
+
+def test_poses_of_another_shape_are_refused() -> None:
+    with pytest.raises(ValueError, match="not"):
+        plain_arm().inverse(np.zeros((4, 3)))
+
+
 def test_limits_are_read_only_and_in_radians() -> None:
     arm = plain_arm(arm__j2__max_jerk=None)
     assert arm.limits.upper == pytest.approx([np.radians(130), np.radians(145), 180, 2 * np.pi])

@@ -106,6 +106,11 @@ def test_without_jaws_there_is_room_everywhere() -> None:
     assert np.isinf(room).all()
 
 
+def test_a_kind_without_an_outline_is_refused() -> None:
+    with pytest.raises(IndexError):
+        gaps(Shapes.of(JAWS), np.zeros((1, 3)), Shapes.of([5.0]), [1], np.zeros((1, 3)))
+
+
 def blocking(parts: dict[int, tuple[float, float, float]], turns: tuple[float, ...] = (0.0,)) -> "nx.DiGraph[int]":
     """Who blocks whom among discs of 12 mm at poses, each gripped at every turn."""
     numbers, poses = list(parts), np.array(list(parts.values()), dtype=float)
@@ -222,6 +227,11 @@ def test_the_width_of_the_links_matters() -> None:
     wide, unchecked = keepouts(arm__link_radius_mm=80.0)[1], keepouts(arm__link_radius_mm=0.0)[1]
     assert (wide.clearance(beside) < kept.clearance(beside)).any()
     assert (unchecked.near(beside).body >= TIP).all()
+
+
+def test_no_posture_is_never_clear() -> None:
+    arm, kept = keepouts()
+    assert not (kept.clearance(arm.inverse([900.0, 0.0, 0.0, 0.0])) >= 0).any()
 
 
 def test_without_keepouts_everything_is_clear() -> None:
