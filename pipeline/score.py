@@ -188,15 +188,16 @@ def _table(path: Path, optional: Mapping[str, type]) -> dict[str, Column]:
 
 
 def _poses(table: dict[str, Column], counts: Flags, frame: Column | None) -> Poses:
-    n, none = len(table["line"]), np.full(len(table["line"]), np.nan)
+    n = len(table["line"])
+    sigma_mm, sigma_deg = (table.get(name, np.zeros(n)).astype(float) for name in ("sigma_mm", "sigma_deg"))
     return Poses(
         number=table["part_no"].astype(np.int64) if "part_no" in table else np.arange(n),
         kind=table["part"].astype(np.str_), side=table["side"].astype(np.str_),
         xy_mm=np.stack([table["x_mm"], table["y_mm"]], axis=-1).astype(float),
         yaw_rad=np.radians(table["yaw_deg"].astype(float)), counts=counts,
         frame=np.full(n, -1, dtype=np.int64) if frame is None else frame.astype(np.int64),
-        sigma_mm=table["sigma_mm"].astype(float) if "sigma_mm" in table else none,
-        sigma_rad=np.radians(table["sigma_deg"].astype(float)) if "sigma_deg" in table else none,
+        sigma_mm=np.where(sigma_mm > 0, sigma_mm, np.nan),
+        sigma_rad=np.where(sigma_deg > 0, np.radians(sigma_deg), np.nan),
     )  # fmt: skip
 
 
