@@ -59,6 +59,7 @@ class _Kind:
     coarse: FloatArray
     anchor: FloatArray
     model: Model
+    first_rad: float
     steps: int
     step_rad: float
 
@@ -127,8 +128,8 @@ class PartFinder:
         rough = []
         for number, kind in enumerate(self.kinds):
             room = room_for(box, kind.steps)
-            placements(edges.own, edges.near, blobs.label, patch + 1, kind.coarse, affine, kind.anchor, kind.steps,
-                       kind.step_rad, box, room)  # fmt: skip
+            placements(edges.own, edges.near, blobs.label, patch + 1, kind.coarse, affine, kind.anchor, kind.first_rad,
+                       kind.steps, kind.step_rad, box, room)  # fmt: skip
             found = peaks(room)[:MOST_PEAKS]
             rough.append(np.column_stack([found, np.full(len(found), float(number))]))
         every = np.concatenate(rough)
@@ -200,8 +201,8 @@ def _kind(part: TaughtPart, down: bool) -> _Kind:
     outline_only = template.points[template.points[:, 5] == 0.0]
     period = 2.0 * np.pi / max(part.turns, 1)
     steps = 1 if part.turns == 0 else max(int(round(period / TURN_STEP_RAD)), 1)
-    return _Kind(part.name, down, template, coarse_points(outline_only), _anchor(template.outline), part.model, steps,
-                 period / steps)  # fmt: skip
+    return _Kind(part.name, down, template, coarse_points(outline_only), _anchor(template.outline), part.model,
+                 part.model.yaw_rad if part.turns == 0 else 0.0, steps,                 period / steps)  # fmt: skip
 
 
 def _anchor(outline: FloatArray) -> FloatArray:

@@ -18,10 +18,12 @@ from cameras.view import project, slopes
 FloatArray = NDArray[np.float64]
 
 HIT_PX = 1.2
+STAGE1 = 0.3
 INNER_SHARE, INNER_WORTH = 0.45, 0.3  # of inner edges, what a part the right side up shows at the least; its weight
 PIXEL_SIGMA = 0.25
-DOWN_FACING, DOWN_AWAY, DOWN_SIGMA = 0.5, 0.8, 0.25  # of the height: what a part shows turned over was not taught
-CORRELATED = 3.0  # neighbouring edge points err together
+DOWN_FACING, DOWN_AWAY, DOWN_SIGMA = 0.85, 0.85, 0.15  # of the height: what a part shows turned over was not taught
+LEAST_SCATTER_PX = 0.12
+CORRELATED = 16.0  # neighbouring edge points err together
 
 
 @dataclass(frozen=True)
@@ -75,6 +77,7 @@ def _step(image, view, points, taught, pose, heights, prior, reach, least, strid
     away_x = (local[1, 1] * local[0, 2] - local[0, 1] * local[1, 2]) / det
     away_y = (-local[1, 0] * local[0, 2] + local[0, 0] * local[1, 2]) / det
     back_x, back_y = cosine * taught[0] - sine * taught[1], sine * taught[0] + cosine * taught[1]
+    usual = np.median(np.abs(points[:, 4])) + 1e-6
     hits = 0
     for k in range(0, points.shape[0], stride):
         nx, ny = cosine * points[k, 2] - sine * points[k, 3], sine * points[k, 2] + cosine * points[k, 3]
@@ -102,6 +105,7 @@ def _step(image, view, points, taught, pose, heights, prior, reach, least, strid
         scale = max(reach * 0.4, 0.6)
         w = (r / scale) ** 2
         w = 1.0 / ((1.0 + w) * (1.0 + w))
+        w *= min(1.0, np.sqrt(abs(found[1] * points[k, 4])) / usual)
         if group > 0:
             w *= with_edges
         if abs(r) <= HIT_PX:
@@ -121,14 +125,22 @@ def _step(image, view, points, taught, pose, heights, prior, reach, least, strid
     return hits
 
 
-@njit("void(f8[:,::1], f8[::1], f8[::1], f8[::1], b1, f8[::1], f8[::1], f8[:,::1])", cache=True)
-def _solve(normal, prior, sigmas, heights, is_round, moved, shares, cov):  # type: ignore[no-untyped-def]
+@njit("void(f8[:,::1], f8[::1], f8[::1], f8[::1], f8, b1, f8[::1], f8[:,::1])", cache=True)
+def _solve(normal, prior, sigmas, heights, unit, is_round, moved, cov):  # type: ignore[no-untyped-def]
     """Solve the normal equations with the heights held to their priors; `moved` is the step, `cov` the inverse."""
     size = 3 + heights.shape[0]
     matrix = normal[:, :size].copy()
     right = normal[:, size].copy()
-    unit = CORRELATED * PIXEL_SIGMA * PIXEL_SIGMA
-    for k in range(heights.shape[0]):
+    # the first two heights are held by their mean and by their difference
+    mean = unit / (sigmas[0] * sigmas[0])
+    apart = unit / (sigmas[1] * sigmas[1])
+    off_mean = 0.5 * (prior[0] + prior[1] - heights[0] - heights[1])
+    off_apart = (prior[1] - prior[0]) - (heights[1] - heights[0])
+    for a in range(2):
+        right[3 + a] += 0.5 * mean * off_mean + (2 * a - 1) * apart * off_apart
+        for b in range(2):
+            matrix[3 + a, 3 + b] += 0.25 * mean + (apart if a == b else -apart)
+    for k in range(2, heights.shape[0]):
         hold = unit / (sigmas[k] * sigmas[k])
         matrix[3 + k, 3 + k] += hold
         right[3 + k] += hold * (prior[k] - heights[k])
@@ -143,8 +155,8 @@ def _solve(normal, prior, sigmas, heights, is_round, moved, shares, cov):  # typ
     moved[:] = cov @ right
 
 
-@njit("f8(u1[:,::1], f8[:,::1], f8[:,::1], f8[::1], f8[::1], f8[::1], f8[::1], f8, f8, f8, i8, i8, b1, f8[:,::1], f8[:,::1])", cache=True)
-def settle(image, view, points, taught, pose, heights, sigmas, reach, last_reach, least, stride, steps, is_round, cov, out):  # type: ignore[no-untyped-def]
+@njit("f8(u1[:,::1], f8[:,::1], f8[:,::1], f8[::1], f8[::1], f8[::1], f8[::1], f8[::1], f8, f8, f8, i8, i8, f8, f8, b1, f8[:,::1], f8[:,::1])", cache=True)
+def settle(image, view, points, taught, pose, heights, prior, sigmas, reach, last_reach, least, stride, steps, inner, unit, is_round, cov, out):  # type: ignore[no-untyped-def]
     """Gauss-Newton steps in place on `pose` (x, y from the place, yaw) and `heights`; the share of points met last.
 
     The reach shrinks evenly from `reach` to `last_reach`. cov: inverse of the last normal equations.
@@ -152,18 +164,18 @@ def settle(image, view, points, taught, pose, heights, sigmas, reach, last_reach
     size = 3 + heights.shape[0]
     normal = np.empty((size, size + 1))
     moved = np.empty(size)
-    prior = heights.copy()
     hits = 0
     for k in range(steps):
         now = reach + (last_reach - reach) * k / max(steps - 1, 1)
-        hits = _step(image, view, points, taught, pose, heights, prior, now, least, stride, 1.0, normal, out)
-        _solve(normal, prior, sigmas, heights, is_round, moved, sigmas, cov)
+        hits = _step(image, view, points, taught, pose, heights, prior, now, least, stride, inner, normal, out)
+        _solve(normal, prior, sigmas, heights, unit, is_round, moved, cov)
         far = np.hypot(moved[0], moved[1])
         if not far < 4.0 or not abs(moved[2]) < 0.5:
             return -1.0
         pose += moved[:3]
-        heights += moved[3:]
-    hits = _step(image, view, points, taught, pose, heights, prior, last_reach, least, stride, 1.0, normal, out)
+        if reach < 5.0:
+            heights += moved[3:]
+    hits = _step(image, view, points, taught, pose, heights, prior, last_reach, least, stride, inner, normal, out)
     return hits / ((points.shape[0] + stride - 1) // stride)
 
 
@@ -202,11 +214,17 @@ def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, sta
     pose, heights = np.array(start, dtype=np.float64), template.heights.copy()
     size = 3 + len(heights)
     cov, out = np.empty((size, size)), np.zeros((len(template.points), 4))
-    share = settle(image, view, template.points, template.away, pose, heights, template.sigmas, 9.0, 4.0, least, 4, 4, template.round, cov, out)
+    fixed = (template.heights, template.sigmas)
+    unit = CORRELATED * PIXEL_SIGMA**2
+    share = settle(image, view, template.points, template.away, pose, heights, *fixed, 9.0, 4.0, least, 4, 4, STAGE1, unit,
+                   template.round, cov, out)  # fmt: skip
     if share < promising:
         return None
-    heights = template.heights.copy()
-    share = settle(image, view, template.points, template.away, pose, heights, template.sigmas, 3.0, 2.0, least, 1, 4, template.round, cov, out)
+    settle(image, view, template.points, template.away, pose, heights, *fixed, 3.0, 2.0, least, 1, 2, 1.0, unit,
+           template.round, cov, out)  # fmt: skip
+    unit = CORRELATED * _scatter(out) ** 2
+    share = settle(image, view, template.points, template.away, pose, heights, *fixed, 2.0, 2.0, least, 1, 3, 1.0, unit,
+                   template.round, cov, out)  # fmt: skip
     if share < 0.0 or np.hypot(pose[0] - start[0], pose[1] - start[1]) > 6.0:
         return None
     outline = template.points[:, 5] == 0.0
@@ -214,8 +232,13 @@ def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, sta
     inner_share = float(np.mean(out[~outline, 2])) if not outline.all() else 1.0
     score = float(np.mean(out[:, 2]))
     worth = outline_share + (0.0 if outline.all() else INNER_WORTH * (inner_share - INNER_SHARE))
-    scale = CORRELATED * PIXEL_SIGMA**2
     polygon = np.empty_like(template.outline)
     outline_pixels(view, template.outline, pose, 0.5 * (heights[0] + heights[1]), polygon)
-    return Fit(pose, heights, float(np.sqrt(scale * 0.5 * (cov[0, 0] + cov[1, 1]))), float(np.sqrt(scale * cov[2, 2])),
+    return Fit(pose, heights, float(np.sqrt(unit * 0.5 * (cov[0, 0] + cov[1, 1]))), float(np.sqrt(unit * cov[2, 2])),
                outline_share, inner_share, score, worth, polygon)  # fmt: skip
+
+
+def _scatter(out: FloatArray) -> float:
+    """Standard deviation, px, of the distances between taught and met edges, outliers apart."""
+    met = np.abs(out[out[:, 1] != 0.0, 0])
+    return float(np.clip(1.4826 * np.median(met), LEAST_SCATTER_PX, 1.5)) if len(met) else 1.5

@@ -46,7 +46,7 @@ class Model:
     outline_mm (k, 2): its plan as a polygon, counter-clockwise.  outline: points along it; their height is that where
     it faces away from the camera: there a wall's top is seen.  facing_height_mm, facing_sigma_mm: where it faces the
     camera, down to the wall's foot.  inner: edges inside the outline.  height_mm: of the top face.  away (2,): how far
-    a point was seen displaced for each millimetre of height when taught.  turns: how many yaws look alike, 0 for all.
+    a point was seen displaced for each millimetre of height when taught.  yaw_rad: its yaw then.  turns: how many yaws look alike, 0 for all.
     proposed_turns: what the outline alone suggests.  side_told: whether up can be told from down.
     """
 
@@ -61,6 +61,7 @@ class Model:
     facing_height_mm: float
     facing_sigma_mm: float
     away: FloatArray
+    yaw_rad: float
     inner: tuple[Contour, ...]
 
     def __post_init__(self) -> None:
@@ -79,7 +80,7 @@ class Model:
             "format": FORMAT, "part": self.part, "height_mm": self.height_mm, "turns": self.turns,
             "proposed_turns": self.proposed_turns, "side_told": self.side_told, "mirrored_alike": self.mirrored_alike,
             "outline_mm": np.round(self.outline_mm, 3).tolist(),
-            "away": np.round(self.away, 5).tolist(), "facing_height_mm": round(self.facing_height_mm, 3),
+            "yaw_rad": round(self.yaw_rad, 5), "away": np.round(self.away, 5).tolist(), "facing_height_mm": round(self.facing_height_mm, 3),
             "facing_sigma_mm": round(self.facing_sigma_mm, 3),
             "outline": _packed(self.outline), "inner": [_packed(one) for one in self.inner],
         }, indent=None, separators=(",", ":")) + "\n"  # fmt: skip
@@ -133,6 +134,7 @@ class _Reader:
             outline=self.contour(raw.get("outline"), "outline", 8),
             facing_height_mm=self.number(raw, "facing_height_mm", -1000.0, 1000.0),
             facing_sigma_mm=self.number(raw, "facing_sigma_mm", 0.0, 1000.0),
+            yaw_rad=self.number(raw, "yaw_rad", -1000.0, 1000.0),
             away=self.table({"away": [raw.get("away")]}, "away", "away", 2, 1)[0],
             inner=tuple(self.contour(one, f"inner[{k}]", 1) for k, one in enumerate(inner)),
         )  # fmt: skip

@@ -14,7 +14,8 @@ NOISE_FACTOR = 3.0
 LEAST_SLOPE = 2.0
 LONGEST_BRIDGE_PX = 9
 SHADOW_RATIO = 0.88
-LEAST_LEFT = 0.5
+LEAST_LEFT, LEAST_SHADOW = 0.5, 0.02  # of what the lines enclose
+SOFTER = 0.75
 
 
 def edge_lines(window: Grey, belt: NDArray[np.bool_]) -> Mask:
@@ -102,9 +103,9 @@ def _without_shadow(window: Grey, mask: Mask, lines: Mask, blob: Mask) -> Mask:
                 continue
             to_belt = [pair for other, pair in border[k].items() if other in outside]
             to_part = [pair for other, pair in border[k].items() if other not in outside]
-            if not to_belt or not to_part or left - own.sum() < LEAST_LEFT * whole:
+            if not to_belt or not to_part or not LEAST_SHADOW * whole < own.sum() < left - LEAST_LEFT * whole:
                 continue
-            if _mean(to_belt) < _mean(to_part):
+            if _mean(to_belt) < SOFTER * _mean(to_part):
                 outside.add(k)
                 left -= int(own.sum())
                 changed = True

@@ -68,13 +68,13 @@ def _turned(points, affine, angle, du, dv, mask, reach):  # type: ignore[no-unty
         reach[2], reach[3] = max(reach[2], u), max(reach[3], v)
 
 
-@njit("void(u1[:,::1], u1[:,::1], i4[:,::1], i8, f8[:,::1], f8[:,::1], f8[::1], i8, f8, i8[::1], f8[:,:,:,::1])", cache=True)
-def placements(own, near, label, patch, points, affine, anchor, turns, step, box, blocks):  # type: ignore[no-untyped-def]
+@njit("void(u1[:,::1], u1[:,::1], i4[:,::1], i8, f8[:,::1], f8[:,::1], f8[::1], f8, i8, f8, i8[::1], f8[:,:,:,::1])", cache=True)
+def placements(own, near, label, patch, points, affine, anchor, first, turns, step, box, blocks):  # type: ignore[no-untyped-def]
     """Best placement in each block of cells over one patch, and in each bin of turns: blocks (rows, columns, bins, 4).
 
     Each: score (mean of the shares of points met within a cell and exactly; 0: none), column, row, turn in radians.
     affine (2, 2): cells per millimetre.  anchor (2,): a point well inside the outline, which must lie on the patch.
-    box: the patch's, first and last column and row; a placement keeps within it but for some slack.
+    box: the patch's, first and last column and row; a placement keeps within it but for some slack.  first, step: turns in radians.
     """
     rows, columns = near.shape
     n = points.shape[0]
@@ -82,8 +82,9 @@ def placements(own, near, label, patch, points, affine, anchor, turns, step, box
     blocks[:, :, :, 0] = 0.0
     allowed = int(n * (1.0 - LEAST_SHARE))
     for turn in range(turns):
-        _turned(points, affine, turn * step, du, dv, mask, reach)
-        cosine, sine = np.cos(turn * step), np.sin(turn * step)
+        angle = first + turn * step
+        _turned(points, affine, angle, du, dv, mask, reach)
+        cosine, sine = np.cos(angle), np.sin(angle)
         ax, ay = cosine * anchor[0] - sine * anchor[1], sine * anchor[0] + cosine * anchor[1]
         au = int(np.round(affine[0, 0] * ax + affine[0, 1] * ay))
         av = int(np.round(affine[1, 0] * ax + affine[1, 1] * ay))
@@ -113,7 +114,7 @@ def placements(own, near, label, patch, points, affine, anchor, turns, step, box
                 bi = min(max((i - box[0]) // BLOCK_CELLS + 8, 0), blocks.shape[1] - 1)
                 if score > blocks[bj, bi, part, 0]:
                     blocks[bj, bi, part, 0], blocks[bj, bi, part, 1] = score, i
-                    blocks[bj, bi, part, 2], blocks[bj, bi, part, 3] = j, turn * step
+                    blocks[bj, bi, part, 2], blocks[bj, bi, part, 3] = j, angle
 
 
 def room_for(box: NDArray[np.int64], turns: int) -> FloatArray:

@@ -18,6 +18,9 @@ ROUND_TURNS = 24
 ALIKE_MM = 0.35
 MOST_TURNS = 12
 HEIGHT_STEPS = 25
+SEEN_SIGMA_MM = 0.1  # light and chamfers shift edges by as much
+PRIOR, PRIOR_SIGMA = 0.6, 0.3  # of the height of the top face
+INNER_PRIOR = 0.85
 VOTED_HEIGHTS = 7
 
 
@@ -133,13 +136,15 @@ def wall_heights(
                                  turns) for k in range(len(steps))])  # fmt: skip
         best[side] = int(np.argmin(cost))
     slope = float(np.linalg.norm(frame.away()))
-    sigma = min(0.05 / max(slope, 1e-6), 0.25 * top_mm)
-    return (float(steps[best[0]]), float(steps[best[1]])), max(sigma, 0.03 * top_mm)
+    seen = SEEN_SIGMA_MM / max(slope, 1e-6)
+    share = 1.0 / (1.0 + (seen / (PRIOR_SIGMA * top_mm)) ** 2)
+    low, high = (share * float(steps[k]) + (1.0 - share) * PRIOR * top_mm for k in best)
+    return (low, high), float(np.sqrt(share)) * seen
 
 
 def edge_height(line: FloatArray, every: FloatArray, frame: Frame, top_mm: float, turns: int) -> tuple[float, float]:
     """Height, and its sigma, at which an inner line (rows u, v, ...) turned falls on lines of the same height."""
-    heights = np.linspace(0.0, 1.1 * top_mm, HEIGHT_STEPS)
+    heights = np.linspace(0.0, top_mm, HEIGHT_STEPS)
     count = turns or ROUND_TURNS
     cost = np.empty(len(heights))
     for k, h in enumerate(heights):
@@ -151,7 +156,7 @@ def edge_height(line: FloatArray, every: FloatArray, frame: Frame, top_mm: float
 
 
 def _least(heights: FloatArray, cost: FloatArray, frame: Frame, points: int, top_mm: float) -> tuple[float, float]:
-    """Height of least cost; its sigma from how steeply the cost rises, never below what a millimetre-class map allows."""
+    """Height of least cost; its sigma, drawn towards what is usual where the view is steep."""
     at = int(np.argmin(cost))
     height = heights[at]
     if 0 < at < len(heights) - 1:
@@ -159,8 +164,9 @@ def _least(heights: FloatArray, cost: FloatArray, frame: Frame, points: int, top
         curve = before - 2.0 * here + after
         height += 0.5 * (before - after) / curve * (heights[1] - heights[0]) if curve > 0.0 else 0.0
     slope = float(np.linalg.norm(frame.away()))
-    sigma = min(0.05 / max(slope, 1e-6), 0.3 * top_mm)
-    return float(height), max(sigma, 0.03 * top_mm)
+    seen = SEEN_SIGMA_MM / max(slope, 1e-6)
+    share = 1.0 / (1.0 + (seen / (PRIOR_SIGMA * top_mm)) ** 2)
+    return share * float(height) + (1.0 - share) * INNER_PRIOR * top_mm, float(np.sqrt(share)) * seen
 
 
 def repeated(line: FloatArray, every: FloatArray, frame: Frame, height: float, turns: int) -> NDArray[np.bool_]:

@@ -20,7 +20,8 @@ Grey = NDArray[np.uint8]
 SPACING_MM = 0.8
 LEAST_INNER_MM = 4.0
 MARGIN_PX = 14
-UNKNOWN_FACING, UNKNOWN_AWAY, UNKNOWN_SIGMA = 0.5, 0.6, 0.25  # of the height, where one view cannot tell it
+UNKNOWN_TOP, UNKNOWN_SIGMA = 0.6, 0.2  # of the height, where one view cannot tell it
+UNKNOWN_INNER = 0.85
 
 
 @dataclass(frozen=True)
@@ -69,7 +70,8 @@ def teach(grey: Grey, camera: CameraMap, surface_mm: float, taught: Taught, file
         raise InputFault(file, "--tool", "no outline can be told from the belt", "take a sharper image, or change the light")
     pixels, steps = snapped(grey, chain)
     top = taught.height_mm
-    heights, sigma = (UNKNOWN_FACING * top, UNKNOWN_AWAY * top), UNKNOWN_SIGMA * top
+    lighter = float(np.median(steps)) < 0.0  # then a wall, in shade, is not seen as part of it
+    heights, sigma = (UNKNOWN_TOP * top if lighter else 0.0, UNKNOWN_TOP * top), UNKNOWN_SIGMA * top
     if taught.turns != 1:
         heights, sigma = wall_heights(pixels, frame, top, taught.turns)
     outline, polygon = _outline(pixels, steps, frame, heights, sigma)
@@ -78,7 +80,7 @@ def teach(grey: Grey, camera: CameraMap, surface_mm: float, taught: Taught, file
     edge_mm = SPACING_MM * sum(len(one.steps) for one in inner)
     told = not mirrored or edge_mm > 0.15 * SPACING_MM * len(outline.steps)
     return Model(taught.part, taught.height_mm, taught.turns, turns_seen(polygon), told, mirrored, polygon,
-                 outline, heights[0], sigma, frame.away(), inner)
+                 outline, heights[0], sigma, frame.away(), float(taught.pose[2]), inner)
 
 
 def _window(grey: Grey, frame: GripFrame, taught: Taught, file: str) -> tuple[Grey, FloatArray, NDArray[np.uint8]]:
@@ -222,7 +224,7 @@ def _levelled(lines: list[FloatArray], frame: GripFrame, taught: Taught) -> tupl
     every = np.concatenate(lines) if lines else np.zeros((0, 5))
     found = []
     for line in lines:
-        height, sigma = top, 0.3 * top
+        height, sigma = UNKNOWN_INNER * top, UNKNOWN_SIGMA * top
         if taught.turns != 1:
             height, sigma = edge_height(line, every, frame, top, taught.turns)
             line = line[repeated(line, every, frame, height, taught.turns)]
