@@ -85,6 +85,7 @@ def _two_ramps(root: float, end: float, side: float, accel: float, jerk: float) 
 
 @vectorize(["float64(float64, float64, float64, float64, float64)"], cache=True)  # type: ignore[no-untyped-call, untyped-decorator]
 def rest_to_moving_kernel(distance: float, end_speed: float, speed: float, accel: float, jerk: float) -> float:
+    """`rest_to_moving_time` of one axis, for loops that are compiled themselves."""
     way, end = (distance, end_speed) if end_speed >= 0 else (-distance, -end_speed)
     if not (end <= speed and np.isfinite(way)):
         return float(np.nan)
