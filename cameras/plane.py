@@ -75,11 +75,10 @@ def fit_touches(
     found = None
     if lens is None and len(pixels) >= FEWEST_FOR_DISTORTION:
         found = _settled(start, *_free(start, points, True), pixels, points, agreeing)
-        found = found if abs(found.map.lens.parameters[K1]) > 2 * found.map.lens.standard_errors[K1] else None
-    if found is None:
+    if found is None or abs(found.map.lens.parameters[K1]) < 2 * found.map.lens.standard_errors[K1]:
         found = _settled(start, *_free(start, points, False), pixels, points, agreeing)
-    if found.kept.sum() < max(4, 0.3 * len(pixels)):
-        raise InputFault(file, "", f"only {found.kept.sum()} of {len(pixels)} touches agree on a map",
+    if found is None or found.kept.sum() < 0.3 * len(pixels):
+        raise InputFault(file, "", f"hardly any of the {len(pixels)} touches agree on a map",
                          "check pixels, positions, counts and the lens file")
     return found
 
@@ -142,10 +141,10 @@ def _off(found: CameraMap, pixels: FloatArray, points: FloatArray) -> FloatArray
 
 def _settled(
     start: CameraMap, free: FloatArray, tied: int, pixels: FloatArray, points: FloatArray, kept: NDArray[np.bool_]
-) -> PlaneFit:
+) -> PlaneFit | None:
     """The fit to those touches that lie within the gate of it; from `kept`, until no touch joins or leaves.
 
-    First the gate goes by the median, so that a few bad touches do not widen it for one another; then, as the median
+    None where too few are left to determine one. First the gate goes by the median, so that a few bad touches do not widen it for one another; then, as the median
     of a few touches is rough, by the standard deviation of those left.
     """
     sigma = max(float(np.sqrt((_off(start, pixels, points)[kept] ** 2).mean())), _FLOOR_MM)
@@ -154,11 +153,13 @@ def _settled(
         kept = np.ones(len(pixels), dtype=bool)
     for by_median in (True, False):
         for _ in range(_ROUNDS):
+            if max(2 * kept.sum() + tied - free.shape[1], kept.sum() - 4) < 0:
+                return None
             found = _refined(start, free, tied, pixels[kept], points[kept], sigma)
             fit = _judged(found, free, tied, pixels, points, kept)
             sigma = fit.sigma_mm
             near = _near(fit, by_median)
-            if spare < 4 or (near == kept).all() or near.sum() < 4:
+            if spare < 4 or (near == kept).all():
                 break
             kept = near
     return fit

@@ -8,12 +8,13 @@ from numpy.typing import NDArray
 
 from cameras.camera import Basis, CameraMap
 from cameras.faults import InputFault
-from cameras.homography import agreed_homography, mapped
+from cameras.homography import agreed_homography, determinacy
 from cameras.lens import Lens
 
 FloatArray = NDArray[np.float64]
 _OFF_PLANE_MM = 2.0  # a touch this far from the touched plane counts as one at another height
 _OFF_PLANE_TOUCHES = 3  # that many of them fix the three numbers that height adds, with something to spare
+_DETERMINED = 1e-3  # below it the marks of a field 300 mm long lie in a strip of a millimetre
 
 
 def linear_start(
@@ -27,16 +28,17 @@ def linear_start(
     near = np.abs(heights[:, None] - heights) <= _OFF_PLANE_MM
     on_plane = near[int(np.argmax(near.sum(axis=1)))]
     plane_mm = float(np.median(heights[on_plane]))
-    if on_plane.sum() < 4 or thinness(points[on_plane, :2]) < 0.01:
-        raise InputFault(file, "", "all marks of one height lie on a line, or they are fewer than 4",
-                         "touch marks spread over the whole field")
+    if on_plane.sum() < 4:
+        raise InputFault(file, "", f"no more than {on_plane.sum()} marks lie at one height",
+                         "touch at least 4 marks on the surface, spread over the whole field")
     rays = lens.rays(pixels)
     if not np.isfinite(rays).all():
         at = int(np.argmin(np.isfinite(rays).all(axis=1)))
         raise InputFault(file, f"touch {at + 1}", "lies outside what the lens file describes", "check pixels and lens")
     to_cell, agree = agreed_homography(rays[on_plane], points[on_plane, :2])
-    if thinness(mapped(to_cell, rays[on_plane])[agree]) < 0.01 or np.linalg.cond(to_cell) > 1e9:
-        raise InputFault(file, "", "too many of the marks lie on one line", "touch marks spread over the whole field")
+    if determinacy(rays[on_plane][agree], points[on_plane][agree, :2]) < _DETERMINED:
+        raise InputFault(file, "", "the marks, or all but one of them, lie on a line",
+                         "touch marks spread over the whole field")
     agreeing = np.zeros(len(pixels), dtype=bool)
     agreeing[on_plane] = agree
     columns: FloatArray = np.linalg.inv(to_cell).astype(np.float64)
