@@ -36,6 +36,7 @@ def plot_reach(reacher: Reacher, window: Spots, slots: list[Spots], path: Path) 
         _surroundings(ax, reacher)
         ax.set(xlabel="x, mm", ylabel="y, mm", aspect="equal")
         ax.grid(alpha=0.2)
+    figure.legend(*axes[0].get_legend_handles_labels(), loc="outside lower center", ncols=3, frameon=False)
     figure.savefig(path, dpi=100, format="png")
 
 
@@ -77,4 +78,3 @@ def _surroundings(ax: Axes, reacher: Reacher) -> None:
                     va="center", arrowprops={"arrowstyle": "->", "lw": 1.5})
     ax.plot([], [], "o", mfc="white", mec="black", label="slot")
     ax.plot([], [], "x", color="crimson", label="slot out of reach")
-    ax.legend(loc="lower right", fontsize="small")

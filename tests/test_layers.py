@@ -37,7 +37,8 @@ pipeline.replay
 pipeline.trajectory pipeline.study
 pipeline.fit pipeline.trade_cycle pipeline.reach pipeline.score pipeline.budget
 pipeline.sighted pipeline.reach_plot pipeline.reach_suggest pipeline.error_plot
-pipeline.check pipeline.tables pipeline.page
+pipeline.account pipeline.check pipeline.tables
+pipeline.page
 pipeline.outputs
 pipeline.app
 """
