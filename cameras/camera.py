@@ -115,13 +115,14 @@ class CameraMap:
 
         Root mean square over four directions, which is that over all: yaw errors have two lobes at the most.
         """
-        points, variance = self.points(points_mm, height_mm), 0.0
+        points = self.points(points_mm, height_mm)
+        variance = np.zeros(points.shape[:-1])
         for angle in np.pi / 4 * np.arange(4):
             x, y = np.cos(angle), np.sin(angle)
             end = 10.0 * np.array([x, y, 0.0])
             apart = self._moved(points + end) - self._moved(points - end)
-            variance = variance + (((x * apart[..., 1, :] - y * apart[..., 0, :]) / 20.0) ** 2).sum(axis=-1) / 4
-        return np.sqrt(np.asarray(variance))
+            variance += (((x * apart[..., 1, :] - y * apart[..., 0, :]) / 20.0) ** 2).sum(axis=-1) / 4
+        return np.sqrt(variance)
 
     def lens_known(self) -> "CameraMap":
         """The map as unsure as it would be if the lens file were exact: covariance given the lens."""

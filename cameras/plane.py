@@ -144,8 +144,8 @@ def _settled(
 ) -> PlaneFit | None:
     """The fit to those touches that lie within the gate of it; from `kept`, until no touch joins or leaves.
 
-    None where too few are left to determine one. First the gate goes by the median, so that a few bad touches do not widen it for one another; then, as the median
-    of a few touches is rough, by the standard deviation of those left.
+    None where too few are left to determine one. First the gate goes by the median, so that a few bad touches do not
+    widen it for one another; then, as the median of a few touches is rough, by the standard deviation of those left.
     """
     sigma = max(float(np.sqrt((_off(start, pixels, points)[kept] ** 2).mean())), _FLOOR_MM)
     spare = 2 * len(pixels) - (free.shape[1] - tied)
@@ -153,7 +153,7 @@ def _settled(
         kept = np.ones(len(pixels), dtype=bool)
     for by_median in (True, False):
         for _ in range(_ROUNDS):
-            if max(2 * kept.sum() + tied - free.shape[1], kept.sum() - 4) < 0:
+            if kept.sum() < 4 or 2 * kept.sum() + tied < free.shape[1]:
                 return None
             found = _refined(start, free, tied, pixels[kept], points[kept], sigma)
             fit = _judged(found, free, tied, pixels, points, kept)

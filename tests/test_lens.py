@@ -64,7 +64,8 @@ def test_distortion_is_that_of_opencv():
     """Outside check: cv2.projectPoints of the same rays."""
     rays = Lens(STRONG, SIZE).rays(image_net()).reshape(-1, 2)
     matrix = np.array([[STRONG[0], 0, STRONG[2]], [0, STRONG[1], STRONG[3]], [0, 0, 1.0]])
-    theirs = cv2.projectPoints(np.column_stack([rays, np.ones(len(rays))]), np.zeros(3), np.zeros(3), matrix, STRONG[4:])[0]
+    points = np.column_stack([rays, np.ones(len(rays))])
+    theirs = cv2.projectPoints(points, np.zeros(3), np.zeros(3), matrix, STRONG[4:])[0]
     assert np.abs(theirs.reshape(-1, 2) - Lens(STRONG, SIZE).pixels(rays)).max() < 1e-9
 
 
@@ -141,8 +142,9 @@ def test_lens_file_comes_back_as_it_went(tmp_path):
 
 @pytest.mark.parametrize(("change", "place"), [
     ({"kind": "camera"}, "kind"), ({"format": 2}, "format"), ({"fx_px": -1.0}, "fx_px"), ({"fx_px": "a"}, "fx_px"),
-    ({"k1": float("nan")}, "k1"), ({"covariance": [[1.0]]}, "covariance"), ({"covariance": [[1], [1, 2]]}, "covariance"),
-    ({"image_size_px": [0, 10]}, "image_size_px"), ({"colour": 1}, "colour"), ({"k2": None}, "k2"),
+    ({"k1": float("nan")}, "k1"), ({"covariance": [[1.0]]}, "covariance"),
+    ({"covariance": [[1], [1, 2]]}, "covariance"), ({"image_size_px": [0, 10]}, "image_size_px"),
+    ({"colour": 1}, "colour"), ({"k2": None}, "k2"),
 ])  # fmt: skip
 def test_a_lens_file_that_will_not_do_is_named_by_key(tmp_path, change, place):
     document = {**Lens(MILD, SIZE).document(), **change}
