@@ -65,6 +65,7 @@ class BeltScale:
 def read_marks(path: str | Path, counts_modulus: int | None = None) -> BeltMarks:
     """Read a file of belt touches; a mark's counts are unwrapped in the order of its rows, by the shortest steps.
 
+    So a counter that rolls over must not run on by half its modulus from one touch of a mark to the next.
     Raises InputFault for a file that will not do.
     """
     path = Path(path)
