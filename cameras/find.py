@@ -164,7 +164,7 @@ class PartFinder:
         polygon = fit.polygon_px
         if polygon.min() < 0.5 or polygon[:, 0].max() > columns - 1.5 or polygon[:, 1].max() > rows - 1.5:
             return None
-        return _Placed(kind, fit, views.places_mm[place] + fit.pose[:2], polygon)
+        return _Placed(kind, fit, views.places_mm[place] + fit.pose[:2] - kind.model.shift_mm, polygon)
 
     def _unknown(self, kept: list[_Placed], blobs: Blobs, camera: CameraMap) -> list[tuple[FloatArray, FloatArray]]:
         """Centre and outline about it, in mm, of what no part explains and no border cuts."""

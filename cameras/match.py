@@ -21,7 +21,7 @@ HIT_PX = 1.2
 STAGE1 = 0.3
 INNER_SHARE, INNER_WORTH = 0.45, 0.3  # of inner edges, what a part the right side up shows at the least; its weight
 PIXEL_SIGMA = 0.25
-DOWN_FACING, DOWN_AWAY, DOWN_SIGMA = 0.85, 0.85, 0.15  # of the height: what a part shows turned over was not taught
+DOWN_LIGHTER, DOWN_DARKER, DOWN_SIGMA = 0.92, 0.75, 0.15  # of the height: of the outline of a part turned over
 LEAST_SCATTER_PX = 0.12
 CORRELATED = 16.0  # neighbouring edge points err together
 
@@ -51,7 +51,8 @@ def template_of(model: Model, down: bool) -> Template:
                              for k, one in enumerate(groups)])
     top = model.height_mm
     if down:
-        heights, sigmas = [DOWN_FACING * top, DOWN_AWAY * top], [DOWN_SIGMA * top] * 2
+        lighter = float(np.median(model.outline.steps)) < 0.0
+        heights, sigmas = [(DOWN_LIGHTER if lighter else DOWN_DARKER) * top] * 2, [DOWN_SIGMA * top] * 2
         points = points * np.array([1.0, -1.0, 1.0, -1.0, 1.0, 1.0])
     else:
         heights = [model.facing_height_mm, model.outline.height_mm] + [one.height_mm for one in model.inner]

@@ -46,7 +46,8 @@ class Model:
     outline_mm (k, 2): its plan as a polygon, counter-clockwise.  outline: points along it; their height is that where
     it faces away from the camera: there a wall's top is seen.  facing_height_mm, facing_sigma_mm: where it faces the
     camera, down to the wall's foot.  inner: edges inside the outline.  height_mm: of the top face.  away (2,): how far
-    a point was seen displaced for each millimetre of height when taught.  yaw_rad: its yaw then.  turns: how many yaws look alike, 0 for all.
+    a point was seen displaced for each millimetre of height when taught.  yaw_rad: its yaw then.
+    shift_mm (2,): how far, in the cell frame, light from one side makes its edges appear beside where they are.  turns: how many yaws look alike, 0 for all.
     proposed_turns: what the outline alone suggests.  side_told: whether up can be told from down.
     """
 
@@ -62,12 +63,14 @@ class Model:
     facing_sigma_mm: float
     away: FloatArray
     yaw_rad: float
+    shift_mm: FloatArray
     inner: tuple[Contour, ...]
 
     def __post_init__(self) -> None:
         """Make the polygon read-only."""
         self.outline_mm.flags.writeable = False
         self.away.flags.writeable = False
+        self.shift_mm.flags.writeable = False
 
     @property
     def radius_mm(self) -> float:
@@ -80,7 +83,7 @@ class Model:
             "format": FORMAT, "part": self.part, "height_mm": self.height_mm, "turns": self.turns,
             "proposed_turns": self.proposed_turns, "side_told": self.side_told, "mirrored_alike": self.mirrored_alike,
             "outline_mm": np.round(self.outline_mm, 3).tolist(),
-            "yaw_rad": round(self.yaw_rad, 5), "away": np.round(self.away, 5).tolist(), "facing_height_mm": round(self.facing_height_mm, 3),
+            "shift_mm": np.round(self.shift_mm, 4).tolist(), "yaw_rad": round(self.yaw_rad, 5), "away": np.round(self.away, 5).tolist(), "facing_height_mm": round(self.facing_height_mm, 3),
             "facing_sigma_mm": round(self.facing_sigma_mm, 3),
             "outline": _packed(self.outline), "inner": [_packed(one) for one in self.inner],
         }, indent=None, separators=(",", ":")) + "\n"  # fmt: skip
@@ -134,6 +137,7 @@ class _Reader:
             outline=self.contour(raw.get("outline"), "outline", 8),
             facing_height_mm=self.number(raw, "facing_height_mm", -1000.0, 1000.0),
             facing_sigma_mm=self.number(raw, "facing_sigma_mm", 0.0, 1000.0),
+            shift_mm=self.table({"shift_mm": [raw.get("shift_mm")]}, "shift_mm", "shift_mm", 2, 1)[0],
             yaw_rad=self.number(raw, "yaw_rad", -1000.0, 1000.0),
             away=self.table({"away": [raw.get("away")]}, "away", "away", 2, 1)[0],
             inner=tuple(self.contour(one, f"inner[{k}]", 1) for k, one in enumerate(inner)),

@@ -19,7 +19,7 @@ ALIKE_MM = 0.35
 MOST_TURNS = 12
 HEIGHT_STEPS = 25
 SEEN_SIGMA_MM = 0.1  # light and chamfers shift edges by as much
-PRIOR, PRIOR_SIGMA = 0.6, 0.3  # of the height of the top face
+PRIOR, PRIOR_SIGMA = 0.5, 0.3  # of the height of the top face
 INNER_PRIOR = 0.85
 VOTED_HEIGHTS = 7
 
@@ -167,6 +167,31 @@ def _least(heights: FloatArray, cost: FloatArray, frame: Frame, points: int, top
     seen = SEEN_SIGMA_MM / max(slope, 1e-6)
     share = 1.0 / (1.0 + (seen / (PRIOR_SIGMA * top_mm)) ** 2)
     return share * float(height) + (1.0 - share) * INNER_PRIOR * top_mm, float(np.sqrt(share)) * seen
+
+
+def off_centre(polygon: FloatArray, turns: int) -> FloatArray:
+    """How far (2,) a polygon, which looks alike at so many turns about the origin, lies off it.
+
+    Least squares on the distances from turned copies to the polygon's lines, nearest points matched anew each time.
+    """
+    normal = np.roll(polygon, -1, axis=0) - np.roll(polygon, 1, axis=0)
+    normal = np.column_stack([normal[:, 1], -normal[:, 0]]) / np.maximum(np.linalg.norm(normal, axis=1), 1e-12)[:, None]
+    centre = np.zeros(2)
+    for within in (3.0, 2.0, 1.0, 0.7, 0.7):
+        tree = cKDTree(polygon - centre)
+        rows, right = [], []
+        for k in range(1, turns):
+            angle = 2.0 * np.pi * k / turns
+            copy = turned(polygon - centre, angle)
+            apart, at = tree.query(copy)
+            near = apart < within * ALIKE_MM
+            rows.append(normal[at[near]] @ (np.eye(2) - turned(np.eye(2), angle).T))
+            right.append(np.sum(normal[at[near]] * ((polygon - centre)[at[near]] - copy[near]), axis=1))
+        a, b = np.concatenate(rows), np.concatenate(right)
+        if len(b) < 6:
+            break
+        centre = centre + np.linalg.lstsq(a, b, rcond=None)[0]
+    return centre if float(np.linalg.norm(centre)) < 1.5 else np.zeros(2)
 
 
 def repeated(line: FloatArray, every: FloatArray, frame: Frame, height: float, turns: int) -> NDArray[np.bool_]:

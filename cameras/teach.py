@@ -1,6 +1,6 @@
 """Teaching: from one image of a lone part, and the tool pose that grips it, to the part's outline and inner edges."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import cv2
 import numpy as np
@@ -11,7 +11,7 @@ from cameras.edges import MOST_SAMPLES, edge_along, edge_map
 from cameras.faults import InputFault
 from cameras.model import MOST_CONTOURS, Contour, Model
 from cameras.outline import rough_outline
-from cameras.symmetry import alike_under_turn, edge_height, repeated, turns_seen, wall_heights
+from cameras.symmetry import alike_under_turn, edge_height, off_centre, repeated, turns_seen, wall_heights
 from cameras.view import CameraMap
 
 FloatArray = NDArray[np.float64]
@@ -20,7 +20,7 @@ Grey = NDArray[np.uint8]
 SPACING_MM = 0.8
 LEAST_INNER_MM = 4.0
 MARGIN_PX = 14
-UNKNOWN_TOP, UNKNOWN_SIGMA = 0.6, 0.2  # of the height, where one view cannot tell it
+UNKNOWN_TOP, UNKNOWN_SIGMA = 0.55, 0.2  # of the height, where one view cannot tell it
 UNKNOWN_INNER = 0.85
 
 
@@ -76,11 +76,17 @@ def teach(grey: Grey, camera: CameraMap, surface_mm: float, taught: Taught, file
         heights, sigma = wall_heights(pixels, frame, top, taught.turns)
     outline, polygon = _outline(pixels, steps, frame, heights, sigma)
     inner = _inner(grey, polygon, frame, taught)
+    shift = np.zeros(2)
+    if taught.turns > 1:
+        off = off_centre(polygon, taught.turns)
+        polygon, outline = polygon - off, replace(outline, points_mm=outline.points_mm - off)
+        inner = tuple(replace(one, points_mm=one.points_mm - off) for one in inner)
+        shift = frame.turn @ off
     mirrored = alike_under_turn(polygon, polygon * np.array([1.0, -1.0]), mirrored=True)
     edge_mm = SPACING_MM * sum(len(one.steps) for one in inner)
     told = not mirrored or edge_mm > 0.15 * SPACING_MM * len(outline.steps)
     return Model(taught.part, taught.height_mm, taught.turns, turns_seen(polygon), told, mirrored, polygon,
-                 outline, heights[0], sigma, frame.away(), float(taught.pose[2]), inner)
+                 outline, heights[0], sigma, frame.away(), float(taught.pose[2]), shift, inner)
 
 
 def _window(grey: Grey, frame: GripFrame, taught: Taught, file: str) -> tuple[Grey, FloatArray, NDArray[np.uint8]]:
@@ -244,3 +250,12 @@ def _thinned(line: FloatArray, frame: GripFrame, height: float, sigma: float) ->
     normal = ahead[kept] - points[kept]
     normal = normal / np.maximum(np.linalg.norm(normal, axis=1), 1e-12)[:, None]
     return Contour(points[kept], normal, line[kept, 4], height, sigma)
+
+
+def _is_hole(line: FloatArray) -> bool:
+    """Whether an inner line (rows u, v, nu, nv, step) runs round a dark middle, as a hole's rim does."""
+    middle = 0.5 * (line[:, :2].min(axis=0) + line[:, :2].max(axis=0))
+    away = line[:, :2] - middle
+    outwards = np.sum(away * line[:, 2:4], axis=1) * line[:, 4] > 0.0
+    sectors = np.unique(np.floor((np.arctan2(away[:, 1], away[:, 0]) + np.pi) / (np.pi / 6)))
+    return bool(np.mean(outwards) > 0.85 and len(sectors) >= 9)
