@@ -14,7 +14,7 @@ FloatArray = NDArray[np.float64]
 FOLLOWED = 12  # times looked at while the tool is with the part
 STEP_S = 0.008  # between postures held against keep-outs
 SLACK_S = 0.008
-WINDOW_MM = 1e-3
+WINDOW_MM = 0.05
 ROUNDING = 1e-9
 
 

@@ -61,26 +61,28 @@ class Across:
         return Way(duration, tuple(self._one(k, start, end, duration, apart=k == shape - 1) for k in range(3)))
 
     def meet(self, start: State, from_s: float, target: Callable[[float], State | None],
-             shape: int = TOGETHER) -> Way | None:
+             least_s: float = 0.0, shape: int = TOGETHER) -> Way | None:
         """The soonest move that starts at from_s and ends in target(from_s + its duration); None where there is none.
+
+        It takes no less than least_s; target is not asked for sooner times.
 
         target answers None where the part can't be followed. The end is met exactly, no later than SETTLED_S after the
         soonest time it can be. The search is a fixed point: the part is slow against the arm, so each step shrinks the
         error by about their ratio.
         """
-        wanted = 0.0
+        wanted = least_s
         for attempt in range(SEARCHES):
             end = target(from_s + wanted)
             if end is None:
                 return None
             least = flip_time(float(start[0][1]), float(end[0][1]), self._singular)
-            needed = max(least, *self._together(start, end, 0.0).independent_min_durations)
+            needed = max(least_s, least, *self._together(start, end, 0.0).independent_min_durations)
             if needed > MOST_S:
                 return None
             spare = wanted - needed
             if 0 <= spare and (spare < SETTLED_S or attempt > PATIENCE):
                 return self.between(start, end, wanted, shape)
-            wanted = needed + 0.1 * SETTLED_S
+            wanted = needed if needed == least_s else needed + 0.1 * SETTLED_S
         return None
 
     def _together(self, start: State, end: State, least_s: float) -> ruckig.Trajectory:

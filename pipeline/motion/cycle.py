@@ -119,13 +119,11 @@ class Mover:
         Raises MotionFault where ruckig refuses a move.
         """
         lift = self.lift_from(start, hold.z_mm)
-        meeting = self._meet_soonest(start, free_s, hold, lift, shapes[0])
-        if meeting is not None and meeting.met_s < met_from_s:
-            meeting = self._meet_at(start, met_from_s, hold, lift, shapes[0])
-        if meeting is not None and self.window_mm is not None:
-            enters = self.passes(hold, self.window_mm[0])
-            if meeting.depart_s + lift.total_s(meeting.move.duration) < enters:
-                meeting = self._contact_at(start, enters, hold, lift, shapes[0])
+        enters = -np.inf if self.window_mm is None else self.passes(hold, self.window_mm[0])
+        soonest = max(met_from_s, enters - lift.fall_s)
+        meeting = self._waited_for(start, free_s, (soonest, enters), hold, lift, shapes[0])
+        if meeting is None:
+            meeting = self._meet_soonest(start, free_s, soonest, hold, lift, shapes[0])
         if meeting is None:
             return None
         down = lift.curve(meeting.move.duration)
@@ -163,10 +161,27 @@ class Mover:
         target = along_mm - float(hold.at_mm @ self.belt.heading)
         return self.belt.when(target)
 
-    def _meet_soonest(self, start: FloatArray, free_s: float, hold: Hold, lift: Lift, shape: int) -> "_Leg | None":
+    def _waited_for(self, start: FloatArray, free_s: float, opens: tuple[float, float], hold: Hold, lift: Lift,
+                    shape: int) -> "_Leg | None":
+        """The way to a part that comes in reach later than the arm could be there; None where the arm is the later one.
+
+        opens: the part is met no sooner, and gripped no sooner.
+        """
+        soonest, enters = opens
+        if not np.isfinite(soonest) or soonest <= free_s:
+            return None
+        leg = self._meet_at(start, soonest, hold, lift, shape)
+        if leg is not None and leg.depart_s + lift.total_s(leg.move.duration) < enters:
+            leg = self._contact_at(start, enters, hold, lift, shape)
+        return leg if leg is not None and leg.depart_s >= free_s else None
+
+    def _meet_soonest(self, start: FloatArray, free_s: float, soonest: float, hold: Hold, lift: Lift,
+                      shape: int) -> "_Leg | None":
+        """The soonest way to a part that is not met before `soonest`."""
         rise = lift.rise_s(np.inf)
         for _ in range(SETTLING):
-            move = self.across.meet(at_rest(start), free_s + rise, lambda t: self.state_on(hold, t), shape)
+            least = max(0.0, soonest - free_s - rise)
+            move = self.across.meet(at_rest(start), free_s + rise, lambda t: self.state_on(hold, t), least, shape)
             if move is None:
                 return None
             needed = lift.rise_s(move.duration)

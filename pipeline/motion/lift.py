@@ -109,6 +109,12 @@ class Lift:
         """From rest to the gate, when the tip is to be above the gates for across_s."""
         return float(np.interp(across_s, self.table.across_s, self.table.rise_s))
 
+    @cached_property
+    def fall_s(self) -> float:
+        """From the gate to rest at the end, after the longest ways across: the least it can be."""
+        table = self.table
+        return float(table.total_s[-1] - table.rise_s[-1] - table.across_s[-1])
+
     def total_s(self, across_s: float) -> float:
         """The whole move, from rest to rest, when the tip is to be above the gates for across_s."""
         table = self.table
