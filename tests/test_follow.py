@@ -193,6 +193,33 @@ def test_outliers_are_left_out():
     assert part.frames_seen == 8
 
 
+def test_a_part_long_in_view_is_averaged_over_all_of_it():
+    rng = np.random.default_rng(0)
+    xy, yaw = rng.normal(0, 0.1, (2000, 2)), 3.1 + rng.normal(0, 0.005, 2000)
+    xy[1500] += 2.0  # an outlier past the first sightings, which are looked at together
+    part = follow(sightings(range(2000), ["lever"] * 2000, xy, yaw), recorded(np.zeros(2000)), CELL).parts[0]
+    assert np.allclose(part.xy_mm, np.delete(xy, 1500, axis=0).mean(axis=0), atol=0.001)
+    assert part.yaw_rad == pytest.approx(np.arctan2(np.sin(yaw.mean()), np.cos(yaw.mean())), abs=1e-4)
+    assert part.score == pytest.approx(0.9)
+
+
+@settings(max_examples=60, deadline=None)
+@given(st.lists(st.tuples(st.integers(0, 5), st.sampled_from(["", "lever", "plate", "dome"]), st.integers(-8, 8),
+                          st.floats(-4, 4), st.floats(0, 1)), max_size=30), st.floats(1e-6, 1e3), st.booleans())
+def test_anything_sighted_is_of_one_part_or_left_out(seen, sigma, tray):
+    rows, kinds, along, yaws, scores = zip(*seen, strict=True) if seen else ((),) * 5
+    given_in = sightings(rows, kinds, [(x, 0) for x in along] or np.zeros((0, 2)), np.array(yaws, float),
+                         np.array(scores, float), sigma_mm=sigma, outline=SQUARE)
+    followed = follow(given_in, recorded(np.arange(6) * 20), TRAY if tray else CELL, {"lever": SQUARE})
+    seen_of = np.bincount(followed.part_of[followed.part_of >= 0], minlength=len(followed.parts))
+    assert [part.frames_seen for part in followed.parts] == seen_of.tolist()
+    for k, part in enumerate(followed.parts):
+        mine = np.array(rows)[followed.part_of == k]
+        assert len(set(mine)) == len(mine)  # at most once a frame
+        assert (part.first_row, part.last_row) == (mine.min(), mine.max())
+        assert np.isfinite([*part.xy_mm, part.yaw_rad, part.score, part.sigma_mm, part.sigma_rad]).all()
+
+
 def test_kind_and_side_are_voted():
     seen = sightings(range(5), ["lever", "plate", "lever", "", "lever"], [[0, 0]] * 5)
     sides = np.array(["down", "up", "down", "", "down"])

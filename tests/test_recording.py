@@ -1,5 +1,6 @@
 """Recordings: read whole or refused with a file, a place, a fault and a remedy."""
 
+import pickle
 import struct
 import zlib
 
@@ -228,6 +229,12 @@ def test_video_frames_come_exactly_and_in_any_order(clip):
     recording = read_recording(clip)
     for row, number in [(0, 2), (1, 3), (3, 29), (2, 20), (2, 20), (0, 2)]:
         assert abs(float(recording.image(row).mean()) - 8 * number) < 3
+
+
+def test_a_recording_in_use_goes_to_another_process(clip):
+    recording = read_recording(clip)
+    image = recording.image(1)
+    assert np.array_equal(pickle.loads(pickle.dumps(recording)).image(1), image)
 
 
 def test_a_frame_beyond_the_video_is_refused(clip):

@@ -14,7 +14,7 @@ OUTLIER_SIGMAS = 4.0  # a sighting further than this from the middle of its fell
 OUTLIER_MM = 0.3  # with this much more for what their sigmas do not tell
 OUTLIER_RAD = math.radians(1.0)
 UNRECOGNISED_VOTE = 0.5  # a sighting not recognised votes as much as one recognised with this score
-MIDDLE_OF = 64  # the middle is the median of up to this many; beyond, the estimate before
+MIDDLE_OF = 64  # the middle is that of up to this many; every further one is held against the estimate before it
 PRIOR_PAIRS = 4.0  # weight, in sightings, of the belief that sigmas tell the scatter of sightings
 
 
@@ -74,10 +74,10 @@ def _wrapped(angle: float) -> float:
     return math.atan2(math.sin(angle), math.cos(angle))
 
 
-@njit("UniTuple(float64, 2)(int64[::1], float64[:, ::1], float64[::1], float64, float64, boolean[::1])", cache=True)
-def _place(chosen: IntArray, xy: FloatArray, sigma: FloatArray, x: float, y: float,
-           used: NDArray[np.bool_]) -> tuple[float, float]:
-    """Weighted mean of the chosen sightings that lie near (x, y); marks them as used."""
+@njit("UniTuple(float64, 3)(int64[::1], float64[:, ::1], float64[::1], boolean[::1])", cache=True)
+def _place(chosen: IntArray, xy: FloatArray, sigma: FloatArray, used: NDArray[np.bool_]) -> tuple[float, float, float]:
+    """Weighted mean and weight of the chosen sightings that lie near their median; marks them as used."""
+    x, y = np.median(xy[chosen, 0]), np.median(xy[chosen, 1])
     weight, sum_x, sum_y = 0.0, 0.0, 0.0
     for i in chosen:
         far = math.hypot(xy[i, 0] - x, xy[i, 1] - y)
@@ -86,16 +86,16 @@ def _place(chosen: IntArray, xy: FloatArray, sigma: FloatArray, x: float, y: flo
             w = 1 / sigma[i] ** 2
             weight, sum_x, sum_y = weight + w, sum_x + w * (xy[i, 0] - x), sum_y + w * (xy[i, 1] - y)
     if weight == 0:
-        return x, y
-    return x + sum_x / weight, y + sum_y / weight
+        return x, y, 0.0
+    return x + sum_x / weight, y + sum_y / weight, weight
 
 
-@njit("float64(int64[::1], float64[::1], float64[::1], int64, float64, boolean[::1])", cache=True)
+@njit("UniTuple(float64, 2)(int64[::1], float64[::1], float64[::1], int64, float64, boolean[::1])", cache=True)
 def _direction(chosen: IntArray, yaw: FloatArray, sigma: FloatArray, turns: int, reference: float,
-               used: NDArray[np.bool_]) -> float:
-    """Weighted mean yaw modulo 2 pi / turns of the chosen sightings near their mean direction, nearest `reference`."""
+               used: NDArray[np.bool_]) -> tuple[float, float]:
+    """Weighted mean yaw, and weight, of the chosen sightings near their mean direction; the yaw nearest `reference`."""
     if turns == 0:
-        return reference
+        return reference, 0.0
     east, north = 0.0, 0.0
     for i in chosen:
         w = 1 / sigma[i] ** 2
@@ -109,23 +109,17 @@ def _direction(chosen: IntArray, yaw: FloatArray, sigma: FloatArray, turns: int,
             weight, total = weight + w, total + w * off
     if weight > 0:
         middle += total / weight
-    return reference + _wrapped(middle - turns * reference) / turns
+    return reference + _wrapped(middle - turns * reference) / turns, weight
 
 
-@njit("float64(int64[::1], float64[::1], float64[::1])", cache=True)
-def _mean(chosen: IntArray, values: FloatArray, sigma: FloatArray) -> float:
-    """Mean of the chosen sightings' values, weighted by 1 / sigma^2."""
+@njit("UniTuple(float64, 2)(int64[::1], float64[::1], float64[::1])", cache=True)
+def _mean(chosen: IntArray, values: FloatArray, sigma: FloatArray) -> tuple[float, float]:
+    """Mean of the chosen sightings' values, weighted by 1 / sigma^2, and the weight."""
     weight, total = 0.0, 0.0
     for i in chosen:
         w = 1 / sigma[i] ** 2
         weight, total = weight + w, total + w * values[i]
-    return total / weight
-
-
-@njit("int64[::1](int64[::1], int64, int64, int64)", cache=True)
-def _of_kind(kind: IntArray, best: int, first: int, last: int) -> IntArray:
-    """The sightings from first to last that are of the kind `best`."""
-    return first + np.flatnonzero(kind[first : last + 1] == best)
+    return total / weight, weight
 
 
 _SIGNATURE = ("void(int64[::1], int64[::1], int64[::1], float64[:, ::1], float64[::1], float64[::1], float64[::1], "
@@ -140,23 +134,37 @@ def _run(start: IntArray, kind: IntArray, side: IntArray, xy: FloatArray, yaw: F
          used_yaw: NDArray[np.bool_]) -> None:
     """`estimate`, into its outputs."""
     for p in range(len(start) - 1):
-        votes, sides, best = np.zeros(len(turns)), np.zeros(3), -1
+        votes, many, sides, best = np.zeros(len(turns)), np.zeros(len(turns), np.int64), np.zeros(3), -1
+        x = y = turned = mean = weight = weight_yaw = weight_all = 0.0
         for j in range(start[p], start[p + 1]):
             votes[kind[j]] += max(score[j], 1e-6) if kind[j] > 0 else UNRECOGNISED_VOTE
+            many[kind[j]] += 1
             if side[j] > 0:
                 sides[side[j]] += max(score[j], 1e-6)
             before = best
             if best < 0 or votes[kind[j]] > votes[best]:
                 best = kind[j]
-            chosen = _of_kind(kind, best, start[p], j)
-            x, y, reference = out_xy[j - 1, 0], out_xy[j - 1, 1], out_yaw[j - 1]
-            if len(chosen) <= MIDDLE_OF or best != before:
-                x, y = np.median(xy[chosen, 0]), np.median(xy[chosen, 1])
-            if best != before:
-                reference = yaw[chosen[0]]
-            out_kind[j], out_side[j], out_score[j] = best, np.argmax(sides), _mean(chosen, score, sigma_mm)
-            out_xy[j] = _place(chosen, xy, sigma_mm, x, y, used)
-            out_yaw[j] = _direction(chosen, yaw, sigma_rad, turns[best], reference, used_yaw)
+            if best != before or many[best] <= MIDDLE_OF:
+                chosen = start[p] + np.flatnonzero(kind[start[p] : j + 1] == best)
+                turned = turned if best == before else yaw[chosen[0]]
+                x, y, weight = _place(chosen, xy, sigma_mm, used)
+                turned, weight_yaw = _direction(chosen, yaw, sigma_rad, turns[best], turned, used_yaw)
+                mean, weight_all = _mean(chosen, score, sigma_mm)
+            elif kind[j] == best:
+                w = 1 / sigma_mm[j] ** 2
+                weight_all += w
+                mean += w / weight_all * (score[j] - mean)
+                used[j] = math.hypot(xy[j, 0] - x, xy[j, 1] - y) <= OUTLIER_SIGMAS * sigma_mm[j] + OUTLIER_MM
+                if used[j]:
+                    weight += w
+                    x, y = x + w / weight * (xy[j, 0] - x), y + w / weight * (xy[j, 1] - y)
+                off = _wrapped(turns[best] * (yaw[j] - turned)) / max(turns[best], 1)
+                used_yaw[j] = turns[best] > 0 and abs(off) <= OUTLIER_SIGMAS * sigma_rad[j] + OUTLIER_RAD
+                if used_yaw[j]:
+                    weight_yaw += 1 / sigma_rad[j] ** 2
+                    turned += off / sigma_rad[j] ** 2 / weight_yaw
+            out_xy[j, 0], out_xy[j, 1], out_yaw[j], out_score[j] = x, y, turned, mean
+            out_kind[j], out_side[j] = best, np.argmax(sides)
         for i in range(start[p], start[p + 1]):
             if kind[i] != best:
                 used[i] = used_yaw[i] = False
