@@ -17,14 +17,14 @@ def radius_95(covariance: ArrayLike, freedom: float = np.inf) -> FloatArray:
     """
     variances = np.clip(np.linalg.eigvalsh(np.asarray(covariance, dtype=np.float64)), 0.0, None)
     least, most = np.sqrt(variances[..., 0]), np.sqrt(variances[..., 1])
+    if freedom < 1:
+        return np.full(most.shape, np.inf)
     ratios, radii = _radii()
     round_ones = np.interp(np.divide(least, most, out=np.zeros_like(most), where=most > 0), ratios, radii)
     return np.asarray(most * round_ones * _widened(freedom))
 
 
 def _widened(freedom: float) -> float:
-    if freedom < 1:
-        return np.inf
     exact = -np.log(0.05)  # half the 95 % quantile of chi-square with two degrees of freedom
     return float(np.sqrt(fdtri(2, freedom, 0.95) / exact)) if np.isfinite(freedom) else 1.0
 

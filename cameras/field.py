@@ -52,10 +52,3 @@ def share_touched(camera: CameraMap, field: Field) -> float:
     to = field.pixels[..., None, :] - hull
     side = edge[:, 0] * to[..., 1] - edge[:, 1] * to[..., 0]
     return float(((side >= 0).all(axis=-1) | (side <= 0).all(axis=-1)).mean())
-
-
-def places_of(row: int, rows: int, column: int, columns: int) -> str:
-    """Name of a place of the net, as in the image: "top left" to "bottom right"."""
-    down = ("top", "middle", "bottom")[min(3 * row // rows, 2)]
-    across = ("left", "middle", "right")[min(3 * column // columns, 2)]
-    return "middle" if down == across else f"{down} {across}"

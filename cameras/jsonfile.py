@@ -38,12 +38,12 @@ class JsonFile:
     def numbers(self, key: str, shape: tuple[int, ...]) -> NDArray[np.float64]:
         """Finite numbers of this shape; -1 stands for any length."""
         value = self._of(key)
-        if not _all_numbers(value):
-            raise self.fault(key, "holds something that is not a number")
         try:
+            if not _all_numbers(value):
+                raise self.fault(key, "holds something that is not a number")
             array = np.array(value, dtype=np.float64)
-        except (ValueError, OverflowError):
-            raise self.fault(key, "is ragged") from None
+        except (ValueError, OverflowError, RecursionError):
+            raise self.fault(key, "is ragged, or too large") from None
         if array.ndim != len(shape) or any(want not in (-1, n) for want, n in zip(shape, array.shape, strict=True)):
             raise self.fault(key, f"has shape {array.shape}, not {shape}")
         if not np.isfinite(array).all():

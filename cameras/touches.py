@@ -53,8 +53,11 @@ def read_touches(path: str | Path, belt: Carriage | None = None, camera: str = "
     path = Path(path)
     table = read_columns(path, _COLUMNS, {"camera": str})
     kept = np.ones(len(table["line"]), dtype=bool)
-    if camera and "camera" in table:
-        kept = table["camera"] == camera
+    if "camera" in table:
+        names = sorted(set(map(str, table["camera"])))
+        if not camera and len(names) > 1:
+            raise InputFault(path, "camera", f"touches of {len(names)} cameras", "say whose with --camera")
+        kept = table["camera"] == (camera or names[0]) if names else kept
         if not kept.any():
             raise InputFault(path, "camera", f"no touch of camera {printable(camera)!r}", "name another with --camera")
     line, seen, touched = (table[name][kept].astype(np.int64) for name in ("line", "counts", "touch_counts"))

@@ -14,8 +14,12 @@ def draw_uncertainty(fit: PlaneFit, field: Field) -> Figure:
     figure = Figure(figsize=(7.5, 6), layout="constrained")
     ax = figure.subplots()
     x, y = field.points_mm[..., 0], field.points_mm[..., 1]
-    shown = ax.contourf(x, y, field.radius_95_mm, levels=12, cmap="viridis")
-    figure.colorbar(shown, ax=ax, label="95 % of the map's errors are within [mm]")
+    if np.isfinite(field.radius_95_mm).any():
+        radius = np.ma.masked_invalid(field.radius_95_mm)
+        shown = ax.contourf(np.nan_to_num(x), np.nan_to_num(y), radius, levels=12, cmap="viridis")
+        figure.colorbar(shown, ax=ax, label="95 % of the map's errors are within [mm]")
+    else:
+        ax.set_facecolor("0.5")
     touched, off = fit.points, fit.residuals_mm
     worst = float(np.linalg.norm(off[fit.kept], axis=1).max())
     times = _LONGEST_ARROW * float(np.nanmax(x) - np.nanmin(x)) / max(worst, 1e-9)

@@ -33,7 +33,7 @@ class BeltMarks:
 
 @dataclass(frozen=True)
 class BeltScale:
-    """Heading and mm per count, with their standard errors.
+    """The way the belt runs and mm per count (negative where the counter falls), with their standard errors.
 
     along_mm, across_mm (n,): residuals of the touches along and to the left of the heading; kept (n,): False for one
     left out as bad.  sigma_mm: standard deviation of one coordinate of a touch.  freedom: degrees of freedom.
@@ -131,11 +131,13 @@ def _fitted(marks: BeltMarks, kept: BoolArray, file: str | Path) -> BeltScale:
         size = sigma / _COUNT_SIGMA
         first = np.linalg.svd(np.column_stack([size * steps, moved])[kept], full_matrices=False)[2][0]
         per_count = size * first[1:] / first[0]
-    scale = float(np.linalg.norm(per_count))
+    # touches of a mark stand in the order they were made, so that the belt ran from the first to the last
+    rising = sum(np.sign(np.diff(marks.counts[marks.mark == k])).sum() for k in range(len(many))) >= 0
+    scale = float(np.linalg.norm(per_count)) * (1.0 if rising else -1.0)
     along = per_count / scale
     off = (moved - steps[:, None] * per_count) @ np.array([along, [-along[1], along[0]]]).T
     # a touch left out counts for no middle, so its residual is that of a forecast
     error = sigma / np.sqrt(squares)
-    longest = scale * max(float(np.ptp(steps[kept & (marks.mark == k)])) for k in range(len(many)))
-    return BeltScale(float(np.arctan2(along[1], along[0])), scale, error / scale, error, off[:, 0], off[:, 1], kept,
-                     sigma, freedom, longest)
+    longest = abs(scale) * max(float(np.ptp(steps[kept & (marks.mark == k)])) for k in range(len(many)))
+    heading = float(np.arctan2(along[1], along[0]))
+    return BeltScale(heading, scale, error / abs(scale), error, off[:, 0], off[:, 1], kept, sigma, freedom, longest)

@@ -31,11 +31,13 @@ def test_heading_and_scale_are_found_within_their_standard_errors(heading_deg, m
     assert found.sigma_mm == pytest.approx(0.05, rel=0.5)
 
 
-def test_a_falling_counter_points_the_heading_the_way_counts_rise():
-    """Counts that fall along the belt: the heading is that of rising counts, and mm_per_count positive."""
+def test_a_falling_counter_has_negative_mm_per_count():
+    """The heading is the way the belt runs, from a mark's first touch to its last."""
     marks = made_marks(30.0)
     falling = fit_belt(BeltMarks(marks.line, marks.mark, -marks.counts, marks.points))
-    assert falling.heading_deg == pytest.approx(210.0, abs=0.05)
+    assert falling.heading_deg == pytest.approx(30.0, abs=0.05)
+    assert falling.mm_per_count == pytest.approx(-0.05, rel=1e-3)
+    assert falling.drift_95_mm(500.0) == pytest.approx(fit_belt(marks).drift_95_mm(500.0), rel=1e-6)
 
 
 def test_standard_errors_are_the_scatter_of_repetition():

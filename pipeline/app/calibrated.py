@@ -1,14 +1,16 @@
 """What the calibrations tell on the terminal: figures in tables, then one line for each thing to mend."""
 
 from collections.abc import Sequence
+from itertools import product
 from pathlib import Path
 
 import numpy as np
+from numpy.typing import NDArray
 
 from cameras.camera import load_camera
 from cameras.coverage import uncovered_corners
 from cameras.faults import printable
-from cameras.field import Field, parallax_mm, places_of, share_touched
+from cameras.field import Field, parallax_mm, share_touched
 from cameras.lens import NAMES
 from cameras.lens_fit import FEWEST_VIEWS, LensFit, fit_lens
 from cameras.plane import PlaneFit
@@ -19,6 +21,7 @@ from pipeline.budget import longest_carry_mm
 from pipeline.cell import Cell
 
 _WORST = 5  # touches listed
+_ABOVE, _BESIDE = ("top", "middle", "bottom"), ("left", "middle", "right")
 
 
 def warn(lines: Sequence[str]) -> None:
@@ -63,7 +66,7 @@ def tell_plane(fit: PlaneFit, lines_of_file: Sequence[int], surface: Field, high
     found, size = fit.map, np.linalg.norm(fit.residuals_mm, axis=1)
     alone = found.leave_one_out_rms_mm
     scale = surface.mm_per_pixel
-    show_table("Plane map", ("figure", "value"), [
+    show_table("Plane map", ("", ""), [
         ("rests on", {"pose": "lens and touches: any height maps", "plane": "touches at one height: height is ignored",
                       "rays": "touches at two heights: any height maps"}[found.basis]),
         ("touches used", f"{found.touches} of {len(fit.kept)}"),
@@ -75,30 +78,34 @@ def tell_plane(fit: PlaneFit, lines_of_file: Sequence[int], surface: Field, high
     left = np.linalg.norm(fit.left_out_mm, axis=1)
     worst = [int(k) for k in np.argsort(-size) if not fit.kept[k]]
     worst += [int(k) for k in np.argsort(-size) if fit.kept[k]][:_WORST]
-    show_table("Worst touches", ("line", "residual mm", "dx mm", "dy mm", "left-out residual mm", ""),
-               [(lines_of_file[k], f"{size[k]:.3f}", *(f"{d:.3f}" for d in fit.residuals_mm[k]), f"{left[k]:.3f}",
-                 "" if fit.kept[k] else "LEFT OUT: touch it again") for k in worst])  # fmt: skip
+    rows = [(lines_of_file[k], f"{size[k]:.3f}", *(f"{d:+.3f}" for d in fit.residuals_mm[k]), _most(left[k : k + 1]),
+             "" if fit.kept[k] else "LEFT OUT: touch it again") for k in worst]
+    show_table("Worst touches", ("line", "residual mm", "dx mm", "dy mm", "left-out residual mm", ""), rows)
     _tell_uncertainty(surface, higher)
     if cell.parts and found.maps_height:
-        rows = []
-        for name, part in cell.parts.items():
-            off = parallax_mm(found, surface, part.height_mm)
-            rows.append((name, f"{part.height_mm:g}", f"{np.nanmean(off):.2f}", f"{np.nanmax(off):.2f}"))
+        offs = {name: parallax_mm(found, surface, part.height_mm) for name, part in cell.parts.items()}
+        parallaxes = [(name, f"{cell.parts[name].height_mm:g}", f"{np.nanmean(off):.2f}", f"{np.nanmax(off):.2f}")
+                      for name, off in offs.items()]
         show_table("Parallax: were height ignored, a part's top would be put off by",
-                   ("part", "height mm", "mean mm", "most mm"), rows)
+                   ("part", "height mm", "mean mm", "most mm"), parallaxes)
 
 
 def _tell_uncertainty(surface: Field, higher: Field) -> None:
-    names = [places_of(row, 3, column, 3) for row in range(3) for column in range(3)]
+    down, across = (np.array_split(np.arange(n), 3) for n in surface.radius_95_mm.shape)
     rows = []
-    for name, (i, j) in zip(names, np.ndindex(3, 3), strict=True):
-        cells = []
-        for field in (surface, higher):
-            down, across = (np.array_split(np.arange(n), 3) for n in field.radius_95_mm.shape)
-            cells.append(f"{np.nanmax(field.radius_95_mm[np.ix_(down[i], across[j])]):.3f}")
-        rows.append((name, *cells))
+    for (i, above), (j, beside) in product(enumerate(_ABOVE), enumerate(_BESIDE)):
+        ninths = (field.radius_95_mm[np.ix_(down[i], across[j])] for field in (surface, higher))
+        rows.append((f"{above} {beside}", *(_most(ninth) for ninth in ninths)))
     show_table("95 % of the map's errors are within (worst place of each ninth of the image), mm",
                ("place", f"at z = {surface.height_mm:g}", f"at z = {higher.height_mm:g}"), rows)
+
+
+def _most(values: NDArray[np.float64]) -> str:
+    """The greatest of some millimetres; what no point is seen at does not count."""
+    seen = values[~np.isnan(values)]
+    if len(seen) == 0:
+        return "not seen"
+    return f"{seen.max():.3f}" if np.isfinite(seen).all() else "unknown"
 
 
 def no_lens_lines(fit: PlaneFit, surface: Field, cell: Cell) -> list[str]:
@@ -107,14 +114,14 @@ def no_lens_lines(fit: PlaneFit, surface: Field, cell: Cell) -> list[str]:
     k1 = fit.map.lens.standard_errors[4] > 0
     lines = ["no lens file: " + ("a distortion was taken from the touches, one number for the whole lens; "
                                  if k1 else "no distortion is taken out; ")
-             + f"the map is sure to {np.nanmax(surface.radius_95_mm):.2f} mm (95 %) at the worst place of the field, "
-             "if the lens is no worse than that"]
+             + f"95 % within {_most(surface.radius_95_mm)} mm at the worst place of the field, if the lens is no worse "
+             "than that"]
     tallest = max((part.height_mm for part in cell.parts.values()), default=0.0)
     if fit.map.basis == "plane" and tallest > 0:
-        costs = ", ".join(f"{reach * tallest / (above - tallest):.1f} mm under a camera {above} mm up"
+        costs = ", ".join(f"{reach * tallest / (above - tallest):.1f} mm below a camera {above} mm up"
                           for above in (500, 800, 1200) if above > tallest)
-        lines.append(f"height is ignored: a top {tallest:g} mm up is put off by as much as {costs}; "
-                     "calibrate the lens, or touch marks on a block too")
+        lines.append(f"height is ignored: a top {tallest:g} mm up is put off by up to {costs} that looks straight "
+                     "down, more by a tilted one; calibrate the lens, or touch marks on a block too")
     return lines
 
 
@@ -165,8 +172,9 @@ def _belt_warnings(scale: BeltScale, cell: Cell | None, carry: float) -> list[st
                      "touch them farther apart")
     if cell is not None and cell.belt is not None:
         belt = cell.belt
-        along = carry * (belt.mm_per_count / scale.mm_per_count - 1)
-        across = carry * float(np.sin(np.radians(belt.heading_deg) - scale.heading_rad))
+        turn = np.radians(belt.heading_deg) - scale.heading_rad
+        times = belt.mm_per_count / scale.mm_per_count
+        along, across = carry * (times * np.cos(turn) - 1), carry * times * np.sin(turn)
         if np.hypot(along, across) > 2 * scale.drift_95_mm(carry):
             lines.append(f"the cell says heading_deg = {belt.heading_deg:g}, mm_per_count = {belt.mm_per_count:g}: "
                          f"over {carry:.0f} mm that is {along:+.2f} mm along and {across:+.2f} mm across of what was "
