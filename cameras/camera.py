@@ -130,10 +130,9 @@ class CameraMap:
             return self
         lens, pose = slice(0, 9), slice(9, 15)
         c, rest = self.covariance, np.zeros((15, 15))
-        size = self._scale
-        inner = np.linalg.pinv(c[lens, lens] / np.outer(size[lens], size[lens]), rcond=1e-10, hermitian=True)
-        cross = c[pose, lens] / size[lens]
-        rest[pose, pose] = c[pose, pose] - cross @ inner @ cross.T
+        values, axes, size = scaled_axes(c[lens, lens])
+        cross = c[pose, lens] / size @ axes
+        rest[pose, pose] = c[pose, pose] - cross / values @ cross.T
         return replace(self, covariance=rest)
 
     def shifted(self, change: FloatArray) -> "CameraMap":
@@ -161,18 +160,11 @@ class CameraMap:
     @cached_property
     def _deviations(self) -> tuple[FloatArray, FloatArray]:
         """Lens parameters (m, 9) and projections (m, 3, 4) one standard deviation off along each principal axis."""
-        values, axes = np.linalg.eigh(self.covariance / np.outer(self._scale, self._scale))
-        kept = values > 1e-14 * max(float(values.max(initial=0.0)), 1e-300)
-        changes = (np.sqrt(values[kept]) * axes[:, kept]).T * self._scale
+        values, axes, size = scaled_axes(self.covariance)
+        changes = (np.sqrt(values) * axes).T * size
         maps = [self.shifted(change) for change in changes]
         return (np.array([one.lens.parameters for one in maps]).reshape(-1, 9),
                 np.array([one.projection for one in maps]).reshape(-1, 3, 4))
-
-    @cached_property
-    def _scale(self) -> FloatArray:
-        """Standard deviations, 1 where nothing was fitted: so that principal axes mix numbers of one size."""
-        deviation = np.sqrt(np.maximum(np.diag(self.covariance), 0.0))
-        return np.where(deviation > 0.0, deviation, 1.0)
 
     def document(self) -> dict[str, Any]:
         """The map as a JSON object, to be read by `load_camera`."""
@@ -191,6 +183,19 @@ def _seen(points: FloatArray, projection: FloatArray, lens: FloatArray) -> Float
     with np.errstate(divide="ignore", invalid="ignore"):
         ray = np.where(at[..., 2:] > 0.0, at[..., :2] / at[..., 2:], np.nan)
     return pixels_of(ray, lens)
+
+
+def scaled_axes(covariance: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Principal axes of a covariance (q, q) scaled to unit deviations: variances (m,), axes (q, m), deviations (q,).
+
+    covariance = diag(deviations) axes diag(variances) axes^T diag(deviations). Axes of no variance are left out; a
+    number that was not fitted has the deviation 1, so that numbers of all sizes can stand side by side.
+    """
+    deviation = np.sqrt(np.maximum(np.diag(covariance), 0.0))
+    deviation = np.where(deviation > 0.0, deviation, 1.0)
+    values, axes = np.linalg.eigh(covariance / np.outer(deviation, deviation))
+    real = values > 1e-12
+    return values[real], axes[:, real], deviation
 
 
 def rotation(vector: FloatArray) -> FloatArray:

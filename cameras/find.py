@@ -22,7 +22,7 @@ from cameras.view import CameraMap, Views, unproject, views_of
 FloatArray = NDArray[np.float64]
 Grey = NDArray[np.uint8]
 
-DEFAULT_SCORE = 0.6
+DEFAULT_SCORE = 0.7
 MOST_PEAKS = 40
 TRIED_ON_ONE, TRIED_ON_MORE = 6, 5
 PROMISING = 0.4
@@ -31,6 +31,7 @@ STEP_SHARE = 0.12  # of the edge map's threshold: the least step of grey levels 
 OVERLAP = 0.2
 UNKNOWN_SHARE = 0.25
 UNKNOWN_LEAST_MM2 = 25.0
+RIM_WEAKEST, RIM_USUAL = 1.6, 1.85  # thresholds of the edge map, at the rim of a thing
 
 
 class Finder(Protocol):
@@ -86,7 +87,7 @@ class _Placed:
 class PartFinder:
     """Finds taught parts, both sides up, and what is none of them, on a surface at a known height.
 
-    least_score: share of the expected edge that must be found. One finder serves one camera; frames come in any order.
+    least_score: share of the expected outline that must be found. One finder serves one camera; frames come in any order.
     """
 
     def __init__(self, parts: Iterable[TaughtPart], surface_mm: float, least_score: float = DEFAULT_SCORE) -> None:
@@ -111,7 +112,7 @@ class PartFinder:
         for patch in range(len(blobs.box)):
             placed += self._on_patch(grey, camera, views, edges, blobs, patch)
         kept = _best(placed, grey.shape, OVERLAP)
-        return _sightings(kept, self._unknown(kept, blobs, camera))
+        return _sightings(kept, self._unknown(kept, edges, blobs, camera))
 
     def _views_for(self, camera: CameraMap, shape: tuple[int, int]) -> Views:
         if self._views is None or self._camera is not camera or self._shape != shape:
@@ -137,7 +138,7 @@ class PartFinder:
         most = TRIED_ON_ONE + TRIED_ON_MORE * int(blobs.cells[patch] / self.least_cells)
         placed: list[_Placed] = []
         tried = 0
-        for _, u, v, yaw, number in every:
+        for _, u, v, yaw, _, number in every:
             if tried >= most:
                 break
             kind = self.kinds[int(number)]
@@ -166,7 +167,7 @@ class PartFinder:
             return None
         return _Placed(kind, fit, views.places_mm[place] + fit.pose[:2] - kind.model.shift_mm, polygon)
 
-    def _unknown(self, kept: list[_Placed], blobs: Blobs, camera: CameraMap) -> list[tuple[FloatArray, FloatArray]]:
+    def _unknown(self, kept: list[_Placed], edges: EdgeMap, blobs: Blobs, camera: CameraMap) -> list[tuple[FloatArray, FloatArray]]:
         """Centre and outline about it, in mm, of what no part explains and no border cuts."""
         left = (blobs.label > 0).astype(np.uint8)
         for one in kept:
@@ -183,6 +184,8 @@ class PartFinder:
                 continue
             outlines, _ = cv2.findContours(own, cv2.RETR_EXTERNAL, cv2.CHAIN_APPROX_SIMPLE)
             outline = max(outlines, key=cv2.contourArea)[:, 0].astype(np.float64) + [x0, y0]
+            if not _has_rim(outline.astype(np.int64), edges):
+                continue
             polygon = camera.to_cell(outline * CELL_PX + 0.5 * (CELL_PX - 1), self.surface_mm)
             if len(polygon) >= 3 and cv2.contourArea(polygon.astype(np.float32)) >= UNKNOWN_LEAST_MM2:
                 centre = 0.5 * (polygon.min(axis=0) + polygon.max(axis=0))
@@ -216,6 +219,13 @@ def _anchor(outline: FloatArray) -> FloatArray:
     return np.asarray((np.array([u, v], float) - 4) / scale + low)
 
 
+def _has_rim(outline: NDArray[np.int64], edges: EdgeMap) -> bool:
+    """Whether an outline (k, 2) in cells is all along a much stronger edge than a scuffed belt has."""
+    wide = cv2.dilate(edges.strength, np.ones((3, 3), np.uint8))
+    rim = wide[outline[:, 1], outline[:, 0]] / edges.least
+    return bool(np.percentile(rim, 25) >= RIM_WEAKEST and np.median(rim) >= RIM_USUAL)
+
+
 def _best(placed: list[_Placed], shape: tuple[int, int], overlap: float) -> list[_Placed]:
     """Placements in order of worth, those left out that overlap a better one."""
     taken = np.zeros((shape[0] // CELL_PX + 1, shape[1] // CELL_PX + 1), np.uint8)
@@ -238,7 +248,7 @@ def _sightings(kept: list[_Placed], unknown: list[tuple[FloatArray, FloatArray]]
         side=np.array(["down" if one.kind.down else "up" for one in kept] + [""] * m, dtype=np.str_),
         xy_mm=np.array([one.xy_mm for one in kept] + [xy for xy, _ in unknown]).reshape(-1, 2),
         yaw_rad=np.array([float(one.fit.pose[2]) for one in kept] + [0.0] * m),
-        score=np.array([one.fit.score for one in kept] + [0.0] * m),
+        score=np.array([one.fit.outline_share for one in kept] + [0.0] * m),
         sigma_mm=np.array([one.fit.sigma_mm for one in kept] + [1.0] * m),
         sigma_rad=np.array([one.fit.sigma_rad for one in kept] + [np.pi] * m),
         outline_mm=tuple([none] * n + [outline for _, outline in unknown]),

@@ -17,7 +17,7 @@ from cameras.view import project, slopes
 
 FloatArray = NDArray[np.float64]
 
-HIT_PX = 1.2
+HIT_PX = 1.6
 STAGE1 = 0.3
 INNER_SHARE, INNER_WORTH = 0.45, 0.3  # of inner edges, what a part the right side up shows at the least; its weight
 PIXEL_SIGMA = 0.25
@@ -195,7 +195,7 @@ class Fit:
     """A template laid on an image. pose (3,): x, y mm from the place, yaw rad.
 
     outline_share, inner_share: of the points, how many met an edge (inner_share 1 without inner edges).
-    score: share of all.  worth: by which rivals are ranked.  polygon_px (k, 2): the outline in the image.
+    worth: by which rivals are ranked.  polygon_px (k, 2): the outline in the image.
     """
 
     pose: FloatArray
@@ -204,7 +204,6 @@ class Fit:
     sigma_rad: float
     outline_share: float
     inner_share: float
-    score: float
     worth: float
     polygon_px: FloatArray
 
@@ -217,26 +216,25 @@ def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, sta
     cov, out = np.empty((size, size)), np.zeros((len(template.points), 4))
     fixed = (template.heights, template.sigmas)
     unit = CORRELATED * PIXEL_SIGMA**2
-    share = settle(image, view, template.points, template.away, pose, heights, *fixed, 9.0, 4.0, least, 4, 4, STAGE1, unit,
+    share = settle(image, view, template.points, template.away, pose, heights, *fixed, 9.0, 4.0, least, 3, 6, STAGE1, unit,
                    template.round, cov, out)  # fmt: skip
     if share < promising:
         return None
-    settle(image, view, template.points, template.away, pose, heights, *fixed, 3.0, 2.0, least, 1, 2, 1.0, unit,
+    settle(image, view, template.points, template.away, pose, heights, *fixed, 3.5, 2.5, least, 1, 2, 1.0, unit,
            template.round, cov, out)  # fmt: skip
     unit = CORRELATED * _scatter(out) ** 2
-    share = settle(image, view, template.points, template.away, pose, heights, *fixed, 2.0, 2.0, least, 1, 3, 1.0, unit,
+    share = settle(image, view, template.points, template.away, pose, heights, *fixed, 2.5, 2.5, least, 1, 3, 1.0, unit,
                    template.round, cov, out)  # fmt: skip
     if share < 0.0 or np.hypot(pose[0] - start[0], pose[1] - start[1]) > 6.0:
         return None
     outline = template.points[:, 5] == 0.0
     outline_share = float(np.mean(out[outline, 2]))
     inner_share = float(np.mean(out[~outline, 2])) if not outline.all() else 1.0
-    score = float(np.mean(out[:, 2]))
     worth = outline_share + (0.0 if outline.all() else INNER_WORTH * (inner_share - INNER_SHARE))
     polygon = np.empty_like(template.outline)
     outline_pixels(view, template.outline, pose, 0.5 * (heights[0] + heights[1]), polygon)
     return Fit(pose, heights, float(np.sqrt(unit * 0.5 * (cov[0, 0] + cov[1, 1]))), float(np.sqrt(unit * cov[2, 2])),
-               outline_share, inner_share, score, worth, polygon)  # fmt: skip
+               outline_share, inner_share, worth, polygon)  # fmt: skip
 
 
 def _scatter(out: FloatArray) -> float:

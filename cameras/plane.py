@@ -7,12 +7,12 @@ parameter refined on the residuals in millimetres (least squares, Hartley and Zi
 from dataclasses import dataclass, replace
 from pathlib import Path
 
+import cv2
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy.optimize import least_squares
-from scipy.spatial import ConvexHull
 
-from cameras.camera import CameraMap
+from cameras.camera import CameraMap, scaled_axes
 from cameras.faults import InputFault
 from cameras.lens import NAMES, Lens
 from cameras.plane_start import linear_start
@@ -42,6 +42,35 @@ class PlaneFit:
     kept: NDArray[np.bool_]
     sigma_mm: float
     slope: FloatArray
+
+
+@dataclass(frozen=True)
+class _Problem:
+    """What is to be fitted: a start, the directions (15 or 21, q) in which it may change, and the touches.
+
+    The first `tied` directions are held by the lens file; each is one standard deviation of the lens long.
+    """
+
+    start: CameraMap
+    free: FloatArray
+    tied: int
+    pixels: FloatArray
+    points: FloatArray
+
+    @property
+    def numbers(self) -> int:
+        """How many numbers are fitted."""
+        return self.free.shape[1]
+
+    def off_mm(self, found: CameraMap) -> FloatArray:
+        """(n, 2) mapped less touched; far off where a pixel has no point."""
+        return np.nan_to_num(found.to_cell(self.pixels, self.points[:, 2]) - self.points[:, :2], nan=1e6)
+
+    def slope(self, found: CameraMap) -> FloatArray:
+        """(n, 2, q) slope of `off_mm` over the free directions, by central differences."""
+        step = 1e-4 / np.maximum(np.linalg.norm(self.free, axis=0), 1.0)
+        return np.stack([(self.off_mm(found.shifted(h * way)) - self.off_mm(found.shifted(-h * way))) / (2 * h)
+                         for h, way in zip(step, self.free.T, strict=True)], axis=-1)  # fmt: skip
 
 
 def fit_plane(
@@ -74,9 +103,9 @@ def fit_touches(
     start, agreeing = linear_start(pixels, points, seen_by, lens is not None, file)
     found = None
     if lens is None and len(pixels) >= FEWEST_FOR_DISTORTION:
-        found = _settled(start, *_free(start, points, True), pixels, points, agreeing)
+        found = _settled(_problem(start, pixels, points, radial=True), agreeing)
     if found is None or abs(found.map.lens.parameters[K1]) < 2 * found.map.lens.standard_errors[K1]:
-        found = _settled(start, *_free(start, points, False), pixels, points, agreeing)
+        found = _settled(_problem(start, pixels, points, radial=False), agreeing)
     if found is None or found.kept.sum() < 0.3 * len(pixels):
         raise InputFault(file, "", f"hardly any of the {len(pixels)} touches agree on a map",
                          "check pixels, positions, counts and the lens file")
@@ -105,64 +134,62 @@ def _checked(pixels: FloatArray, points: FloatArray, file: str | Path) -> tuple[
     return pixels, points
 
 
-def _free(start: CameraMap, points: FloatArray, radial: bool) -> tuple[FloatArray, int]:
-    """Directions (15 or 21, q) in which a map may change, and how many of the first are tied to the lens file.
-
-    A tied direction is one standard deviation of the lens long. Without a lens `radial` frees k1.
-    """
+def _problem(start: CameraMap, pixels: FloatArray, points: FloatArray, radial: bool) -> _Problem:
+    """With a lens: pose and, as far as its covariance goes, lens; without: the projection and, if `radial`, k1."""
     if start.basis == "pose":
-        deviation = start.lens.standard_errors
-        scale = np.where(deviation > 0, deviation, 1.0)
-        values, axes = np.linalg.eigh(start.lens.covariance / np.outer(scale, scale))
-        real = values > 1e-12
-        tied = scale[:, None] * axes[:, real] * np.sqrt(values[real])
+        values, axes, size = scaled_axes(start.lens.covariance)
+        tied = size[:, None] * axes * np.sqrt(values)
         free = np.zeros((15, tied.shape[1] + 6))
         free[:9, : tied.shape[1]] = tied
         free[9:, tied.shape[1] :] = np.eye(6)
-        return free, tied.shape[1]
+        return _Problem(start, free, tied.shape[1], pixels, points)
     # the projection's scale means nothing, so it must not change along itself
     size = np.tile([*np.full(3, 1.0 / max(float(np.abs(points).max()), 1.0)), 1.0], 3)
     some = np.ones((3, 4), dtype=bool)
     some[:, 2] = start.basis == "rays"
     at = np.flatnonzero(some.ravel())
-    along = (start.projection.ravel() / size)[at]
-    across = np.linalg.svd(along[None])[2][1:].T
+    across = np.linalg.svd((start.projection.ravel() / size)[None, at])[2][1:].T
     free = np.zeros((21, len(at) - 1 + radial))
     free[9 + at, radial:] = size[at, None] * across
     if radial:
-        free[NAMES.index("k1"), 0] = 1.0
-    return free, 0
+        free[K1, 0] = 1.0
+    return _Problem(start, free, 0, pixels, points)
 
 
-def _off(found: CameraMap, pixels: FloatArray, points: FloatArray) -> FloatArray:
-    """(n, 2) mapped less touched, mm; far off where a pixel has no point."""
-    return np.nan_to_num(found.to_cell(pixels, points[:, 2]) - points[:, :2], nan=1e6)
-
-
-def _settled(
-    start: CameraMap, free: FloatArray, tied: int, pixels: FloatArray, points: FloatArray, kept: NDArray[np.bool_]
-) -> PlaneFit | None:
+def _settled(problem: _Problem, kept: NDArray[np.bool_]) -> PlaneFit | None:
     """The fit to those touches that lie within the gate of it; from `kept`, until no touch joins or leaves.
 
     None where too few are left to determine one. First the gate goes by the median, so that a few bad touches do not
     widen it for one another; then, as the median of a few touches is rough, by the standard deviation of those left.
     """
-    sigma = max(float(np.sqrt((_off(start, pixels, points)[kept] ** 2).mean())), _FLOOR_MM)
-    spare = 2 * len(pixels) - (free.shape[1] - tied)
+    sigma = max(float(np.sqrt((problem.off_mm(problem.start)[kept] ** 2).mean())), _FLOOR_MM)
+    spare = 2 * len(kept) - (problem.numbers - problem.tied)
     if spare < 4:  # with a touch to spare, none can be told to be the bad one
-        kept = np.ones(len(pixels), dtype=bool)
+        kept = np.ones(len(kept), dtype=bool)
+    change = np.zeros(problem.numbers)
     for by_median in (True, False):
         for _ in range(_ROUNDS):
-            if kept.sum() < 4 or 2 * kept.sum() + tied < free.shape[1]:
+            if kept.sum() < 4 or 2 * kept.sum() + problem.tied < problem.numbers:
                 return None
-            found = _refined(start, free, tied, pixels[kept], points[kept], sigma)
-            fit = _judged(found, free, tied, pixels, points, kept)
+            change = _refined(problem, change, kept, sigma)
+            fit = _judged(problem, problem.start.shifted(problem.free @ change), kept)
             sigma = fit.sigma_mm
             near = _near(fit, by_median)
             if spare < 4 or (near == kept).all():
                 break
             kept = near
     return fit
+
+
+def _refined(problem: _Problem, change: FloatArray, kept: NDArray[np.bool_], sigma: float) -> FloatArray:
+    """The change (q,) of least squares from a given one: residuals in mm over sigma, and the lens's own deviations."""
+
+    def residuals(change: FloatArray) -> FloatArray:
+        off = problem.off_mm(problem.start.shifted(problem.free @ change))[kept]
+        return np.concatenate([off.ravel() / sigma, change[: problem.tied]])
+
+    best = least_squares(residuals, change, method="lm", x_scale="jac", xtol=1e-12, ftol=1e-12)
+    return np.asarray(best.x, dtype=np.float64)
 
 
 def _near(fit: PlaneFit, by_median: bool) -> NDArray[np.bool_]:
@@ -174,43 +201,28 @@ def _near(fit: PlaneFit, by_median: bool) -> NDArray[np.bool_]:
     return np.asarray(apart <= _GATE * np.hypot(max(sigma, _FLOOR_MM), doubt))
 
 
-def _refined(
-    start: CameraMap, free: FloatArray, tied: int, pixels: FloatArray, points: FloatArray, sigma: float
-) -> CameraMap:
-    """The map of least squares: residuals in mm over sigma, and the lens's own deviations."""
-
-    def residuals(change: FloatArray) -> FloatArray:
-        off = _off(start.shifted(free @ change), pixels, points)
-        return np.concatenate([off.ravel() / sigma, change[:tied]])
-
-    best = least_squares(residuals, np.zeros(free.shape[1]), method="lm", x_scale="jac", xtol=1e-12, ftol=1e-12)
-    return start.shifted(free @ best.x)
-
-
-def _judged(
-    found: CameraMap, free: FloatArray, tied: int, pixels: FloatArray, points: FloatArray, kept: NDArray[np.bool_]
-) -> PlaneFit:
+def _judged(problem: _Problem, found: CameraMap, kept: NDArray[np.bool_]) -> PlaneFit:
     """The fit with its covariance and leave-one-out residuals, from the slope of the residuals at the solution."""
-    off, slope = _off(found, pixels, points), _slope(found, free, pixels, points)
-    flat, prior = slope[kept].reshape(-1, free.shape[1]), np.diag(np.arange(free.shape[1]) < tied)
+    off, slope = problem.off_mm(found), problem.slope(found)
+    flat, prior = slope[kept].reshape(-1, problem.numbers), np.diag(np.arange(problem.numbers) < problem.tied)
     squares, freedom, sigma = float((off[kept] ** 2).sum()), 0.0, _FLOOR_MM
     for _ in range(10):  # the weight of the lens file against the touches depends on sigma, and sigma on it
         inverse = _inverse(flat.T @ flat / sigma**2 + prior)
         freedom = len(flat) - float(np.sum(flat @ inverse * flat)) / sigma**2
         sigma = max(float(np.sqrt(squares / max(freedom, 1.0))), _FLOOR_MM)
     if freedom < 0.5:  # nothing tells how good the touches are: a pixel is assumed
-        freedom, sigma = 0.0, float(np.median(found.mm_per_pixel(points)))
-        inverse = _inverse(flat.T @ flat / sigma**2 + prior)
+        freedom, sigma = 0.0, float(np.median(found.mm_per_pixel(problem.points)))
+    inverse = _inverse(flat.T @ flat / sigma**2 + prior)
     left = _left_out(off, slope, inverse / sigma**2, kept)
     left_rms = float(np.sqrt((left[kept] ** 2).sum(axis=1).mean()))
-    covariance = free @ inverse @ free.T
+    covariance = problem.free @ inverse @ problem.free.T
     told = replace(
         found, covariance=covariance, freedom=freedom, touches=int(kept.sum()),
         lens=replace(found.lens, covariance=covariance[:9, :9]),
         rms_mm=float(np.sqrt(squares / kept.sum())), leave_one_out_rms_mm=left_rms if np.isfinite(left_rms) else None,
-        touched_px=pixels[kept][ConvexHull(pixels[kept]).vertices],
+        touched_px=cv2.convexHull(problem.pixels[kept].astype(np.float32)).reshape(-1, 2).astype(np.float64),
     )  # fmt: skip
-    return PlaneFit(told, pixels, points, off, left, kept, sigma, slope)
+    return PlaneFit(told, problem.pixels, problem.points, off, left, kept, sigma, slope)
 
 
 def _left_out(off: FloatArray, slope: FloatArray, inverse: FloatArray, kept: NDArray[np.bool_]) -> FloatArray:
@@ -225,13 +237,6 @@ def _left_out(off: FloatArray, slope: FloatArray, inverse: FloatArray, kept: NDA
     left = off.copy()
     left[kept] = np.linalg.solve(rest, off[kept][..., None])[..., 0]
     return left
-
-
-def _slope(found: CameraMap, free: FloatArray, pixels: FloatArray, points: FloatArray) -> FloatArray:
-    """(n, 2, q) slope of the residuals over the free directions, by central differences."""
-    step = 1e-4 / np.maximum(np.linalg.norm(free, axis=0), 1.0)
-    return np.stack([(_off(found.shifted(h * way), pixels, points) - _off(found.shifted(-h * way), pixels, points))
-                     / (2 * h) for h, way in zip(step, free.T, strict=True)], axis=-1)
 
 
 def _inverse(normal: FloatArray) -> FloatArray:

@@ -14,6 +14,7 @@ TURN_STEP_RAD = np.radians(6.0)
 LEAST_SHARE = 0.65
 GLANCE = 14  # points looked at first
 GLANCE_LEAST = 7
+LEVEL = 0.03  # scores this close make a plateau
 SLACK_CELLS = 3
 BLOCK_CELLS = 3
 TURN_BINS = 6
@@ -32,7 +33,7 @@ def coarse_points(points: FloatArray, spacing_mm: float = 2.0) -> FloatArray:
 
 
 def peaks(blocks: FloatArray) -> FloatArray:
-    """Of the best placements (rows, columns, bins, 4) of blocks those no neighbour beats: (n, 4), best first."""
+    """Of the best placements (rows, columns, bins, 5) of blocks those no neighbour beats: (n, 5), best first."""
     score = blocks[..., 0]
     wide = np.pad(score, 1, constant_values=-1.0)
     if score.shape[2] > 2:
@@ -70,9 +71,10 @@ def _turned(points, affine, angle, du, dv, mask, reach):  # type: ignore[no-unty
 
 @njit("void(u1[:,::1], u1[:,::1], i4[:,::1], i8, f8[:,::1], f8[:,::1], f8[::1], f8, i8, f8, i8[::1], f8[:,:,:,::1])", cache=True)
 def placements(own, near, label, patch, points, affine, anchor, first, turns, step, box, blocks):  # type: ignore[no-untyped-def]
-    """Best placement in each block of cells over one patch, and in each bin of turns: blocks (rows, columns, bins, 4).
+    """Best placement in each block of cells over one patch, and in each bin of turns: blocks (rows, columns, bins, 5).
 
-    Each: score (mean of the shares of points met within a cell and exactly; 0: none), column, row, turn in radians.
+    Each: score (mean of the shares of points met within a cell and exactly; 0: none), column, row, turn in radians,
+    and how many placements were nearly as good and were averaged.
     affine (2, 2): cells per millimetre.  anchor (2,): a point well inside the outline, which must lie on the patch.
     box: the patch's, first and last column and row; a placement keeps within it but for some slack.  first, step: turns in radians.
     """
@@ -112,12 +114,21 @@ def placements(own, near, label, patch, points, affine, anchor, first, turns, st
                 score = 0.5 * (n - missed + exact) / n
                 bj = min(max((j - box[1]) // BLOCK_CELLS + 8, 0), blocks.shape[0] - 1)
                 bi = min(max((i - box[0]) // BLOCK_CELLS + 8, 0), blocks.shape[1] - 1)
-                if score > blocks[bj, bi, part, 0]:
-                    blocks[bj, bi, part, 0], blocks[bj, bi, part, 1] = score, i
-                    blocks[bj, bi, part, 2], blocks[bj, bi, part, 3] = j, angle
+                best = blocks[bj, bi, part]
+                if score > best[0] + LEVEL:
+                    best[0], best[1], best[2], best[3], best[4] = score, i, j, angle, 1.0
+                elif score > best[0] - LEVEL and abs(angle - best[3]) < 1.5 * step + 1e-9:
+                    # nearly as good: the placement moves to the middle of the plateau
+                    best[4] += 1.0
+                    best[0] = max(score, best[0])
+                    best[1] += (i - best[1]) / best[4]
+                    best[2] += (j - best[2]) / best[4]
+                    best[3] += (angle - best[3]) / best[4]
+                elif score > best[0]:
+                    best[0], best[1], best[2], best[3], best[4] = score, i, j, angle, 1.0
 
 
 def room_for(box: NDArray[np.int64], turns: int) -> FloatArray:
     """An array for the best placements over a patch's box: a part's grip point may lie some way outside it."""
     rows, columns = (int(box[3] - box[1]) // BLOCK_CELLS + 17, int(box[2] - box[0]) // BLOCK_CELLS + 17)
-    return np.empty((rows, columns, min(turns, TURN_BINS), 4))
+    return np.empty((rows, columns, min(turns, TURN_BINS), 5))
