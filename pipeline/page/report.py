@@ -1,0 +1,57 @@
+"""The page as a whole: one file, no network, the same bytes for the same run."""
+
+import base64
+import hashlib
+from importlib.resources import files
+from pathlib import Path
+from typing import Any
+
+from pipeline.page import cautions, head, listings, misses
+from pipeline.page.markup import Markup, joined, tag
+from pipeline.page.subject import Subject
+from pipeline.replay import Run, Setting
+from pipeline.study import Seen
+
+STYLES = ("page.css",)
+SCRIPTS: tuple[str, ...] = ()
+
+
+def write_page(path: Path, seen: Seen, setting: Setting, run: Run, figures: dict[str, Any]) -> None:
+    """Write the report of one run. figures: as in summary.json."""
+    path.write_text(page_of(Subject(seen, setting, run, figures)), encoding="utf-8")
+
+
+def page_of(subject: Subject) -> str:
+    """The report as HTML."""
+    sections = [
+        ("misses", "Why parts were missed", misses.misses(subject)),
+        ("lists", "Picks", listings.picks(subject)),
+        ("all-parts", "Parts", listings.parts(subject)),
+        ("cell", "The cell file", cautions.cell_file(subject)),
+        ("cautions", "Cautions", cautions.cautions()),
+    ]
+    main = [tag("section", tag("h2", title, id_=f"{name}-title"), content, id_=name, aria_labelledby=f"{name}-title")
+            for name, title, content in sections]  # fmt: skip
+    style, script = _kept(STYLES), _kept(SCRIPTS)
+    name = subject.setting.cell.name or "cell"
+    top = tag("head", tag("meta", charset="utf-8"), tag("meta", http_equiv="Content-Security-Policy",
+                                                        content=_policy(style, script)),
+              tag("meta", name="viewport", content="width=device-width, initial-scale=1"),
+              tag("meta", name="color-scheme", content="light dark"), tag("title", f"{name}: replay"),
+              tag("link", rel="icon", href="data:,"), tag("style", style))  # fmt: skip
+    body = tag("body", tag("a", "Skip to the desk", href="#desk", class_="skip"),
+               tag("header", head.head(subject)), tag("main", *main), tag("script", script))
+    return joined(Markup("<!doctype html>\n"), tag("html", top, "\n", body, lang="en"), "\n")
+
+
+def _kept(names: tuple[str, ...]) -> Markup:
+    """Text of files that come with the package, joined."""
+    return Markup("\n".join(files(__package__).joinpath(name).read_text(encoding="utf-8") for name in names))
+
+
+def _policy(style: str, script: str) -> str:
+    """No network at all; styles and scripts are those of this file, told by their hashes."""
+    style_hash, script_hash = (base64.b64encode(hashlib.sha256(text.encode()).digest()).decode()
+                               for text in (style, script))
+    return (f"default-src 'none'; img-src data:; style-src 'sha256-{style_hash}'; "
+            f"script-src 'sha256-{script_hash}'; base-uri 'none'; form-action 'none'")
