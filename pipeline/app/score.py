@@ -58,6 +58,8 @@ def score(
     if out is not None:
         _write(out, result, figures, sighted)
     _show(figures)
+    if whole is None:
+        print("no yaw is scored: give --cell for the parts' symmetry")
     told = over_limits(
         figures,
         {name: limit for name, limit in (

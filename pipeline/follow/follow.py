@@ -67,7 +67,8 @@ def follow(
     Parts on a belt are carried to counts 0 by the counts recorded with each frame; on a tray every frame is a fresh
     one. Parts are numbered from 1 by first sighting, then from furthest downstream. Same input, same numbers.
     outlines_mm: of each kind, (k, 2) in its grip frame. Where given, a part that was mistaken for another kind or pose
-    in some of its frames is not listed twice; a radius tells too little for that.
+    in some of its frames is not listed twice (nor was it ever, in what is known when: a controller would have learnt
+    of the mistake only with the next frame); a radius tells too little for that.
     """
     names = ["", *sorted(cell.parts)]
     heading, travel_mm = _carried(recording, cell)
