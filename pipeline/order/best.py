@@ -13,8 +13,8 @@ from pipeline.order.ruin import improve_order
 from pipeline.order.task import FloatArray, IntArray, Task, checked_task
 from pipeline.order.tour import improve_round
 
-QUICK = 8  # items for which the exact search needs no order to start from
-SMALL = 14  # and for which it needs no limit
+QUICK = 1000  # labels of each size a first search may keep
+SMALL = 14  # items for which the exact search needs no limit
 LABELS = 600_000  # of larger ones: what the exact search may keep, over all sizes
 KICKS, ROUNDS = 300_000, 1_200_000  # over the number of items: how long is improved
 BEATS = 8  # between which the clock is looked at
@@ -95,7 +95,8 @@ def best_order(
     best = _solved(task, int(seed) % 2**31, until)
     done = set(best.nodes)
     return Order(
-        tuple(node - 1 for node in best.nodes), best.value, best.value if best.proven else best.bound, best.proven,
+        tuple(node - 1 for node in best.nodes), best.value * task.scale,
+        (best.value if best.proven else best.bound) * task.scale, best.proven,
         tuple(node - 1 for node in range(1, len(task.go)) if node not in done))
 
 
@@ -105,11 +106,13 @@ def _solved(task: Task, seed: int, until: float) -> _Best:
     alone = task.timeless and not task.before.any()
     if alone and n > 2:
         best = _round(task, seed, until)
-    elif n > QUICK:
-        best = _improved(task, best, 0.0, 1, seed, until)
     if best.proven or (alone and n > SMALL):
         return best
     if n <= MOST_ITEMS:
+        best, floor, searched = _searched(task, best, QUICK, until)
+    if not searched and not alone:
+        best = _improved(task, best, floor, 1, seed, until)
+    if not searched and n <= MOST_ITEMS:
         best, floor, searched = _searched(task, best, (1 << 16) if n <= SMALL else LABELS // n, until)
     if not searched:
         floor = max(floor, whole_bound(task, best.value)) if best.whole else 0.0
@@ -126,14 +129,14 @@ def _round(task: Task, seed: int, until: float) -> _Best:
     warmth = float(np.median(cost.min(axis=1)))
     tour = _nearest_next(cost)
     value = improve_round(task.cost, near, tour, 0.0, 0, seed, 0.0)
-    bound = round_bound(task.cost, value)
+    bound = round_bound(task.cost, value, task.unit)
     for beat in range(BEATS):
         if value <= bound + SAME * abs(value) or (beat and perf_counter() > until):
             break
         value = improve_round(task.cost, near, tour, bound, KICKS // BEATS // n, seed + beat, warmth)
     nodes = tuple(int(node) for node in np.roll(tour, -int(np.argmax(tour == 0)))[1:])
     value = task.value(nodes)
-    return _Best(nodes, 0.0, value).judged(max(bound, round_bound(task.cost, value)), searched=False)
+    return _Best(nodes, 0.0, value).judged(max(bound, round_bound(task.cost, value, task.unit)), searched=False)
 
 
 def _nearest_next(cost: FloatArray) -> IntArray:

@@ -131,10 +131,10 @@ def ascent(
     return best
 
 
-def round_bound(cost: FloatArray, upper: float, rounds: int = 1500) -> float:
+def round_bound(cost: FloatArray, upper: float, unit: float = 0.0, rounds: int = 1500) -> float:
     """No round through all N nodes costs less (diagonal not used, inf where there is no leg); `upper`: a known one.
 
-    Whole-numbered costs have a whole-numbered least, so there the bound is rounded up.
+    Where costs are whole numbers of a unit so is the least, and the bound is rounded up.
     """
     size = len(cost)
     if size < 3:
@@ -147,8 +147,8 @@ def round_bound(cost: FloatArray, upper: float, rounds: int = 1500) -> float:
     assigned, u, v = assignment(filled)
     leave, enter = (np.zeros(size), np.zeros(size)) if symmetric else (-u, -v)
     bound = max(assigned, ascent(filled, symmetric, leave, enter, upper, rounds))
-    if np.all(finite == np.round(finite)):
-        bound = np.ceil(bound - 1e-6)
+    if unit:
+        bound = np.ceil(bound / unit - 1e-6) * unit
     return float(min(bound, upper))
 
 
@@ -176,7 +176,7 @@ def allowed(task: Task) -> NDArray[np.bool_]:
 
 def whole_bound(task: Task, upper: float) -> float:
     """No order that does every item has a lower value; `upper`: the value of one."""
-    bound = round_bound(np.where(allowed(task), task.cost, np.inf), upper)
+    bound = round_bound(np.where(allowed(task), task.cost, np.inf), upper, task.unit)
     if task.waits and len(task.go) > 1:
         way = shortest(task.go)
         latest_end = np.maximum(task.early, way[0])[1:] + way[1:, 0]

@@ -71,8 +71,8 @@ def _nodes(task: Task, strict: bool) -> NDArray[np.void]:
 
 def _limits(task: Task) -> tuple[FloatArray, NDArray[np.int64]]:
     """Latest starts at each node from which the others can be reached, rising, and the sets past each."""
-    latest = task.late[None, 1:] - shortest(task.go)[:, 1:]
-    latest[np.isnan(latest)] = np.inf
+    way = shortest(task.go)[:, 1:]
+    latest = np.where(np.isinf(way), -np.inf, task.late[None, 1:] - np.where(np.isinf(way), 0.0, way))
     latest[np.arange(1, len(task.go)), np.arange(len(task.go) - 1)] = np.inf
     order = np.argsort(latest, axis=1, kind="stable")
     past = np.cumsum(np.int64(1) << order.astype(np.int64), axis=1)

@@ -158,7 +158,7 @@ def _follow(
     """Fill in the label of going on to a node; False where that cannot be, or leads to nothing that is sought."""
     before, then = pool[parent], pool[label]
     time = max(before.time + go[before.last, node], nodes[node].early)
-    if time > nodes[node].late:
+    if time > nodes[node].late or not time < np.inf:
         return False
     bit = 1 << (node - 1)
     done, rest = before.done | bit, before.rest & ~bit

@@ -14,12 +14,14 @@ BoolArray = NDArray[np.bool_]
 
 @dataclass(frozen=True)
 class Task:
-    """N = n + 1 nodes: node 0 the start (and the end), node i + 1 item i. Times in the unit of the legs.
+    """N = n + 1 nodes: node 0 the start (and the end), node i + 1 item i. Times are divided by `scale`, weights by the
+    greatest, so that a hair (1e-9) means the same for every task; both by a power of two, so that nothing is rounded.
 
     go (N, N): from the start of service at the row to the arrival at the column; to column 0: to the end.
     cost (N, N): what the objective counts of that, waiting aside.  waits: the objective counts waiting too (finish).
     early, late (N,): first and last start of service, a hair of rounding allowed; late inf: no limit.
     weight (N,): 0 at node 0.  before (N, N): row must be done before column, closed under "and so".
+    unit: every cost is a whole number of these; 0: there is no such unit.
     """
 
     go: FloatArray
@@ -29,6 +31,8 @@ class Task:
     late: FloatArray
     weight: FloatArray
     before: BoolArray
+    scale: float
+    unit: float
 
     @property
     def timeless(self) -> bool:
@@ -69,14 +73,24 @@ def checked_task(
     serving = _row("service", service, n, 0.0)
     weight = _row("weights", weights, n, 1.0)
     early, late = _windows(windows, n)
+    if np.any(weight == 0):
+        raise ValueError("weights must be positive; leave items of no weight out")
     go = leg + np.concatenate([[0.0], serving])[:, None]
     if not close:
         leg[1:, 0] = 0.0
         go[1:, 0] = serving
-    if np.any(weight == 0):
-        raise ValueError("weights must be positive; leave items of no weight out")
-    return Task(go, go if objective == "finish" else leg, objective == "finish", early, late,
-                np.concatenate([[0.0], weight]), _precedence(after, n))
+    cost = go if objective == "finish" else leg
+    whole = bool(np.all(cost[np.isfinite(cost)] == np.round(cost[np.isfinite(cost)])))
+    scale = _power_of_two(go[(go > 0) & np.isfinite(go)])
+    return Task(
+        go / scale, cost / scale, objective == "finish", early / scale, late / scale,
+        np.concatenate([[0.0], weight / _power_of_two(weight)]), _precedence(after, n), scale,
+        1.0 / scale if whole else 0.0)
+
+
+def _power_of_two(values: FloatArray) -> float:
+    """The power of two at or below the median; 1 for no values."""
+    return float(2.0 ** np.floor(np.log2(np.median(values)))) if len(values) else 1.0
 
 
 def _row(name: str, given: ArrayLike | None, n: int, default: float) -> FloatArray:
@@ -100,7 +114,7 @@ def _windows(given: ArrayLike | None, n: int) -> tuple[FloatArray, FloatArray]:
         raise ValueError(f"a window is earliest, then latest, neither NaN; item {at} has {window[at, 0]} and "
                          f"{window[at, 1]}")
     early = np.concatenate([[0.0], np.maximum(window[:, 0], 0.0)])
-    late = np.concatenate([[np.inf], window[:, 1] + 1e-9 * np.maximum(1.0, np.abs(np.nan_to_num(window[:, 1])))])
+    late = np.concatenate([[np.inf], window[:, 1] + 1e-9 * np.abs(np.where(np.isinf(window[:, 1]), 0.0, window[:, 1]))])
     return early, late
 
 

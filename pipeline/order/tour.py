@@ -14,9 +14,6 @@ from pipeline.order.compiled import compiled
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
-HAIR = 1e-9
-
-
 @compiled("void(i8[::1], i8[::1], i8, i8, i8)")
 def _exchange(tour: IntArray, place: IntArray, start: int, first: int, second: int) -> None:
     """Swap the adjacent segments of `first` and `second` nodes that begin at place `start`, going round."""
@@ -42,16 +39,16 @@ def _turn(tour: IntArray, place: IntArray, start: int, length: int) -> None:
         place[tour[a]], place[tour[b]] = a, b
 
 
-@compiled("f8(f8[:,::1], i8[:,::1], i8[::1], i8[::1], i8)")
-def _exchanged(cost: FloatArray, near: IntArray, tour: IntArray, place: IntArray, a: int) -> float:
+@compiled("f8(f8[:,::1], i8[:,::1], i8[::1], i8[::1], i8, f8)")
+def _exchanged(cost: FloatArray, near: IntArray, tour: IntArray, place: IntArray, a: int, hair: float) -> float:
     """Best exchange of adjacent segments that begins behind node a, made if it gains; what it gains."""
     size = len(tour)
     at = place[a]
     b = tour[(at + 1) % size]
-    best, most_first, most_second = HAIR, 0, 0
+    best, most_first, most_second = hair, 0, 0
     for c in near[a]:
         gain = cost[a, b] - cost[a, c]
-        if gain <= HAIR:
+        if gain <= hair:
             break
         first = (place[c] - at - 1) % size
         if first == 0:
@@ -71,12 +68,12 @@ def _exchanged(cost: FloatArray, near: IntArray, tour: IntArray, place: IntArray
     return 0.0
 
 
-@compiled("f8(f8[:,::1], i8[::1], i8[::1], i8)")
-def _turned(cost: FloatArray, tour: IntArray, place: IntArray, a: int) -> float:
+@compiled("f8(f8[:,::1], i8[::1], i8[::1], i8, f8)")
+def _turned(cost: FloatArray, tour: IntArray, place: IntArray, a: int, hair: float) -> float:
     """Best turn of a segment that begins or ends next to node a, made if it gains; what it gains."""
     size = len(tour)
     at = place[a]
-    best, start, most = HAIR, 0, 0
+    best, start, most = hair, 0, 0
     b = tour[(at + 1) % size]
     behind, c = 0.0, b
     for length in range(2, size - 1):  # a | b .. c | d
@@ -101,13 +98,13 @@ def _turned(cost: FloatArray, tour: IntArray, place: IntArray, a: int) -> float:
     return 0.0
 
 
-@compiled("f8(f8[:,::1], i8[::1], i8[::1], i8)")
-def _moved_turned(cost: FloatArray, tour: IntArray, place: IntArray, a: int) -> float:
+@compiled("f8(f8[:,::1], i8[::1], i8[::1], i8, f8)")
+def _moved_turned(cost: FloatArray, tour: IntArray, place: IntArray, a: int, hair: float) -> float:
     """Best move of up to three nodes from a on, turned round, to another place, made if it gains; what it gains."""
     size = len(tour)
     at = place[a]
     p = tour[(at - 1) % size]
-    best, most, target = HAIR, 0, 0
+    best, most, target = hair, 0, 0
     turning, z = 0.0, a
     for length in range(1, min(3, size - 3) + 1):
         if length > 1:
@@ -115,7 +112,7 @@ def _moved_turned(cost: FloatArray, tour: IntArray, place: IntArray, a: int) -> 
             turning += cost[before, z] - cost[z, before]
         e = tour[(at + length) % size]
         freed = cost[p, a] + cost[z, e] - cost[p, e] + turning
-        if freed <= HAIR:
+        if freed <= hair:
             continue
         x = e
         for gap in range(1, size - length):
@@ -149,8 +146,10 @@ def _queue_changed(
     return waiting
 
 
-@compiled("f8(f8[:,::1], i8[:,::1], i8[::1], i8[::1], i8[:,::1])")
-def _settle(cost: FloatArray, near: IntArray, tour: IntArray, place: IntArray, beside: IntArray) -> float:
+@compiled("f8(f8[:,::1], i8[:,::1], i8[::1], i8[::1], i8[:,::1], f8)")
+def _settle(
+    cost: FloatArray, near: IntArray, tour: IntArray, place: IntArray, beside: IntArray, hair: float,
+) -> float:
     """Improve round the nodes whose neighbours are not the ones noted, until nothing gains; what was gained in all."""
     size = len(tour)
     queue, queued = np.empty(size, np.int64), np.zeros(size, np.bool_)
@@ -160,11 +159,11 @@ def _settle(cost: FloatArray, near: IntArray, tour: IntArray, place: IntArray, b
         a = queue[head]
         head, waiting = (head + 1) % size, waiting - 1
         queued[a] = False
-        gain = _exchanged(cost, near, tour, place, a)
+        gain = _exchanged(cost, near, tour, place, a, hair)
         if gain <= 0.0:
-            gain = _turned(cost, tour, place, a)
+            gain = _turned(cost, tour, place, a, hair)
         if gain <= 0.0:
-            gain = _moved_turned(cost, tour, place, a)
+            gain = _moved_turned(cost, tour, place, a, hair)
         if gain > 0.0:
             total += gain
             waiting = _queue_changed(tour, beside, queue, queued, head, waiting)
@@ -194,26 +193,27 @@ def improve_round(
     """
     size = len(tour)
     chance = seeded(seed)
+    hair = 1e-9 + 1e-14 * size * cost.max()  # what rounding can make of nothing
     place = np.empty(size, np.int64)
     for i in range(size):
         place[tour[i]] = i
     beside = np.full((size, 2), -1, np.int64)
-    _settle(cost, near, tour, place, beside)
+    _settle(cost, near, tour, place, beside, hair)
     now = _length(cost, tour)
     best, kept = now, tour.copy()
     was, was_beside = tour.copy(), beside.copy()
     longest = max(1, min(size // 3 - 1, 12)) if size >= 8 else 0
     for kick in range(kicks if longest else 0):
-        if best <= target + HAIR:
+        if best <= target + hair:
             break
         start = pick(chance, size)
         first, second = 1 + pick(chance, longest), 1 + pick(chance, longest)
         third = 1 + pick(chance, longest)
         _exchange(tour, place, start, first + second, third)  # B C D -> D B C -> D C B
         _exchange(tour, place, (start + third) % size, first, second)
-        _settle(cost, near, tour, place, beside)
+        _settle(cost, near, tour, place, beside, hair)
         then = _length(cost, tour)
-        if then < best - HAIR:
+        if then < best - hair:
             best = then
             kept[:] = tour
         if then <= now + warmth * draw(chance) * (1.0 - kick / kicks):
