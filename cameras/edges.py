@@ -94,6 +94,7 @@ def _at(image, u, v):  # type: ignore[no-untyped-def]
 
 
 MOST_SAMPLES = 96
+OUTSIDE = 1e9
 
 
 @njit("void(u1[:,::1], f8, f8, f8, f8, f8, f8, f8, f8[::1], f8[::1])", cache=True)
@@ -102,7 +103,7 @@ def edge_along(image, u, v, nu, nv, reach, least, sign, profile, found):  # type
 
     The profile, averaged over three pixels across, is differenced over two; the best peak is its strength less half
     for one at the end of the reach, less 0.4 for one of the other sign; a parabola gives its top.
-    found[1] is 0 where no step of `least` grey levels is in reach or the profile leaves the image.
+    found[1] is 0 where no step of `least` grey levels is in reach; found[0] is OUTSIDE where the profile leaves the image.
     """
     found[0] = 0.0
     found[1] = 0.0
@@ -110,6 +111,7 @@ def edge_along(image, u, v, nu, nv, reach, least, sign, profile, found):  # type
     n = 2 * side + 1
     far = 0.5 * side + 1.5
     if n > profile.shape[0] or not (far < u < image.shape[1] - 2 - far and far < v < image.shape[0] - 2 - far):
+        found[0] = OUTSIDE
         return
     for k in range(n):
         s = 0.5 * (k - side)

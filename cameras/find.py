@@ -24,6 +24,7 @@ Grey = NDArray[np.uint8]
 
 DEFAULT_SCORE = 0.7
 MOST_PEAKS = 40
+SLACK_CELLS, BEYOND_CELLS = 3, 24
 TRIED_ON_ONE, TRIED_ON_MORE = 6, 5
 PROMISING = 0.4
 SETTLED = 0.92
@@ -71,10 +72,11 @@ class _Placed:
     fit: Fit
     xy_mm: FloatArray
     polygon_px: FloatArray
+    cut: bool
 
     def explains(self, u: float, v: float, yaw: float, kind: _Kind, affine: FloatArray) -> bool:
         """Whether a rough placement (grip point in cells) lies inside this fit, which is too good to be bettered."""
-        if self.fit.outline_share < SETTLED or (self.kind.name == kind.name and self.kind.model.mirrored_alike
+        if self.fit.worth < SETTLED or (self.kind.name == kind.name and self.kind.model.mirrored_alike
                                                 and self.kind.down != kind.down):  # fmt: skip
             return False
         cosine, sine = np.cos(yaw), np.sin(yaw)
@@ -112,7 +114,7 @@ class PartFinder:
         for patch in range(len(blobs.box)):
             placed += self._on_patch(grey, camera, views, edges, blobs, patch)
         kept = _best(placed, grey.shape, OVERLAP)
-        return _sightings(kept, self._unknown(kept, edges, blobs, camera))
+        return _sightings([one for one in kept if not one.cut], self._unknown(kept, edges, blobs, camera))
 
     def _views_for(self, camera: CameraMap, shape: tuple[int, int]) -> Views:
         if self._views is None or self._camera is not camera or self._shape != shape:
@@ -122,15 +124,15 @@ class PartFinder:
 
     def _on_patch(self, grey: Grey, camera: CameraMap, views: Views, edges: EdgeMap, blobs: Blobs, patch: int) -> list[_Placed]:
         """Fits on one patch: from the best rough placement down, none where a good fit already stands."""
-        box = blobs.box[patch]
+        box, bounds = blobs.box[patch], self._bounds(blobs, patch)
         centre_px = CELL_PX * 0.5 * (box[:2] + box[2:]) + 0.5 * (CELL_PX - 1)
         place = int(views.nearest(camera.to_cell(centre_px[None], self.surface_mm))[0])
         affine = np.ascontiguousarray(views.coefficients[place][:, 1:3]) / CELL_PX
         rough = []
         for number, kind in enumerate(self.kinds):
-            room = room_for(box, kind.steps)
+            room = room_for(bounds, kind.steps)
             placements(edges.own, edges.near, blobs.label, patch + 1, kind.coarse, affine, kind.anchor, kind.first_rad,
-                       kind.steps, kind.step_rad, box, room)  # fmt: skip
+                       kind.steps, kind.step_rad, bounds, room)  # fmt: skip
             found = peaks(room)[:MOST_PEAKS]
             rough.append(np.column_stack([found, np.full(len(found), float(number))]))
         every = np.concatenate(rough)
@@ -162,10 +164,16 @@ class PartFinder:
         if fit is None or fit.outline_share < self.least_score:
             return None
         rows, columns = grey.shape
-        polygon = fit.polygon_px
-        if polygon.min() < 0.5 or polygon[:, 0].max() > columns - 1.5 or polygon[:, 1].max() > rows - 1.5:
-            return None
-        return _Placed(kind, fit, views.places_mm[place] + fit.pose[:2] - kind.model.shift_mm, polygon)
+        low, high = fit.polygon_px.min(axis=0), fit.polygon_px.max(axis=0)
+        cut = bool(low.min() < 0.5 or high[0] > columns - 1.5 or high[1] > rows - 1.5)
+        return _Placed(kind, fit, views.places_mm[place] + fit.pose[:2] - kind.model.shift_mm, fit.polygon_px, cut)
+
+    def _bounds(self, blobs: Blobs, patch: int) -> NDArray[np.int64]:
+        """How far placements on a patch may reach, in cells: a little beyond it, and beyond a border that cuts it."""
+        rows, columns = blobs.label.shape
+        box = blobs.box[patch]
+        at_border = np.array([box[0] <= 1, box[1] <= 1, box[2] >= columns - 2, box[3] >= rows - 2])
+        return np.asarray(box + np.array([-1, -1, 1, 1]) * np.where(at_border, BEYOND_CELLS, SLACK_CELLS), dtype=np.int64)
 
     def _unknown(self, kept: list[_Placed], edges: EdgeMap, blobs: Blobs, camera: CameraMap) -> list[tuple[FloatArray, FloatArray]]:
         """Centre and outline about it, in mm, of what no part explains and no border cuts."""
@@ -201,10 +209,9 @@ def grey_of(image: NDArray[np.uint8]) -> NDArray[np.uint8]:
 
 def _kind(part: TaughtPart, down: bool) -> _Kind:
     template = template_of(part.model, down)
-    outline_only = template.points[template.points[:, 5] == 0.0]
     period = 2.0 * np.pi / max(part.turns, 1)
     steps = 1 if part.turns == 0 else max(int(round(period / TURN_STEP_RAD)), 1)
-    return _Kind(part.name, down, template, coarse_points(outline_only), _anchor(template.outline), part.model,
+    return _Kind(part.name, down, template, coarse_points(template.points), _anchor(template.outline), part.model,
                  part.model.yaw_rad if part.turns == 0 else 0.0, steps,                 period / steps)  # fmt: skip
 
 

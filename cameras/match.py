@@ -11,7 +11,7 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
-from cameras.edges import MOST_SAMPLES, edge_along
+from cameras.edges import MOST_SAMPLES, OUTSIDE, edge_along
 from cameras.model import Model
 from cameras.view import project, slopes
 
@@ -19,7 +19,7 @@ FloatArray = NDArray[np.float64]
 
 HIT_PX = 1.6
 STAGE1 = 0.3
-INNER_SHARE, INNER_WORTH = 0.45, 0.3  # of inner edges, what a part the right side up shows at the least; its weight
+INNER_SHARE, INNER_MOST, INNER_WORTH = 0.55, 0.85, 0.6  # more of the inner edges than this speaks for the side up
 PIXEL_SIGMA = 0.25
 DOWN_LIGHTER, DOWN_DARKER, DOWN_SIGMA = 0.92, 0.75, 0.15  # of the height: of the outline of a part turned over
 LEAST_SCATTER_PX = 0.12
@@ -63,9 +63,9 @@ def template_of(model: Model, down: bool) -> Template:
                     np.ascontiguousarray(outline), model.turns == 0)  # fmt: skip
 
 
-@njit("i8(u1[:,::1], f8[:,::1], f8[:,::1], f8[::1], f8[::1], f8[::1], f8[::1], f8, f8, i8, f8, f8[:,::1], f8[:,::1])", cache=True)
+@njit("f8(u1[:,::1], f8[:,::1], f8[:,::1], f8[::1], f8[::1], f8[::1], f8[::1], f8, f8, i8, f8, f8[:,::1], f8[:,::1])", cache=True)
 def _step(image, view, points, taught, pose, heights, prior, reach, least, stride, with_edges, normal, out):  # type: ignore[no-untyped-def]
-    """Normal equations of one step. out (n, 4): residual px, step, hit, predicted inside; returns how many were hit."""
+    """Normal equations of one step. out (n, 4): residual px, step, hit, inside the image; returns the share hit."""
     size = 3 + heights.shape[0]
     normal[:, :] = 0.0
     cosine, sine = np.cos(pose[2]), np.sin(pose[2])
@@ -79,7 +79,7 @@ def _step(image, view, points, taught, pose, heights, prior, reach, least, strid
     away_y = (-local[1, 0] * local[0, 2] + local[0, 0] * local[1, 2]) / det
     back_x, back_y = cosine * taught[0] - sine * taught[1], sine * taught[0] + cosine * taught[1]
     usual = np.median(np.abs(points[:, 4])) + 1e-6
-    hits = 0
+    hits, inside = 0, 0
     for k in range(0, points.shape[0], stride):
         nx, ny = cosine * points[k, 2] - sine * points[k, 3], sine * points[k, 2] + cosine * points[k, 3]
         group = int(points[k, 5])
@@ -99,7 +99,8 @@ def _step(image, view, points, taught, pose, heights, prior, reach, least, strid
             nu, nv = -nu, -nv
         edge_along(image, u, v, nu, nv, reach, least, points[k, 4], profile, found)
         out[k, 0], out[k, 1] = found[0], found[1]
-        out[k, 2] = 0.0
+        out[k, 2], out[k, 3] = 0.0, 0.0 if found[0] == OUTSIDE else 1.0
+        inside += int(out[k, 3])
         if found[1] == 0.0:
             continue
         r = found[0]
@@ -123,7 +124,7 @@ def _step(image, view, points, taught, pose, heights, prior, reach, least, strid
                 jb = row[b] if b < 3 else jz
                 normal[ia, ib] += w * ja * jb
             normal[ia, size] += w * ja * r
-    return hits
+    return hits / inside if 2 * inside * stride > points.shape[0] else -1.0
 
 
 @njit("void(f8[:,::1], f8[::1], f8[::1], f8[::1], f8, b1, f8[::1], f8[:,::1])", cache=True)
@@ -165,10 +166,9 @@ def settle(image, view, points, taught, pose, heights, prior, sigmas, reach, las
     size = 3 + heights.shape[0]
     normal = np.empty((size, size + 1))
     moved = np.empty(size)
-    hits = 0
     for k in range(steps):
         now = reach + (last_reach - reach) * k / max(steps - 1, 1)
-        hits = _step(image, view, points, taught, pose, heights, prior, now, least, stride, inner, normal, out)
+        _step(image, view, points, taught, pose, heights, prior, now, least, stride, inner, normal, out)
         _solve(normal, prior, sigmas, heights, unit, is_round, moved, cov)
         far = np.hypot(moved[0], moved[1])
         if not far < 4.0 or not abs(moved[2]) < 0.5:
@@ -176,8 +176,7 @@ def settle(image, view, points, taught, pose, heights, prior, sigmas, reach, las
         pose += moved[:3]
         if reach < 5.0:
             heights += moved[3:]
-    hits = _step(image, view, points, taught, pose, heights, prior, last_reach, least, stride, inner, normal, out)
-    return hits / ((points.shape[0] + stride - 1) // stride)
+    return _step(image, view, points, taught, pose, heights, prior, last_reach, least, stride, inner, normal, out)
 
 
 @njit("void(f8[:,::1], f8[:,::1], f8[::1], f8, f8[:,::1])", cache=True)
@@ -228,9 +227,10 @@ def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, sta
     if share < 0.0 or np.hypot(pose[0] - start[0], pose[1] - start[1]) > 6.0:
         return None
     outline = template.points[:, 5] == 0.0
-    outline_share = float(np.mean(out[outline, 2]))
-    inner_share = float(np.mean(out[~outline, 2])) if not outline.all() else 1.0
-    worth = outline_share + (0.0 if outline.all() else INNER_WORTH * (inner_share - INNER_SHARE))
+    seen = out[:, 3] > 0.0
+    outline_share = float(np.sum(out[outline, 2]) / max(np.sum(seen & outline), 1))
+    inner_share = float(np.mean(out[seen & ~outline, 2])) if np.any(seen & ~outline) else 1.0
+    worth = outline_share + (0.0 if outline.all() else INNER_WORTH * (min(inner_share, INNER_MOST) - INNER_SHARE))
     polygon = np.empty_like(template.outline)
     outline_pixels(view, template.outline, pose, 0.5 * (heights[0] + heights[1]), polygon)
     return Fit(pose, heights, float(np.sqrt(unit * 0.5 * (cov[0, 0] + cov[1, 1]))), float(np.sqrt(unit * cov[2, 2])),

@@ -60,7 +60,7 @@ class _Problem:
     @property
     def numbers(self) -> int:
         """How many numbers are fitted."""
-        return self.free.shape[1]
+        return int(self.free.shape[1])
 
     def off_mm(self, found: CameraMap) -> FloatArray:
         """(n, 2) mapped less touched; far off where a pixel has no point."""
@@ -193,10 +193,16 @@ def _refined(problem: _Problem, change: FloatArray, kept: NDArray[np.bool_], sig
 
 
 def _near(fit: PlaneFit, by_median: bool) -> NDArray[np.bool_]:
-    """Which touches lie within the gate; of one left out the map itself is uncertain too."""
-    apart, sigma = np.linalg.norm(fit.residuals_mm, axis=1), fit.sigma_mm
-    if by_median:  # of the distance with equal errors in x and y (Rayleigh): 1.1774 standard deviations
-        sigma = float(np.median(apart[fit.kept])) / 1.1774 * np.sqrt(2 * fit.kept.sum() / max(fit.map.freedom, 1.0))
+    """Which touches lie within the gate.
+
+    A touch that took part draws the map to itself: its residual grows by one over the root of what it leaves to the
+    others, which makes it the mean, by product, of residual and left-out residual. One that took no part is held
+    against a map that is uncertain too.
+    """
+    apart, left = (np.linalg.norm(off, axis=1) for off in (fit.residuals_mm, fit.left_out_mm))
+    apart = np.where(np.isfinite(left), np.sqrt(apart * left), apart)
+    # the distance with equal errors in x and y has the median 1.1774 standard deviations (Rayleigh)
+    sigma = float(np.median(apart[fit.kept])) / 1.1774 if by_median else fit.sigma_mm
     doubt = np.where(fit.kept, 0.0, fit.map.sigma_mm(fit.points))
     return np.asarray(apart <= _GATE * np.hypot(max(sigma, _FLOOR_MM), doubt))
 

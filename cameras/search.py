@@ -11,11 +11,10 @@ from numpy.typing import NDArray
 FloatArray = NDArray[np.float64]
 
 TURN_STEP_RAD = np.radians(6.0)
-LEAST_SHARE = 0.65
+LEAST_MISSED = 0.35
 GLANCE = 14  # points looked at first
 GLANCE_LEAST = 7
 LEVEL = 0.03  # scores this close make a plateau
-SLACK_CELLS = 3
 BLOCK_CELLS = 3
 TURN_BINS = 6
 
@@ -76,13 +75,14 @@ def placements(own, near, label, patch, points, affine, anchor, first, turns, st
     Each: score (mean of the shares of points met within a cell and exactly; 0: none), column, row, turn in radians,
     and how many placements were nearly as good and were averaged.
     affine (2, 2): cells per millimetre.  anchor (2,): a point well inside the outline, which must lie on the patch.
-    box: the patch's, first and last column and row; a placement keeps within it but for some slack.  first, step: turns in radians.
+    box: first and last column and row of where a placement may reach; what lies outside the image counts neither way.
+    first, step: turns in radians.
     """
     rows, columns = near.shape
     n = points.shape[0]
     du, dv, mask, reach = np.empty(n, np.int64), np.empty(n, np.int64), np.empty(n, np.uint8), np.empty(4)
     blocks[:, :, :, 0] = 0.0
-    allowed = int(n * (1.0 - LEAST_SHARE))
+    allowed = int(n * LEAST_MISSED)
     for turn in range(turns):
         angle = first + turn * step
         _turned(points, affine, angle, du, dv, mask, reach)
@@ -90,28 +90,28 @@ def placements(own, near, label, patch, points, affine, anchor, first, turns, st
         ax, ay = cosine * anchor[0] - sine * anchor[1], sine * anchor[0] + cosine * anchor[1]
         au = int(np.round(affine[0, 0] * ax + affine[0, 1] * ay))
         av = int(np.round(affine[1, 0] * ax + affine[1, 1] * ay))
-        from_u = int(np.ceil(max(box[0] - SLACK_CELLS, 0) - reach[0]))
-        from_v = int(np.ceil(max(box[1] - SLACK_CELLS, 0) - reach[1]))
-        to_u = int(np.floor(min(box[2] + SLACK_CELLS, columns - 1) - reach[2]))
-        to_v = int(np.floor(min(box[3] + SLACK_CELLS, rows - 1) - reach[3]))
+        from_u, from_v = int(np.ceil(box[0] - reach[0])), int(np.ceil(box[1] - reach[1]))
+        to_u, to_v = int(np.floor(box[2] - reach[2])), int(np.floor(box[3] - reach[3]))
         part = int(turn * blocks.shape[2] / turns)
         for j in range(max(from_v, -av), min(to_v, rows - 1 - av) + 1):
             for i in range(max(from_u, -au), min(to_u, columns - 1 - au) + 1):
                 if label[j + av, i + au] != patch:
                     continue
-                missed, exact = 0, 0
+                missed, exact, outside = 0, 0, 0
                 for k in range(n):
                     r, c = j + dv[k], i + du[k]
-                    if r < 0 or c < 0 or r >= rows or c >= columns or near[r, c] & mask[k] == 0:
+                    if r < 0 or c < 0 or r >= rows or c >= columns:
+                        outside += 1
+                    elif near[r, c] & mask[k] == 0:
                         missed += 1
                         if missed > allowed or (k < GLANCE and missed > GLANCE - GLANCE_LEAST):
                             missed = n
                             break
                     elif own[r, c] & mask[k] != 0:
                         exact += 1
-                if missed > allowed:
+                if missed > LEAST_MISSED * (n - outside) or 2 * outside > n:
                     continue
-                score = 0.5 * (n - missed + exact) / n
+                score = 0.5 * (n - outside - missed + exact) / (n - outside)
                 bj = min(max((j - box[1]) // BLOCK_CELLS + 8, 0), blocks.shape[0] - 1)
                 bi = min(max((i - box[0]) // BLOCK_CELLS + 8, 0), blocks.shape[1] - 1)
                 best = blocks[bj, bi, part]
