@@ -9,7 +9,7 @@ from pathlib import Path
 
 import numpy as np
 from scipy.spatial import cKDTree
-from test_follow import CELL, recorded, scene
+from some_sightings import CELL, recorded, scene
 
 from cameras.locate import read_located
 from pipeline.follow import follow

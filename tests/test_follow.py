@@ -1,8 +1,7 @@
-"""Following: each part once, however often and badly seen; drift named for what it is."""
+"""Following: each part once, however often and badly seen."""
 
 from dataclasses import replace
 from itertools import permutations
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -10,80 +9,16 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.spatial import cKDTree
 from scipy.stats import circmean
+from some_sightings import CELL, HEADING, SQUARE, TRAY, recorded, scene, sightings, stop_and_go
 
 from cameras.columns import read_columns
 from cameras.locate import read_located
-from cameras.recording import Recording, read_recording
+from cameras.recording import read_recording
 from cameras.sightings import Sightings
-from pipeline.cell import cell_from, load_cell
+from pipeline.cell import load_cell
 from pipeline.follow import follow
 from pipeline.follow.associate import Pair, best_pairs
 from pipeline.follow.overlap import inside, overlap
-
-JOINT = {"min": -90.0, "max": 90.0, "max_speed": 1.0, "max_accel": 1.0}
-RAW = {
-    "arm": {"link1_mm": 1.0, "link2_mm": 1.0, "flange_height_mm": 1.0, "home": [0.0, 0.0, 0.0, 0.0],
-            **{f"j{n}": JOINT for n in (1, 2, 3, 4)}},
-    "tool": {}, "motion": {"travel_mm": 1.0},
-    "belt": {"surface_mm": 0.0, "heading_deg": 30.0, "mm_per_count": 0.05},
-    "parts": {"lever": {"grasp_mm": 1.0, "places": ["bin"], "symmetry": 1},
-              "plate": {"grasp_mm": 1.0, "places": ["bin"], "symmetry": 2},
-              "dome": {"grasp_mm": 1.0, "places": ["bin"], "symmetry": "round"}},
-    "places": [{"name": "bin", "origin_mm": [0.0, 0.0, 0.0]}],
-}  # fmt: skip
-CELL = cell_from(RAW)
-TRAY = cell_from({key: value for key, value in RAW.items() if key != "belt"})
-HEADING = np.array([np.cos(np.radians(30)), np.sin(np.radians(30))])
-LEFT = np.array([-HEADING[1], HEADING[0]])
-VIEW_MM = 300.0
-SQUARE = np.array([[-10.0, -10.0], [10.0, -10.0], [10.0, 10.0], [-10.0, 10.0]])
-
-
-def recorded(counts, times=None):
-    n = len(counts)
-    times = np.arange(n) * 0.1 if times is None else times
-    return Recording(Path("."), np.arange(n), ("x",) * n, np.array(times, float), np.array(counts, float),
-                     np.full(n, ""), np.arange(n) + 2)
-
-
-def stop_and_go(seed=0, frames=400):
-    """Frames with jitter, some of them dropped, of a belt that slows and stops."""
-    rng = np.random.default_rng(seed)
-    times = np.sort(rng.choice(np.arange(frames) * 0.1, int(frames * 0.93), replace=False))
-    times = times + rng.uniform(-0.02, 0.02, len(times))
-    speed = 2000 * np.clip(1.2 * np.sin(times * 0.5) + 0.6, 0, 1)
-    return recorded(np.round(5000 + np.concatenate([[0], np.cumsum(speed[1:] * np.diff(times))])), times)
-
-
-def scene(recording, parts=60, noise_mm=0.1, noise_deg=0.3, missed=0.05, scale=1.0, turn_deg=0.0, delay_s=0.0, seed=0):
-    """True places (n, 2), kinds and yaws at counts 0, and the sightings of a view of VIEW_MM of belt."""
-    rng = np.random.default_rng(seed)
-    travel = recording.counts * 0.05
-    along, across = rng.uniform(travel[0], travel[-1], parts), rng.uniform(-80, 80, parts)
-    kinds, yaws = rng.choice(["lever", "plate", "dome"], parts), rng.uniform(-np.pi, np.pi, parts)
-    at = -along[:, None] * HEADING + across[:, None] * LEFT
-    true_travel = travel * scale + delay_s * np.gradient(travel, recording.times_s)
-    angle = np.radians(30 + turn_deg)
-    xy = at[:, None, :] + true_travel[:, None] * np.array([np.cos(angle), np.sin(angle)])
-    seen_along = xy @ HEADING
-    shown = (seen_along > 0) & (seen_along < VIEW_MM) & (rng.random(seen_along.shape) > missed)
-    part, row = np.nonzero(shown)
-    places = xy[part, row] + rng.normal(0, noise_mm, (len(row), 2))
-    turned = np.where(kinds[part] == "plate", rng.integers(0, 2, len(row)) * np.pi, 0)
-    yaw = yaws[part] + turned + rng.normal(0, np.radians(noise_deg), len(row))
-    yaw = np.where(kinds[part] == "dome", rng.uniform(-np.pi, np.pi, len(row)), yaw)
-    order = np.lexsort((rng.random(len(row)), row))
-    seen = sightings(row[order], kinds[part][order], places[order], yaw[order], sigma_mm=noise_mm,
-                     sigma_deg=noise_deg)
-    return at[shown.any(axis=1)], kinds[shown.any(axis=1)], yaws[shown.any(axis=1)], seen
-
-
-def sightings(row, kind, xy_mm, yaw_rad=0.0, score=0.9, side="up", sigma_mm=0.1, sigma_deg=0.3, outline=None):
-    n = len(row)
-    outlines = tuple(np.zeros((0, 2)) if name or outline is None else outline for name in kind)
-    return Sightings(np.array(row, np.int64), np.array(kind, np.str_), np.full(n, side), np.array(xy_mm, float),
-                     np.broadcast_to(yaw_rad, n).astype(float), np.broadcast_to(score, n).astype(float),
-                     np.full(n, float(sigma_mm)), np.full(n, np.radians(sigma_deg)), outlines)
 
 
 def places(followed):
@@ -315,57 +250,3 @@ def test_frames_are_assigned_as_brute_force_would(costs):
     assert all(pair in costs for pair in found.items())
     assert len(set(found.values())) == len(found) == -best[0]
     assert sum(costs[pair] for pair in found.items()) == pytest.approx(best[1])
-
-
-@pytest.mark.parametrize("percent", [0.8, -0.4, 5.0])
-def test_a_wrong_scale_is_followed_and_named(percent):
-    recording = recorded(5000 + np.arange(300) * 200)
-    at, _, _, seen = scene(recording, scale=1 + percent / 100)
-    followed = follow(seen, recording, CELL)
-    assert len(followed.parts) == len(at)
-    assert followed.drift.along_mm == pytest.approx(percent, abs=0.05)
-    assert abs(followed.drift.across_mm) < 0.05
-    (told,) = followed.drift.findings
-    assert told.startswith(f"sightings drift {followed.drift.along_mm:+.2f} mm per 100 mm along the belt: "
-                           "recheck mm_per_count (")
-    assert float(told.split("(")[1].split()[0]) == pytest.approx(0.05 * (1 + percent / 100), rel=1e-3)
-
-
-def test_a_wrong_height_is_told_from_a_wrong_scale():
-    """What lies higher than the map is told drifts by parallax: only that kind does."""
-    recording = recorded(5000 + np.arange(300) * 200)
-    seen = scene(recording, parts=120)[3]
-    along = np.where(seen.kind == "plate", seen.xy_mm @ HEADING, 0.0)
-    seen = replace(seen, xy_mm=seen.xy_mm + 0.004 * along[:, None] * HEADING)
-    drift = follow(seen, recording, CELL).drift
-    (told,) = drift.findings
-    assert told.startswith("sightings of plate drift +")
-    assert "height_mm" in told
-    assert {name: round(along, 1) for name, along, _ in drift.by_kind} == {"dome": 0.0, "lever": 0.0, "plate": 0.4}
-
-
-def test_a_wrong_heading_is_named():
-    recording = recorded(5000 + np.arange(300) * 200)
-    followed = follow(scene(recording, turn_deg=0.3)[3], recording, CELL)
-    (told,) = followed.drift.findings
-    assert "across the belt: recheck heading_deg" in told
-    assert float(told.split("(")[1].split()[0]) == pytest.approx(0.3, abs=0.05)
-
-
-@pytest.mark.parametrize("delay_s", [0.006, -0.006])
-def test_late_time_stamps_are_named(delay_s):
-    recording = stop_and_go(5)
-    followed = follow(scene(recording, parts=100, delay_s=delay_s)[3], recording, CELL)
-    assert followed.drift.delay_s == pytest.approx(delay_s, abs=0.0015)
-    told = [one for one in followed.drift.findings if "time stamps" in one]
-    assert len(told) == 1
-    assert ("after" if delay_s > 0 else "before") in told[0]
-
-
-@pytest.mark.parametrize("seed", range(8))
-def test_sound_sightings_drift_nowhere(seed):
-    recording = stop_and_go(seed)
-    drift = follow(scene(recording, noise_mm=0.3, seed=seed)[3], recording, CELL).drift
-    assert drift.findings == ()
-    assert abs(drift.along_mm) < 5 * drift.along_error_mm
-    assert abs(drift.across_mm) < 5 * drift.across_error_mm
