@@ -1,6 +1,6 @@
 """Picks and parts as tables, with a way to each on the desk."""
 
-import numpy as np
+from collections.abc import Sequence
 
 from pipeline.page.glyphs import named
 from pipeline.page.head import words
@@ -12,7 +12,7 @@ from pipeline.tables import degrees
 ELBOW = ("right", "left")
 
 
-def table(caption: str, head: list[tuple[str, bool]], rows: list[list[Child]], name: str) -> Markup:
+def table(caption: str, head: Sequence[tuple[str, bool]], rows: Sequence[Sequence[Child]], name: str) -> Markup:
     """A table; head: names, and whether the column holds numbers."""
     heads = tag("tr", *(tag("th", tag("span", text), scope="col", class_="number" if number else None)
                         for text, number in head))
@@ -20,6 +20,15 @@ def table(caption: str, head: list[tuple[str, bool]], rows: list[list[Child]], n
                         for cell, (_, number) in zip(row, head, strict=True))) for row in rows]
     whole = tag("table", tag("caption", caption), tag("thead", heads), tag("tbody", *body), class_="listing", id_=name)
     return tag("div", whole, class_="scroll", tabindex=0, role="region", aria_label=caption)
+
+
+def plain_table(caption: str, head: Sequence[tuple[str, bool]], rows: Sequence[Sequence[Child]]) -> Markup:
+    """A small table that needs no sorting; the first column names its rows."""
+    heads = tag("tr", *(tag("th", text, scope="col", class_="number" if number else None) for text, number in head))
+    body = [tag("tr", tag("th", row[0], scope="row"), *(tag("td", cell, class_="number" if number else None)
+                        for cell, (_, number) in zip(row[1:], head[1:], strict=True))) for row in rows]  # fmt: skip
+    whole = tag("table", tag("caption", caption), tag("thead", heads), tag("tbody", *body), class_="plain")
+    return tag("div", whole, class_="scroll short")
 
 
 def picks(subject: Subject) -> Markup:
@@ -57,8 +66,3 @@ def parts(subject: Subject) -> Markup:
     note = tag("p", "x₀, y₀ and yaw are the grip frame's pose at belt counts 0; ± is the predicted standard deviation "
                     "of one coordinate.", class_="note")
     return joined(table("Parts, in the order they were first seen", head, rows, "parts"), note)
-
-
-def finite(value: float, digits: int = 2) -> str:
-    """A number, or a dash where there is none."""
-    return f"{value:.{digits}f}" if np.isfinite(value) else "-"

@@ -46,8 +46,8 @@ def _reason(subject: Subject, reason: str, missed: list[int], most: int) -> Mark
     cases = tag("details", tag("summary", f"All {len(missed)}, for instance {told}" if len(missed) > 1 else told),
                 tag("ul", *(_case(subject, k) for k in missed), class_="cases"))
     help_ = tag("span", "What may help: ", remedy, class_="remedy") if remedy else None
-    return tag("article", tag("h3", tag("b", len(missed)), " ", words(reason)), bar, tag("p", meaning, " ", help_), cases,
-               class_="reason")
+    title = tag("h3", tag("b", len(missed)), " ", words(reason))
+    return tag("article", title, bar, tag("p", meaning, " ", help_), cases, class_="reason")
 
 
 def _instance(subject: Subject, k: int) -> str:

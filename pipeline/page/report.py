@@ -6,14 +6,14 @@ from importlib.resources import files
 from pathlib import Path
 from typing import Any
 
-from pipeline.page import cautions, head, listings, misses
+from pipeline.page import accuracy, cautions, desk, head, listings, measures, misses
 from pipeline.page.markup import Markup, joined, tag
 from pipeline.page.subject import Subject
 from pipeline.replay import Run, Setting
 from pipeline.study import Seen
 
-STYLES = ("page.css",)
-SCRIPTS: tuple[str, ...] = ()
+STYLES = ("page.css", "desk.css")
+SCRIPTS = ("data.js", "canvas.js", "above.js", "camera.js", "timeline.js", "desk.js", "lists.js")
 
 
 def write_page(path: Path, seen: Seen, setting: Setting, run: Run, figures: dict[str, Any]) -> None:
@@ -24,14 +24,20 @@ def write_page(path: Path, seen: Seen, setting: Setting, run: Run, figures: dict
 def page_of(subject: Subject) -> str:
     """The report as HTML."""
     sections = [
+        ("desk", "The run, moment by moment", desk.desk(subject)),
         ("misses", "Why parts were missed", misses.misses(subject)),
+        ("pace", "Throughput over time", measures.pace(subject)),
+        ("choices", "How good the decisions were", measures.choices(subject)),
+        ("cycle", "Where the time of a cycle goes", measures.cycle(subject)),
+        ("joints", "Joints against their limits", measures.joints(subject)),
+        ("accuracy", "How well places are known", accuracy.accuracy(subject)),
         ("lists", "Picks", listings.picks(subject)),
         ("all-parts", "Parts", listings.parts(subject)),
         ("cell", "The cell file", cautions.cell_file(subject)),
         ("cautions", "Cautions", cautions.cautions()),
     ]
     main = [tag("section", tag("h2", title, id_=f"{name}-title"), content, id_=name, aria_labelledby=f"{name}-title")
-            for name, title, content in sections]  # fmt: skip
+            for name, title, content in sections if content is not None]  # fmt: skip
     style, script = _kept(STYLES), _kept(SCRIPTS)
     name = subject.setting.cell.name or "cell"
     top = tag("head", tag("meta", charset="utf-8"), tag("meta", http_equiv="Content-Security-Policy",
