@@ -16,7 +16,7 @@ from cameras.find import Finder, PartFinder, TaughtPart
 from cameras.model import load_model
 from cameras.recording import Recording
 from cameras.sightings import Sightings
-from pipeline.app.shown import written_whole
+from cameras.written import written_whole
 from pipeline.cell import Cell
 
 FloatArray = NDArray[np.float64]

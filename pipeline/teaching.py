@@ -63,7 +63,11 @@ def remarks(cell: Cell, model: Model) -> list[str]:
     for name, other in cell.parts.items():
         if name == model.part or not other.model or not cell.beside(other.model).exists():
             continue
-        known = load_model(cell.beside(other.model))
+        try:
+            known = load_model(cell.beside(other.model))
+        except InputFault as fault:
+            lines.append(f"warning: {printable(name)} was not compared: {fault.fault}")
+            continue
         for outline in (known.outline_mm, known.outline_mm * np.array([1.0, -1.0])):
             if alike_under_turn(model.outline_mm, outline):
                 lines.append(f"warning: its outline is hard to tell from that of {printable(name)}")

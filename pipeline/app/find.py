@@ -5,7 +5,8 @@ from typing import Annotated
 
 import typer
 
-from pipeline.app.shown import progress, show_table, written_whole
+from cameras.written import written_whole
+from pipeline.app.shown import progress, show_table
 
 
 def register(app: typer.Typer) -> None:
@@ -30,10 +31,10 @@ def teach(
     from cameras.image import read_image
     from cameras.teach import Taught
     from cameras.teach import teach as taught_model
+    from pipeline.cell import load_cell
     from pipeline.finding import calibration_of
     from pipeline.teaching import part_of, pose_when_seen, remarks
     from pipeline.teaching import picture as model_picture
-    from pipeline.cell import load_cell
 
     whole = load_cell(cell)
     kind = part_of(whole, part)
@@ -59,8 +60,8 @@ def find(
     import numpy as np
 
     from cameras.recording import read_recording
-    from pipeline.finding import found_in, write_detections, write_overlays
     from pipeline.cell import load_cell
+    from pipeline.finding import found_in, write_detections, write_overlays
 
     whole = load_cell(cell)
     modulus = whole.belt.counts_modulus if whole.belt else None
