@@ -45,10 +45,13 @@ class Touches:
     travel_mm: FloatArray
 
 
-def read_touches(path: str | Path, belt: Carriage | None = None, camera: str = "") -> Touches:
+def read_touches(
+    path: str | Path, belt: Carriage | None = None, camera: str = "", image_size_px: tuple[int, int] | None = None
+) -> Touches:
     """Read a touches file; with `camera` only the rows of that camera, where the file has such a column.
 
-    Raises InputFault for a file that will not do, and for touches after the belt moved where there is no belt.
+    Raises InputFault for a file that will not do, pixels outside the image where its size is given, and touches after
+    the belt moved where there is no belt.
     """
     path = Path(path)
     table = read_columns(path, _COLUMNS, {"camera": str})
@@ -66,6 +69,13 @@ def read_touches(path: str | Path, belt: Carriage | None = None, camera: str = "
         if (np.abs(values) > _FARTHEST).any():
             at = int(np.argmax(np.abs(values) > _FARTHEST))
             raise InputFault(path, f"line {line[at]}, {name}", f"{values[at]:g} is out of all bounds", "correct it")
+    pixels = np.column_stack([numbers["u_px"], numbers["v_px"]])
+    if image_size_px is not None:
+        outside = ((pixels < -0.5) | (pixels > np.array(image_size_px) - 0.5)).any(axis=1)
+        if outside.any():
+            at, (width, height) = int(np.argmax(outside)), image_size_px
+            raise InputFault(path, f"line {line[at]}", f"the pixel lies outside an image of {width} x {height}",
+                             "correct it, or give the lens file of this camera")
     points = np.column_stack([numbers["x_mm"], numbers["y_mm"], numbers["z_mm"]])
     travel = np.zeros(len(line))
     if belt is not None:
@@ -76,4 +86,4 @@ def read_touches(path: str | Path, belt: Carriage | None = None, camera: str = "
         at = int(np.argmax(seen != touched))
         raise InputFault(path, f"line {line[at]}, touch_counts", "differs from counts, but the cell has no belt",
                          "add [belt] to the cell, or make them equal")
-    return Touches(line, np.column_stack([numbers["u_px"], numbers["v_px"]]), points, travel)
+    return Touches(line, pixels, points, travel)

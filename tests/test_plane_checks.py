@@ -140,6 +140,15 @@ def test_cameras_are_told_apart(tmp_path):
         read_touches(file, camera="c")
 
 
+def test_a_pixel_outside_the_image_names_its_row(tmp_path):
+    """Such touches are of another camera, or at another image size."""
+    file = written(tmp_path / "t.csv", [(10, 20, 0, 300, 50, -5, 0), (1024, 20, 0, 300, 50, -5, 0)])
+    assert len(read_touches(file).pixels) == 2
+    with pytest.raises(InputFault, match="outside an image of 1024 x 800") as fault:
+        read_touches(file, image_size_px=SIZE)
+    assert fault.value.place == "line 3"
+
+
 @pytest.mark.parametrize(("row", "what"), [
     ((10, 20, 1000, 300, 50, -5, 3000), "no belt"), ((1e9, 20, 0, 300, 50, -5, 0), "out of all bounds"),
     (("nan", 20, 0, 300, 50, -5, 0), "not finite"), ((10, 20, 0.5, 300, 50, -5, 0), "whole number"),
