@@ -71,6 +71,11 @@ class Legs:
         self._lifts: dict[tuple[float, float], int] = {}
         self._tables = np.zeros((0, 3, 1))
 
+    def time_lifts(self, rest_mm: float, grip_mm: float) -> None:
+        """Work out the lifts between a height of rest and one of gripping ahead of their first use."""
+        self._table(rest_mm, grip_mm)
+        self._table(grip_mm, rest_mm)
+
     def times(self, start: FloatArray, now: float, nodes: Nodes, belt: BeltState, later: bool) -> LegTimes:
         """Leg times for an arm at rest at start (4,) from now on; without `later` only those that begin now, here."""
         span = self._span(nodes, belt.speed_mm_s)

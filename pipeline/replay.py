@@ -86,6 +86,17 @@ class Setting:
         grasping = Grasping(self.cell, arm, tuple(Place.of(place) for place in self.cell.places))
         for name, value in (("belt", belt), ("mover", mover), ("grasping", grasping), ("legs", Legs(mover))):
             object.__setattr__(self, name, value)
+        self._time_lifts()
+
+    def _time_lifts(self) -> None:
+        """Work out the lifts between all heights the arm will rest at, so that no decision waits for one."""
+        grips = {self.cell.surface_mm + (part.grasp_mm if grip.grasp_mm is None else grip.grasp_mm)
+                 for part in self.cell.parts.values() for grip in self.grasping.grips(part)}
+        rests = {round(float(z), 6) for place in self.grasping.places.values() for z in place.slots_mm[:, 2]}
+        rests.add(round(float(self.mover.arm.forward(self.mover.arm.home)[2]), 6))
+        for rest in sorted(rests):
+            for grip in sorted(grips):
+                self.legs.time_lifts(rest, grip)
 
 
 def replay(setting: Setting, policy: Policy, name: str, horizon: int,

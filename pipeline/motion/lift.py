@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from pipeline.motion.curve import Curve, curves_of
 
 FloatArray = NDArray[np.float64]
-SAMPLES = 48
+SAMPLES = 40
 MM = 1000.0  # ruckig is given metres
 
 
@@ -163,7 +163,7 @@ def _last_above(curve: Curve, height: float) -> float:
 
 def _crossing(curve: Curve, height: float, rising: bool) -> float:
     """The first rise through, or last fall through, a height; the time of the apex where it is only just reached."""
-    t = np.linspace(curve.start_s[0], curve.end_s, 257)
+    t = np.linspace(curve.start_s[0], curve.end_s, 129)
     z = curve.at(t)
     above = np.flatnonzero(z >= height)
     if not len(above):
@@ -171,8 +171,19 @@ def _crossing(curve: Curve, height: float, rising: bool) -> float:
     k = int(above[0] if rising else above[-1])
     if (rising and k == 0) or (not rising and k == len(t) - 1):
         return float(t[k])
-    low, high = (t[k - 1], t[k]) if rising else (t[k + 1], t[k])
-    return _bisect(lambda x: curve.state(x)[0] - height, float(low), float(high))
+    outside, inside = (float(t[k - 1]), float(t[k])) if rising else (float(t[k + 1]), float(t[k]))
+    x = inside
+    for _ in range(60):  # Newton's steps, kept between a time below the height and one not below it
+        z, speed, _ = curve.state(x)
+        if z >= height:
+            inside = x
+        else:
+            outside = x
+        step = x - (z - height) / speed if speed else inside
+        x = step if min(outside, inside) < step < max(outside, inside) else 0.5 * (outside + inside)
+        if abs(inside - outside) < 1e-12 or (z >= height and z - height < 1e-12):
+            break
+    return inside
 
 
 def _bisect(function: Callable[[float], float], low: float, high: float) -> float:
