@@ -5,8 +5,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from cameras.faults import InputFault
 from cameras.field import Field, share_touched
-from cameras.plane import PlaneFit
+from cameras.plane import PlaneFit, fit_touches
 from cameras.plane_start import thinness
 
 FloatArray = NDArray[np.float64]
@@ -53,11 +54,8 @@ def carry_drift(fit: PlaneFit, travel_mm: FloatArray, heading_rad: float) -> Car
     return CarryDrift(float(best[0]), float(best[1]), float(errors[0]), float(errors[1]))
 
 
-def plane_warnings(fit: PlaneFit, field: Field, without_lens: PlaneFit | None = None) -> list[str]:
-    """One sentence for each thing about a fit that an integrator should mend.
-
-    without_lens: the same touches fitted without the lens file, where there is one.
-    """
+def plane_warnings(fit: PlaneFit, field: Field) -> list[str]:
+    """One sentence for each thing about a fit that an integrator should mend."""
     kept = fit.points[fit.kept]
     found = []
     if len(kept) < ENOUGH_TOUCHES:
@@ -71,12 +69,16 @@ def plane_warnings(fit: PlaneFit, field: Field, without_lens: PlaneFit | None = 
         found.append(f"the touches enclose {share:.0%} of the field: outside them the map is extrapolated")
     if np.isnan(field.points_mm).any():
         found.append("parts of the image see no point of the surface")
-    if without_lens is not None and _better(without_lens, fit):
+    if fit.map.basis == "pose" and _better_without_lens(fit):
         found.append("the touches fit better without the lens file: is it of this camera, at this size and focus?")
     return found
 
 
-def _better(one: PlaneFit, other: PlaneFit) -> bool:
-    """Whether one fit foretells touches better than another by more than chance would."""
-    first, second = one.map.leave_one_out_rms_mm, other.map.leave_one_out_rms_mm
-    return first is not None and second is not None and first < 0.7 * second
+def _better_without_lens(fit: PlaneFit) -> bool:
+    """Whether the same touches are foretold better without the lens file, by more than chance would."""
+    try:
+        bare = fit_touches(fit.pixels, fit.points, None, fit.map.image_size_px).map.leave_one_out_rms_mm
+    except InputFault:
+        return False
+    given = fit.map.leave_one_out_rms_mm
+    return given is not None and bare is not None and bare < 0.7 * given

@@ -69,15 +69,17 @@ def plane(
     whole = load_cell(cell)
     carriage = _carriage(whole)
     known = None if lens is None else load_lens(lens)
-    size = known.image_size_px if known is not None else None if image is None else read_image_size(image)[::-1]
+    size = None if known is None else known.image_size_px
+    if known is None and image is not None:
+        height, width = read_image_size(image)
+        size = width, height
     marks = read_touches(touches, carriage, camera, size)
     fit = fit_touches(marks.pixels, marks.points, known, size, touches)
     surface = field_of(fit.map, whole.surface_mm)
     higher = field_of(fit.map, whole.surface_mm + max((part.height_mm for part in whole.parts.values()), default=0.0))
     _write(out, fit.map.document(), draw_uncertainty(fit, surface), "uncertainty")
     tell_plane(fit, marks.line.tolist(), surface, higher, whole)
-    bare = None if known is None else fit_touches(marks.pixels, marks.points, None, size, touches)
-    warn(plane_warnings(fit, surface, bare))
+    warn(plane_warnings(fit, surface))
     warn([] if carriage is None else drift_line(carry_drift(fit, marks.travel_mm, carriage.heading_rad), whole))
     warn([] if known is not None else no_lens_lines(fit, surface, whole))
 
