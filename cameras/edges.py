@@ -97,46 +97,47 @@ MOST_SAMPLES = 96
 OUTSIDE = 1e9
 
 
-@njit("void(u1[:,::1], f8, f8, f8, f8, f8, f8, f8, f8[::1], f8[::1])", cache=True)
-def edge_along(image, u, v, nu, nv, reach, least, sign, profile, found):  # type: ignore[no-untyped-def]
+@njit("void(u1[:,::1], f8, f8, f8, f8, f8, f8, f8, b1, f8[::1], f8[::1])", cache=True)
+def edge_along(image, u, v, nu, nv, reach, least, sign, fine, profile, found):  # type: ignore[no-untyped-def]
     """Place of the edge that crosses the normal (nu, nv) near (u, v): found[0] pixels along it, found[1] its step.
 
-    The profile, averaged over three pixels across, is differenced over two; the best peak is its strength less half
-    for one at the end of the reach, less 0.4 for one of the other sign; a parabola gives its top.
+    The profile is differenced over two pixels; the best peak is its strength less half for one at the end of the reach,
+    less 0.4 for one of the other sign; a parabola gives its top. A fine profile has two samples a pixel, each averaged
+    over three pixels across; one that is not has one sample a pixel.
     found[1] is 0 where no step of `least` grey levels is in reach; found[0] is OUTSIDE where the profile leaves the image.
     """
-    found[0] = 0.0
-    found[1] = 0.0
-    side = int(np.ceil(reach * 2.0)) + 3
+    found[0], found[1] = 0.0, 0.0
+    d = 2 if fine else 1
+    side = int(np.ceil(reach * d)) + d + 1
     n = 2 * side + 1
-    far = 0.5 * side + 1.5
+    far = side / d + 1.5
     if n > profile.shape[0] or not (far < u < image.shape[1] - 2 - far and far < v < image.shape[0] - 2 - far):
         found[0] = OUTSIDE
         return
     for k in range(n):
-        s = 0.5 * (k - side)
+        s = (k - side) / d
         x, y = u + s * nu, v + s * nv
-        profile[k] = 0.25 * (_at(image, x - nv, y + nu) + _at(image, x + nv, y - nu)) + 0.5 * _at(image, x, y)
-    best = 0.0
-    at = -1
-    for k in range(3, n - 3):
-        here = profile[k + 2] - profile[k - 2]
+        profile[k] = _at(image, x, y)
+        if fine:
+            profile[k] = 0.25 * (_at(image, x - nv, y + nu) + _at(image, x + nv, y - nu)) + 0.5 * profile[k]
+    best, at = 0.0, -1
+    for k in range(d + 1, n - d - 1):
+        here = profile[k + d] - profile[k - d]
         size = abs(here)
         if size < least:
             continue
-        if size < abs(profile[k + 1] - profile[k - 3]) or size < abs(profile[k + 3] - profile[k - 1]):
+        if size < abs(profile[k + d - 1] - profile[k - d - 1]) or size < abs(profile[k + d + 1] - profile[k - d + 1]):
             continue
-        s = 0.5 * (k - side)
-        worth = size * (1.0 - 0.5 * abs(s) / reach)
+        worth = size * (1.0 - 0.5 * abs(k - side) / (d * reach))
         if here * sign < 0.0:
             worth *= 0.6
         if worth > best:
             best, at = worth, k
     if at < 0:
         return
-    before, here, after = (abs(profile[at + 1] - profile[at - 3]), abs(profile[at + 2] - profile[at - 2]),
-                           abs(profile[at + 3] - profile[at - 1]))  # fmt: skip
-    curve = before - 2.0 * here + after
+    here = profile[at + d] - profile[at - d]
+    before, after = abs(profile[at + d - 1] - profile[at - d - 1]), abs(profile[at + d + 1] - profile[at - d + 1])
+    curve = before - 2.0 * abs(here) + after
     shift = 0.0 if curve >= 0.0 else 0.5 * (before - after) / curve
-    found[0] = 0.5 * (at - side + min(max(shift, -1.0), 1.0))
-    found[1] = profile[at + 2] - profile[at - 2]
+    found[0] = (at - side + min(max(shift, -1.0), 1.0)) / d
+    found[1] = here

@@ -24,6 +24,7 @@ Grey = NDArray[np.uint8]
 
 DEFAULT_SCORE = 0.7
 MOST_PEAKS = 40
+DEPTH_SHARE = 0.35  # of the depth of a part, what the patch under its middle has at the least
 SLACK_CELLS, BEYOND_CELLS = 3, 24
 TRIED_ON_ONE, TRIED_ON_MORE = 6, 5
 PROMISING = 0.4
@@ -60,6 +61,7 @@ class _Kind:
     template: Template
     coarse: FloatArray
     anchor: FloatArray
+    depth_mm: float
     model: Model
     first_rad: float
     steps: int
@@ -128,11 +130,13 @@ class PartFinder:
         centre_px = CELL_PX * 0.5 * (box[:2] + box[2:]) + 0.5 * (CELL_PX - 1)
         place = int(views.nearest(camera.to_cell(centre_px[None], self.surface_mm))[0])
         affine = np.ascontiguousarray(views.coefficients[place][:, 1:3]) / CELL_PX
+        scale = float(np.sqrt(abs(np.linalg.det(affine))))
         rough = []
         for number, kind in enumerate(self.kinds):
             room = room_for(bounds, kind.steps)
-            placements(edges.own, edges.near, blobs.label, patch + 1, kind.coarse, affine, kind.anchor, kind.first_rad,
-                       kind.steps, kind.step_rad, bounds, room)  # fmt: skip
+            deep = DEPTH_SHARE * kind.depth_mm * scale
+            placements(edges.own, edges.near, blobs.label, blobs.depth, patch + 1, kind.coarse, affine, kind.anchor, deep,
+                       kind.first_rad, kind.steps, kind.step_rad, bounds, room)  # fmt: skip
             found = peaks(room)[:MOST_PEAKS]
             rough.append(np.column_stack([found, np.full(len(found), float(number))]))
         every = np.concatenate(rough)
@@ -211,19 +215,19 @@ def _kind(part: TaughtPart, down: bool) -> _Kind:
     template = template_of(part.model, down)
     period = 2.0 * np.pi / max(part.turns, 1)
     steps = 1 if part.turns == 0 else max(int(round(period / TURN_STEP_RAD)), 1)
-    return _Kind(part.name, down, template, coarse_points(template.points), _anchor(template.outline), part.model,
+    return _Kind(part.name, down, template, coarse_points(template.points), *_deepest(template.outline), part.model,
                  part.model.yaw_rad if part.turns == 0 else 0.0, steps,                 period / steps)  # fmt: skip
 
 
-def _anchor(outline: FloatArray) -> FloatArray:
-    """The point deepest inside a polygon."""
+def _deepest(outline: FloatArray) -> tuple[FloatArray, float]:
+    """The point (2,) deepest inside a polygon, and how deep it lies."""
     low = outline.min(axis=0)
     scale = 120.0 / max(float(np.ptp(outline, axis=0).max()), 1e-6)
     mask = np.zeros((130, 130), np.uint8)
     cv2.fillPoly(mask, [np.round((outline - low) * scale + 4).astype(np.int32)], 1)
     depth = cv2.distanceTransform(mask, cv2.DIST_L2, 5)
     v, u = np.unravel_index(int(np.argmax(depth)), depth.shape)
-    return np.asarray((np.array([u, v], float) - 4) / scale + low)
+    return np.asarray((np.array([u, v], float) - 4) / scale + low), float(depth[v, u]) / scale
 
 
 def _has_rim(outline: NDArray[np.int64], edges: EdgeMap) -> bool:

@@ -97,7 +97,7 @@ def _step(image, view, points, taught, pose, heights, prior, reach, least, strid
         nu, nv = tv / length, -tu / length
         if nu * (local[0, 0] * nx + local[0, 1] * ny) + nv * (local[1, 0] * nx + local[1, 1] * ny) < 0.0:
             nu, nv = -nu, -nv
-        edge_along(image, u, v, nu, nv, reach, least, points[k, 4], profile, found)
+        edge_along(image, u, v, nu, nv, reach, least, points[k, 4], stride == 1, profile, found)
         out[k, 0], out[k, 1] = found[0], found[1]
         out[k, 2], out[k, 3] = 0.0, 0.0 if found[0] == OUTSIDE else 1.0
         inside += int(out[k, 3])

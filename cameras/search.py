@@ -12,8 +12,7 @@ FloatArray = NDArray[np.float64]
 
 TURN_STEP_RAD = np.radians(6.0)
 LEAST_MISSED = 0.35
-GLANCE = 14  # points looked at first
-GLANCE_LEAST = 7
+MISSED_AT_FIRST = 3.0
 LEVEL = 0.03  # scores this close make a plateau
 BLOCK_CELLS = 3
 TURN_BINS = 6
@@ -33,20 +32,34 @@ def coarse_points(points: FloatArray, spacing_mm: float = 2.0) -> FloatArray:
 
 def peaks(blocks: FloatArray) -> FloatArray:
     """Of the best placements (rows, columns, bins, 5) of blocks those no neighbour beats: (n, 5), best first."""
-    score = blocks[..., 0]
-    wide = np.pad(score, 1, constant_values=-1.0)
-    if score.shape[2] > 2:
-        wide[..., 0], wide[..., -1] = wide[..., -2], wide[..., 1]  # turns close on themselves
-    best = np.full_like(score, -1.0)
-    for j in range(3):
-        for i in range(3):
-            for k in range(3):
-                if (j, i, k) != (1, 1, 1):
-                    part = wide[j : j + score.shape[0], i : i + score.shape[1], k : k + score.shape[2]]
-                    earlier = (j, i, k) < (1, 1, 1)
-                    np.maximum(best, part if earlier else part - 1e-9, out=best)
-    found = blocks[(score > 0.0) & (score > best)]
+    kept = np.empty((blocks.shape[0] * blocks.shape[1] * blocks.shape[2], 5))
+    found = kept[: _peaks(blocks, kept)]
     return np.asarray(found[np.argsort(-found[:, 0], kind="stable")])
+
+
+@njit("i8(f8[:,:,:,::1], f8[:,::1])", cache=True)
+def _peaks(blocks, kept):  # type: ignore[no-untyped-def]
+    rows, columns, bins, _ = blocks.shape
+    count = 0
+    for j in range(rows):
+        for i in range(columns):
+            for k in range(bins):
+                score = blocks[j, i, k, 0]
+                if score <= 0.0:
+                    continue
+                beaten = False
+                for m in range(27):
+                    dj, di, dk = m // 9 - 1, m // 3 % 3 - 1, m % 3 - 1
+                    if m == 13 or not (0 <= j + dj < rows and 0 <= i + di < columns) or (dk != 0 and bins < 3):
+                        continue
+                    other = blocks[j + dj, i + di, (k + dk) % bins, 0]  # turns close on themselves
+                    if other > score or (other == score and m < 13):
+                        beaten = True
+                        break
+                if not beaten:
+                    kept[count] = blocks[j, i, k]
+                    count += 1
+    return count
 
 
 @njit("void(f8[:,::1], f8[:,::1], f8, i8[::1], i8[::1], u1[::1], f8[::1])", cache=True)
@@ -68,21 +81,53 @@ def _turned(points, affine, angle, du, dv, mask, reach):  # type: ignore[no-unty
         reach[2], reach[3] = max(reach[2], u), max(reach[3], v)
 
 
-@njit("void(u1[:,::1], u1[:,::1], i4[:,::1], i8, f8[:,::1], f8[:,::1], f8[::1], f8, i8, f8, i8[::1], f8[:,:,:,::1])", cache=True)
-def placements(own, near, label, patch, points, affine, anchor, first, turns, step, box, blocks):  # type: ignore[no-untyped-def]
+@njit("f8(u1[:,::1], u1[:,::1], i8[::1], i8[::1], u1[::1], i8, i8, b1)", cache=True, inline="always")
+def _score(own, near, du, dv, mask, j, i, glance):  # type: ignore[no-untyped-def]
+    """Score of one placement, 0 where too many points are missed; with `glance` only whether to look closer (1 or 0)."""
+    rows, columns = near.shape
+    missed, exact, outside, n = 0, 0, 0, mask.shape[0]
+    for k in range(n):
+        r, c = j + dv[k], i + du[k]
+        if r < 0 or c < 0 or r >= rows or c >= columns:
+            outside += 1
+        elif near[r, c] & mask[k] == 0:
+            missed += 1
+            if missed > LEAST_MISSED * k + MISSED_AT_FIRST:
+                return 0.0
+        elif own[r, c] & mask[k] != 0:
+            exact += 1
+    if missed > LEAST_MISSED * (n - outside) + (MISSED_AT_FIRST if glance else 0.0) or 2 * outside > n:
+        return 0.0
+    return 0.5 * (n - outside - missed + exact) / (n - outside)
+
+
+@njit("void(f8[::1], f8, i8, i8, f8, f8)", cache=True, inline="always")
+def _noted(best, score, j, i, angle, step):  # type: ignore[no-untyped-def]
+    """Take a placement for the best of its block, or, nearly as good, move the best to the middle of the plateau."""
+    if score > best[0] - LEVEL and score <= best[0] + LEVEL and abs(angle - best[3]) < 1.5 * step + 1e-9:
+        best[4] += 1.0
+        best[0] = max(score, best[0])
+        best[1] += (i - best[1]) / best[4]
+        best[2] += (j - best[2]) / best[4]
+        best[3] += (angle - best[3]) / best[4]
+    elif score > best[0]:
+        best[0], best[1], best[2], best[3], best[4] = score, i, j, angle, 1.0
+
+
+@njit("void(u1[:,::1], u1[:,::1], i4[:,::1], f4[:,::1], i8, f8[:,::1], f8[:,::1], f8[::1], f8, f8, i8, f8, i8[::1], f8[:,:,:,::1])", cache=True)
+def placements(own, near, label, depth, patch, points, affine, anchor, deep, first, turns, step, box, blocks):  # type: ignore[no-untyped-def]
     """Best placement in each block of cells over one patch, and in each bin of turns: blocks (rows, columns, bins, 5).
 
     Each: score (mean of the shares of points met within a cell and exactly; 0: none), column, row, turn in radians,
     and how many placements were nearly as good and were averaged.
-    affine (2, 2): cells per millimetre.  anchor (2,): a point well inside the outline, which must lie on the patch.
-    box: first and last column and row of where a placement may reach; what lies outside the image counts neither way.
-    first, step: turns in radians.
+    affine (2, 2): cells per millimetre.  anchor (2,): a point well inside the outline, which must lie on the patch, by
+    its `depth` (cells to the nearest bare belt) at least `deep`.  box: first and last column and row of where a
+    placement may reach; what lies outside the image counts neither way.  first, step: turns in radians.
     """
     rows, columns = near.shape
     n = points.shape[0]
     du, dv, mask, reach = np.empty(n, np.int64), np.empty(n, np.int64), np.empty(n, np.uint8), np.empty(4)
     blocks[:, :, :, 0] = 0.0
-    allowed = int(n * LEAST_MISSED)
     for turn in range(turns):
         angle = first + turn * step
         _turned(points, affine, angle, du, dv, mask, reach)
@@ -93,39 +138,19 @@ def placements(own, near, label, patch, points, affine, anchor, first, turns, st
         from_u, from_v = int(np.ceil(box[0] - reach[0])), int(np.ceil(box[1] - reach[1]))
         to_u, to_v = int(np.floor(box[2] - reach[2])), int(np.floor(box[3] - reach[3]))
         part = int(turn * blocks.shape[2] / turns)
-        for j in range(max(from_v, -av), min(to_v, rows - 1 - av) + 1):
-            for i in range(max(from_u, -au), min(to_u, columns - 1 - au) + 1):
-                if label[j + av, i + au] != patch:
+        for j in range(max(from_v, -av), min(to_v, rows - 1 - av) + 1, 2):
+            for i in range(max(from_u, -au), min(to_u, columns - 1 - au) + 1, 2):
+                if label[j + av, i + au] != patch or depth[j + av, i + au] < deep:
                     continue
-                missed, exact, outside = 0, 0, 0
-                for k in range(n):
-                    r, c = j + dv[k], i + du[k]
-                    if r < 0 or c < 0 or r >= rows or c >= columns:
-                        outside += 1
-                    elif near[r, c] & mask[k] == 0:
-                        missed += 1
-                        if missed > allowed or (k < GLANCE and missed > GLANCE - GLANCE_LEAST):
-                            missed = n
-                            break
-                    elif own[r, c] & mask[k] != 0:
-                        exact += 1
-                if missed > LEAST_MISSED * (n - outside) or 2 * outside > n:
+                if _score(own, near, du, dv, mask, j, i, True) == 0.0:
                     continue
-                score = 0.5 * (n - outside - missed + exact) / (n - outside)
-                bj = min(max((j - box[1]) // BLOCK_CELLS + 8, 0), blocks.shape[0] - 1)
-                bi = min(max((i - box[0]) // BLOCK_CELLS + 8, 0), blocks.shape[1] - 1)
-                best = blocks[bj, bi, part]
-                if score > best[0] + LEVEL:
-                    best[0], best[1], best[2], best[3], best[4] = score, i, j, angle, 1.0
-                elif score > best[0] - LEVEL and abs(angle - best[3]) < 1.5 * step + 1e-9:
-                    # nearly as good: the placement moves to the middle of the plateau
-                    best[4] += 1.0
-                    best[0] = max(score, best[0])
-                    best[1] += (i - best[1]) / best[4]
-                    best[2] += (j - best[2]) / best[4]
-                    best[3] += (angle - best[3]) / best[4]
-                elif score > best[0]:
-                    best[0], best[1], best[2], best[3], best[4] = score, i, j, angle, 1.0
+                for dj in range(2):
+                    for di in range(2):
+                        score = _score(own, near, du, dv, mask, j + dj, i + di, False)
+                        if score > 0.0:
+                            bj = min(max((j + dj - box[1]) // BLOCK_CELLS + 8, 0), blocks.shape[0] - 1)
+                            bi = min(max((i + di - box[0]) // BLOCK_CELLS + 8, 0), blocks.shape[1] - 1)
+                            _noted(blocks[bj, bi, part], score, j + dj, i + di, angle, step)
 
 
 def room_for(box: NDArray[np.int64], turns: int) -> FloatArray:

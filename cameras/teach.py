@@ -147,7 +147,7 @@ def snapped(grey: Grey, chain: FloatArray) -> tuple[FloatArray, FloatArray]:
         normals = outward(points)
         moved = np.zeros((len(points), 2))
         for k, ((u, v), (nu, nv)) in enumerate(zip(points, normals, strict=True)):
-            edge_along(grey, u, v, nu, nv, reach, 3.0, 0.0, profile, found)
+            edge_along(grey, u, v, nu, nv, reach, 3.0, 0.0, True, profile, found)
             moved[k] = found
         seen = moved[:, 1] != 0.0
         if seen.sum() < 8:
@@ -218,7 +218,7 @@ def _sharp(grey: Grey, pixels: NDArray[np.int64], dx: NDArray[np.int16], dy: NDA
         if length == 0.0:
             continue
         nu, nv = gu / length, gv / length
-        edge_along(grey, u, v, nu, nv, 1.5, 5.0, 0.0, profile, found)
+        edge_along(grey, u, v, nu, nv, 1.5, 5.0, 0.0, True, profile, found)
         if found[1] != 0.0:
             rows.append((u + found[0] * nu, v + found[0] * nv, nu, nv, found[1]))
     return np.array(rows).reshape(-1, 5)
