@@ -27,7 +27,8 @@ MOST_PEAKS = 40
 DEPTH_SHARE = 0.35  # of the depth of a part, what the patch under its middle has at the least
 SLACK_CELLS, BEYOND_CELLS = 3, 24
 TRIED_ON_ONE, TRIED_ON_MORE = 6, 5
-PROMISING = 0.4
+LEAST_ROUGH = 0.64  # score of a rough placement worth fitting
+PROMISING = 0.45
 SETTLED = 0.92
 STEP_SHARE = 0.12  # of the edge map's threshold: the least step of grey levels that the fit takes for an edge
 OVERLAP = 0.2
@@ -144,8 +145,8 @@ class PartFinder:
         most = TRIED_ON_ONE + TRIED_ON_MORE * int(blobs.cells[patch] / self.least_cells)
         placed: list[_Placed] = []
         tried = 0
-        for _, u, v, yaw, _, number in every:
-            if tried >= most:
+        for score, u, v, yaw, _, number in every:
+            if tried >= most or score < LEAST_ROUGH:
                 break
             kind = self.kinds[int(number)]
             if any(one.explains(u, v, yaw, kind, affine) for one in placed):
