@@ -79,8 +79,8 @@ def tell_plane(fit: PlaneFit, lines_of_file: Sequence[int], surface: Field, high
     worst = [int(k) for k in np.argsort(-size) if not fit.kept[k]]
     worst += [int(k) for k in np.argsort(-size) if fit.kept[k]][:_WORST]
     rows = [(lines_of_file[k], f"{size[k]:.3f}", *(f"{d:+.3f}" for d in fit.residuals_mm[k]), _most(left[k : k + 1]),
-             "" if fit.kept[k] else "LEFT OUT: touch it again") for k in worst]
-    show_table("Worst touches", ("line", "residual mm", "dx mm", "dy mm", "left-out residual mm", ""), rows)
+             "" if fit.kept[k] else "LEFT OUT") for k in worst]
+    show_table("Worst touches", ("line", "residual mm", "dx mm", "dy mm", "left-out mm", ""), rows)
     _tell_uncertainty(surface, higher)
     if cell.parts and found.maps_height:
         offs = {name: parallax_mm(found, surface, part.height_mm) for name, part in cell.parts.items()}
@@ -149,7 +149,7 @@ def tell_belt(scale: BeltScale, lines_of_file: Sequence[int], cell: Cell | None,
     order = sorted(range(len(off)), key=lambda k: (bool(scale.kept[k]), -off[k]))
     show_table("Worst touches", ("line", "along mm", "across mm", ""),
                [(lines_of_file[k], f"{scale.along_mm[k]:+.3f}", f"{scale.across_mm[k]:+.3f}",
-                 "" if scale.kept[k] else "LEFT OUT: touch it again")
+                 "" if scale.kept[k] else "LEFT OUT")
                 for k in order[: _WORST + int((~scale.kept).sum())]])  # fmt: skip
     warn(_belt_warnings(scale, cell, carry))
 
