@@ -200,6 +200,12 @@ def _carry(
     return grasp_s + total + release_s
 
 
+@njit("boolean(float64[::1], int64, float64, boolean)", cache=True)
+def _past(t_at: FloatArray, k: int, start: float, still: bool) -> bool:
+    """Whether a part has passed point k and the next one too before any leg can begin."""
+    return not still and k + 1 < len(t_at) and t_at[k + 1] < start
+
+
 @njit(
     "void(float64[:, ::1], int64[:, ::1], float64[:, :, ::1], float64[:, :, ::1], boolean[:, ::1], float64[:, ::1], "
     "float64[:, ::1], int64[::1], float64[::1], float64[::1], float64[:, :, ::1], float64[:, ::1], float64, float64, "
@@ -219,14 +225,14 @@ def _leg_times(
     for b in range(g):
         for k in range(m):
             carry[k] = np.inf
-            if usable[b, k]:
+            if usable[b, k] and not _past(t_at[b], k, start_s[0], still):
                 carry[k] = _carry(lane[b], speed[b], usable[b], t_at[b], slot[b], t_at[b, k], tables[back[b]], limits,
                                   grasp_s, release_s, singular)
         for a in range(len(starts)):
             table = tables[out[a, b]]
             for k in range(m):
                 departs[k] = arrives[k] = np.nan
-                if usable[b, k]:
+                if usable[b, k] and not _past(t_at[b], k, start_s[0], still):
                     across = _across(starts[a], lane[b, k], speed[b, k], limits, singular)
                     rise, total = _lift_times(table, across)
                     departs[k] = t_at[b, k] - across - rise

@@ -6,6 +6,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pipeline.arm import TURN, Arm
+from pipeline.cell import Cell
+from pipeline.motion.across import Across, at_rest
+from pipeline.motion.cycle import lift_limits
+from pipeline.motion.lift import Lift
 from pipeline.move_time import move_time
 
 Floats = NDArray[np.float64]
@@ -21,6 +25,22 @@ class TradeCycle:
     out_mm: float  # from J1 to the line
     corners: Floats  # (4, 4) joints: down and up at one end, up and down at the other
     sequence_s: float  # there and back, each of the six moves from rest to rest
+
+
+def overlapped_s(cell: Cell, arm: Arm, cycle: TradeCycle) -> float:
+    """The same cycle, there and back, with the tip going over the upper corners without stopping at them.
+
+    It moves sideways only at the upper corners' height or above, and rests only at the lower ones.
+    """
+    heights = arm.forward(cycle.corners)[:, 2]
+    across = Across(arm, 0.0)
+    total = 0.0
+    for start, end in ((0, 3), (3, 0)):
+        way = across.between(at_rest(cycle.corners[start]), at_rest(cycle.corners[end]))
+        top = float(heights[start]) + LIFT_MM
+        lift = Lift(float(heights[start]), float(heights[end]), top, top, top, lift_limits(cell, arm))
+        total += lift.total_s(way.duration)
+    return total
 
 
 def trade_cycle(arm: Arm) -> TradeCycle | None:

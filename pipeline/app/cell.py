@@ -69,7 +69,12 @@ def _fitted(cell: "Cell", moves: Path | None) -> list[tuple[str, str]]:
 
 def _cycle(cell: "Cell") -> str:
     from pipeline.arm import Arm
-    from pipeline.trade_cycle import trade_cycle
+    from pipeline.trade_cycle import overlapped_s, trade_cycle
 
-    found = trade_cycle(Arm(cell.arm, cell.tool))
-    return "this arm can't do it" if found is None else f"{found.sequence_s:.3f} s, one move after the other"
+    arm = Arm(cell.arm, cell.tool)
+    found = trade_cycle(arm)
+    if found is None:
+        return "this arm can't do it"
+    overlapped = overlapped_s(cell, arm, found)
+    saved = 100 * (1 - overlapped / found.sequence_s)
+    return f"{overlapped:.3f} s, {found.sequence_s:.3f} s without overlap ({saved:.0f} % saved)"
