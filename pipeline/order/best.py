@@ -15,8 +15,8 @@ from pipeline.order.tour import improve_round
 
 QUICK = 1000  # labels of each size a first search may keep
 SMALL = 14  # items for which the exact search needs no limit
-LABELS = 600_000  # of larger ones: what the exact search may keep, over all sizes
-KICKS, ROUNDS = 300_000, 1_200_000  # over the number of items: how long is improved
+LABELS = 300_000  # of larger ones: what the exact search may keep, over all sizes
+KICKS, ROUNDS = 300_000, 2_000_000  # over the number of items: how long is improved
 BEATS = 8  # between which the clock is looked at
 SAME = 1e-9
 
@@ -112,7 +112,7 @@ def _solved(task: Task, seed: int, until: float) -> _Best:
         best, floor, searched = _searched(task, best, QUICK, until)
     if not searched and not alone:
         best = _improved(task, best, floor, 1, seed, until)
-    if not searched and n <= MOST_ITEMS:
+    if not searched and not best.proven and n <= MOST_ITEMS:
         best, floor, searched = _searched(task, best, (1 << 16) if n <= SMALL else LABELS // n, until)
     if not searched:
         floor = max(floor, whole_bound(task, best.value)) if best.whole else 0.0
@@ -150,20 +150,22 @@ def _nearest_next(cost: FloatArray) -> IntArray:
 
 
 def _improved(task: Task, best: _Best, target: float, beats: int, seed: int, until: float) -> _Best:
-    """Ruin and recreate, from the best so far, in beats."""
+    """Ruin and recreate in beats, one from nothing, the next from the best so far, and so on."""
     n = len(task.go) - 1
     apart = task.cost + task.cost.T
     np.fill_diagonal(apart, np.inf)
     near = np.ascontiguousarray(np.argsort(apart, axis=1, kind="stable")[:, : min(12, n)])
-    warmth = float(np.median(apart.min(axis=1)[np.isfinite(apart.min(axis=1))])) / 2
+    nearest = apart.min(axis=1)
+    warmth = 0.75 * float(np.median(nearest[np.isfinite(nearest)])) if np.isfinite(nearest).any() else 0.0
     order = np.zeros(n + 1, np.int64)
     for beat in range(beats):
         if beat and perf_counter() > until:
             break
-        order[: len(best.nodes)] = best.nodes
+        given = best.nodes if beat % 2 else ()
+        order[: len(given)] = given
         size, lost, value = improve_order(
             task.go, task.cost, task.early, task.late, task.weight, task.before, near, task.waits, order,
-            len(best.nodes), target, ROUNDS // BEATS // n, seed + beat, warmth)
+            len(given), target, ROUNDS // BEATS // n, seed + beat, warmth)
         best = best.or_better(_Best(tuple(int(node) for node in order[:size]), lost, value))
         if best.whole and best.value <= target + SAME * abs(target):
             break
@@ -175,8 +177,8 @@ def _searched(task: Task, best: _Best, width: int, until: float) -> tuple[_Best,
     found = search(task, strict=True, width=width, upper=best.value if best.whole else np.inf, until=until)
     if found.nodes is not None:
         best = best.or_better(_Best(found.nodes, 0.0, found.value))
-    if best.whole:
-        return best, found.floor, not found.cut
+    if best.whole or (found.cut and width <= QUICK):
+        return best, found.floor if best.whole else 0.0, best.whole and not found.cut
     apart = float(np.median(task.go[np.isfinite(task.go)]))
     found = search(task, strict=False, width=width, most_lost=best.lost, bend=apart / task.weight.max(), until=until)
     if found.nodes is not None:
