@@ -17,6 +17,7 @@ from pipeline.motion.curve import Curve, curves_of
 
 FloatArray = NDArray[np.float64]
 SAMPLES = 40
+EXACT_S = 1e-7
 MM = 1000.0  # ruckig is given metres
 
 
@@ -124,7 +125,14 @@ class Lift:
         """The move that keeps the tip above the gates for across_s, from time 0."""
         table = self.table
         late = max(across_s - float(table.across_s[-1]), 0.0)
-        return self.broken_off(float(np.interp(across_s, table.across_s, table.after_s)) + late)
+        k = int(np.searchsorted(table.across_s, across_s))
+        if late > 0 or k == 0:
+            return self.broken_off(float(table.after_s[min(k, SAMPLES - 1)]) + late)
+        # between two rows the break-off time bends like a root: it is searched for by the time of the whole move
+        wanted, low, high = self.total_s(across_s), float(table.after_s[k - 1]), float(table.after_s[k])
+        if table.total_s[k] - table.total_s[k - 1] > EXACT_S:
+            high = _root(lambda s: self.broken_off(s).end_s - wanted, low, high)
+        return self.broken_off(high)
 
 
 def _move(state: tuple[float, float, float], to_mm: float, limits: LiftLimits, start_s: float) -> Curve:
@@ -197,3 +205,21 @@ def _bisect(function: Callable[[float], float], low: float, high: float) -> floa
         else:
             low = middle
     return high
+
+
+def _root(function: Callable[[float], float], low: float, high: float) -> float:
+    """Where a rising function of times is 0 within EXACT_S: by false position, halved at every third step."""
+    below, above = function(low), function(high)
+    root = high
+    for step in range(60):
+        if above - below <= EXACT_S:
+            break
+        root = 0.5 * (low + high) if step % 3 == 2 else low - below * (high - low) / (above - below)
+        value = function(root)
+        if abs(value) <= EXACT_S:
+            break
+        if value > 0:
+            high, above = root, value
+        else:
+            low, below = root, value
+    return root
