@@ -54,5 +54,6 @@ def blobs_of(edges: EdgeMap, close_cells: int = 2) -> Blobs:
         cells.append(len(seen))
         cut.append(x <= 1 or y <= 1 or x + w >= columns - 1 or y + h >= rows - 1)
         label[y : y + h, x : x + w][inside > 0] = len(box)
-    depth = cv2.distanceTransform((label > 0).astype(np.uint8), cv2.DIST_L2, 3)
-    return Blobs(label, depth, np.array(box, np.int64).reshape(-1, 4), np.array(cells, np.int64), np.array(cut, np.bool_))
+    depth = np.asarray(cv2.distanceTransform((label > 0).astype(np.uint8), cv2.DIST_L2, 3), dtype=np.float32)
+    boxes = np.array(box, np.int64).reshape(-1, 4)
+    return Blobs(label, depth, boxes, np.array(cells, np.int64), np.array(cut, np.bool_))

@@ -41,7 +41,8 @@ def edge_map(grey: NDArray[np.uint8]) -> EdgeMap:
     dy = cv2.Sobel(half, cv2.CV_16S, 0, 1)
     middle = np.median(np.abs(dx[::3, ::3]).astype(np.int32) + np.abs(dy[::3, ::3]))
     least = max(NOISE_FACTOR * float(middle) * 0.8, LEAST_GRADIENT)
-    return EdgeMap(*_pooled(dx, dy, least), least)
+    strength, own, near = _pooled(dx, dy, least)
+    return EdgeMap(strength, own, near, least)
 
 
 @njit("i8(f8, f8)", cache=True, inline="always")
@@ -104,7 +105,8 @@ def edge_along(image, u, v, nu, nv, reach, least, sign, fine, profile, found):  
     The profile is differenced over two pixels; the best peak is its strength less half for one at the end of the reach,
     less 0.4 for one of the other sign; a parabola gives its top. A fine profile has two samples a pixel, each averaged
     over three pixels across; one that is not has one sample a pixel.
-    found[1] is 0 where no step of `least` grey levels is in reach; found[0] is OUTSIDE where the profile leaves the image.
+    found[1] is 0 where no step of `least` grey levels is in reach; found[0] is OUTSIDE where the profile leaves the
+    image.
     """
     found[0], found[1] = 0.0, 0.0
     d = 2 if fine else 1

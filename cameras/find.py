@@ -5,7 +5,7 @@ A finder of one's own needs `find` alone; see `Finder`.
 
 from collections.abc import Iterable
 from dataclasses import dataclass
-from typing import Protocol
+from typing import Any, Protocol
 
 import cv2
 import numpy as np
@@ -92,12 +92,14 @@ class _Placed:
 class PartFinder:
     """Finds taught parts, both sides up, and what is none of them, on a surface at a known height.
 
-    least_score: share of the expected outline that must be found. One finder serves one camera; frames come in any order.
+    least_score: share of the expected outline that must be found. One finder serves one camera; frames come in any
+    order, and nothing is kept from one to the next.
     """
 
     def __init__(self, parts: Iterable[TaughtPart], surface_mm: float, least_score: float = DEFAULT_SCORE) -> None:
         self.parts, self.surface_mm, self.least_score = tuple(parts), surface_mm, least_score
-        self.kinds = [_kind(part, down) for part in self.parts for down in (False, True) if part.model.side_told or not down]
+        self.kinds = [_kind(part, down) for part in self.parts for down in (False, True)
+                      if part.model.side_told or not down]
         areas = [cv2.contourArea(part.model.outline_mm.astype(np.float32)) for part in self.parts]
         self.least_cells = 0.5 * min(areas, default=100.0)
         self.highest_mm = max((part.height_mm for part in self.parts), default=10.0)
@@ -111,6 +113,8 @@ class PartFinder:
         if grey.shape[0] < 32 or grey.shape[1] < 32:
             return Sightings.joined(())
         views = self._views_for(camera, grey.shape)
+        if not len(views.places_mm):
+            return Sightings.joined(())
         edges = edge_map(grey)
         blobs = blobs_of(edges)
         placed: list[_Placed] = []
@@ -125,7 +129,9 @@ class PartFinder:
             self._camera, self._shape = camera, shape
         return self._views
 
-    def _on_patch(self, grey: Grey, camera: CameraMap, views: Views, edges: EdgeMap, blobs: Blobs, patch: int) -> list[_Placed]:
+    def _on_patch(
+        self, grey: Grey, camera: CameraMap, views: Views, edges: EdgeMap, blobs: Blobs, patch: int
+    ) -> list[_Placed]:
         """Fits on one patch: from the best rough placement down, none where a good fit already stands."""
         box, bounds = blobs.box[patch], self._bounds(blobs, patch)
         centre_px = CELL_PX * 0.5 * (box[:2] + box[2:]) + 0.5 * (CELL_PX - 1)
@@ -136,8 +142,8 @@ class PartFinder:
         for number, kind in enumerate(self.kinds):
             room = room_for(bounds, kind.steps)
             deep = DEPTH_SHARE * kind.depth_mm * scale
-            placements(edges.own, edges.near, blobs.label, blobs.depth, patch + 1, kind.coarse, affine, kind.anchor, deep,
-                       kind.first_rad, kind.steps, kind.step_rad, bounds, room)  # fmt: skip
+            placements(edges.own, edges.near, blobs.label, blobs.depth, patch + 1, kind.coarse, affine, kind.anchor,
+                       deep, kind.first_rad, kind.steps, kind.step_rad, bounds, room)  # fmt: skip
             found = peaks(room)[:MOST_PEAKS]
             rough.append(np.column_stack([found, np.full(len(found), float(number))]))
         every = np.concatenate(rough)
@@ -152,7 +158,8 @@ class PartFinder:
             if any(one.explains(u, v, yaw, kind, affine) for one in placed):
                 continue
             tried += 1
-            one = self._fitted(grey, views, kind, CELL_PX * np.array([u, v]) + 0.5 * (CELL_PX - 1), yaw, place, edges.least)
+            at_px = CELL_PX * np.array([u, v]) + 0.5 * (CELL_PX - 1)
+            one = self._fitted(grey, views, kind, at_px, yaw, place, edges.least)
             if one is not None:
                 placed.append(one)
         return placed
@@ -165,7 +172,8 @@ class PartFinder:
             unproject(views.coefficients[place], at_px[0], at_px[1], middle, start)
             place = int(views.nearest((views.places_mm[place] + start)[None])[0])
         unproject(views.coefficients[place], at_px[0], at_px[1], middle, start)
-        fit = fit_pose(grey, views.coefficients[place], kind.template, (start[0], start[1], yaw), STEP_SHARE * least, PROMISING)
+        fit = fit_pose(grey, views.coefficients[place], kind.template, (start[0], start[1], yaw), STEP_SHARE * least,
+                       PROMISING)  # fmt: skip
         if fit is None or fit.outline_share < self.least_score:
             return None
         rows, columns = grey.shape
@@ -178,14 +186,18 @@ class PartFinder:
         rows, columns = blobs.label.shape
         box = blobs.box[patch]
         at_border = np.array([box[0] <= 1, box[1] <= 1, box[2] >= columns - 2, box[3] >= rows - 2])
-        return np.asarray(box + np.array([-1, -1, 1, 1]) * np.where(at_border, BEYOND_CELLS, SLACK_CELLS), dtype=np.int64)
+        further = np.where(at_border, BEYOND_CELLS, SLACK_CELLS) * np.array([-1, -1, 1, 1])
+        return np.asarray(box + further, dtype=np.int64)
 
-    def _unknown(self, kept: list[_Placed], edges: EdgeMap, blobs: Blobs, camera: CameraMap) -> list[tuple[FloatArray, FloatArray]]:
+    def _unknown(
+        self, kept: list[_Placed], edges: EdgeMap, blobs: Blobs, camera: CameraMap
+    ) -> list[tuple[FloatArray, FloatArray]]:
         """Centre and outline about it, in mm, of what no part explains and no border cuts."""
-        left = (blobs.label > 0).astype(np.uint8)
+        left: NDArray[Any] = (blobs.label > 0).astype(np.uint8)
         for one in kept:
-            cv2.fillPoly(left, [np.round((one.polygon_px - 1.5) / CELL_PX).astype(np.int32)], 0)
-            cv2.polylines(left, [np.round((one.polygon_px - 1.5) / CELL_PX).astype(np.int32)], True, 0, 5)
+            polygon = np.round((one.polygon_px - 1.5) / CELL_PX).astype(np.int32)
+            cv2.fillPoly(left, [polygon], 0)
+            cv2.polylines(left, [polygon], True, 0, 5)
         left = cv2.morphologyEx(left, cv2.MORPH_OPEN, np.ones((3, 3), np.uint8))
         found = []
         for patch in range(len(blobs.box)):
@@ -196,8 +208,8 @@ class PartFinder:
             if own.sum() < UNKNOWN_SHARE * blobs.cells[patch]:
                 continue
             outlines, _ = cv2.findContours(own, cv2.RETR_EXTERNAL, cv2.CHAIN_APPROX_SIMPLE)
-            outline = max(outlines, key=cv2.contourArea)[:, 0].astype(np.float64) + [x0, y0]
-            if not _has_rim(outline.astype(np.int64), edges):
+            outline = np.asarray(max(outlines, key=cv2.contourArea)[:, 0], dtype=np.int64) + np.array([x0, y0])
+            if not _has_rim(outline, edges):
                 continue
             polygon = camera.to_cell(outline * CELL_PX + 0.5 * (CELL_PX - 1), self.surface_mm)
             if len(polygon) >= 3 and cv2.contourArea(polygon.astype(np.float32)) >= UNKNOWN_LEAST_MM2:
@@ -215,7 +227,7 @@ def grey_of(image: NDArray[np.uint8]) -> NDArray[np.uint8]:
 def _kind(part: TaughtPart, down: bool) -> _Kind:
     template = template_of(part.model, down)
     period = 2.0 * np.pi / max(part.turns, 1)
-    steps = 1 if part.turns == 0 else max(int(round(period / TURN_STEP_RAD)), 1)
+    steps = 1 if part.turns == 0 else max(round(period / TURN_STEP_RAD), 1)
     return _Kind(part.name, down, template, coarse_points(template.points), *_deepest(template.outline), part.model,
                  part.model.yaw_rad if part.turns == 0 else 0.0, steps,                 period / steps)  # fmt: skip
 
@@ -256,7 +268,7 @@ def _sightings(kept: list[_Placed], unknown: list[tuple[FloatArray, FloatArray]]
     none = np.zeros((0, 2))
     return Sightings(
         row=np.zeros(n + m, np.int64),
-        kind=np.array([one.kind.name for one in kept] + [""] * m, dtype=np.str_),
+        kind=np.array([*(one.kind.name for one in kept), *[""] * m], dtype=np.str_),
         side=np.array(["down" if one.kind.down else "up" for one in kept] + [""] * m, dtype=np.str_),
         xy_mm=np.array([one.xy_mm for one in kept] + [xy for xy, _ in unknown]).reshape(-1, 2),
         yaw_rad=np.array([float(one.fit.pose[2]) for one in kept] + [0.0] * m),

@@ -18,7 +18,7 @@ from cameras.view import project, slopes
 FloatArray = NDArray[np.float64]
 
 HIT_PX = 1.6
-STAGE1 = 0.3
+INNER_AT_FIRST = 0.3  # weight of inner edges while the outline is still sought; heights are held then
 INNER_SHARE, INNER_MOST, INNER_WORTH = 0.55, 0.85, 0.6  # more of the inner edges than this speaks for the side up
 PIXEL_SIGMA = 0.25
 DOWN_LIGHTER, DOWN_DARKER, DOWN_SIGMA = 0.92, 0.75, 0.15  # of the height: of the outline of a part turned over
@@ -63,8 +63,13 @@ def template_of(model: Model, down: bool) -> Template:
                     np.ascontiguousarray(outline), model.turns == 0)  # fmt: skip
 
 
-@njit("f8(u1[:,::1], f8[:,::1], f8[:,::1], f8[::1], f8[::1], f8[::1], f8[::1], f8, f8, i8, f8, f8[:,::1], f8[:,::1])", cache=True)
-def _step(image, view, points, taught, pose, heights, prior, reach, least, stride, with_edges, normal, out):  # type: ignore[no-untyped-def]
+_LAID = "u1[:,::1], f8[:,::1], f8[:,::1], f8[::1], f8[::1], f8[::1]"  # image, view, points, taught, pose, heights
+
+
+@njit(f"f8({_LAID}, f8[::1], f8, f8, i8, f8, f8[:,::1], f8[:,::1])", cache=True)
+def _step(  # type: ignore[no-untyped-def]
+    image, view, points, taught, pose, heights, prior, reach, least, stride, inner, normal, out
+):
     """Normal equations of one step. out (n, 4): residual px, step, hit, inside the image; returns the share hit."""
     size = 3 + heights.shape[0]
     normal[:, :] = 0.0
@@ -109,7 +114,7 @@ def _step(image, view, points, taught, pose, heights, prior, reach, least, strid
         w = 1.0 / ((1.0 + w) * (1.0 + w))
         w *= min(1.0, np.sqrt(abs(found[1] * points[k, 4])) / usual)
         if group > 0:
-            w *= with_edges
+            w *= inner
         if abs(r) <= HIT_PX:
             out[k, 2] = 1.0
             hits += 1
@@ -157,8 +162,11 @@ def _solve(normal, prior, sigmas, heights, unit, is_round, moved, cov):  # type:
     moved[:] = cov @ right
 
 
-@njit("f8(u1[:,::1], f8[:,::1], f8[:,::1], f8[::1], f8[::1], f8[::1], f8[::1], f8[::1], f8, f8, f8, i8, i8, f8, f8, b1, f8[:,::1], f8[:,::1])", cache=True)
-def settle(image, view, points, taught, pose, heights, prior, sigmas, reach, last_reach, least, stride, steps, inner, unit, is_round, cov, out):  # type: ignore[no-untyped-def]
+@njit(f"f8({_LAID}, f8[::1], f8[::1], f8, f8, f8, i8, i8, f8, f8, b1, f8[:,::1], f8[:,::1])", cache=True)
+def settle(  # type: ignore[no-untyped-def]
+    image, view, points, taught, pose, heights, prior, sigmas, reach, last_reach, least, stride, steps, inner, unit,
+    is_round, cov, out
+):
     """Gauss-Newton steps in place on `pose` (x, y from the place, yaw) and `heights`; the share of points met last.
 
     The reach shrinks evenly from `reach` to `last_reach`. cov: inverse of the last normal equations.
@@ -209,22 +217,21 @@ class Fit:
 
 def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, start: tuple[float, float, float],
              least: float, promising: float) -> Fit | None:  # fmt: skip
-    """The pose of a template from a start within some pixels; None where it runs away or soon does not look promising."""
+    """The pose of a template from a start some pixels off; None where it runs away or does not soon look promising."""
     pose, heights = np.array(start, dtype=np.float64), template.heights.copy()
     size = 3 + len(heights)
     cov, out = np.empty((size, size)), np.zeros((len(template.points), 4))
-    fixed = (template.heights, template.sigmas)
     unit = CORRELATED * PIXEL_SIGMA**2
-    share = settle(image, view, template.points, template.away, pose, heights, *fixed, 9.0, 4.0, least, 3, 6, STAGE1, unit,
-                   template.round, cov, out)  # fmt: skip
-    if share < promising:
+
+    def settled(reach: float, last: float, stride: int, steps: int, inner: float) -> float:
+        return float(settle(image, view, template.points, template.away, pose, heights, template.heights,
+                            template.sigmas, reach, last, least, stride, steps, inner, unit, template.round, cov, out))
+
+    if settled(9.0, 4.0, 3, 6, INNER_AT_FIRST) < promising:
         return None
-    settle(image, view, template.points, template.away, pose, heights, *fixed, 3.5, 2.5, least, 1, 2, 1.0, unit,
-           template.round, cov, out)  # fmt: skip
+    settled(3.5, 2.5, 1, 2, 1.0)
     unit = CORRELATED * _scatter(out) ** 2
-    share = settle(image, view, template.points, template.away, pose, heights, *fixed, 2.5, 2.5, least, 1, 3, 1.0, unit,
-                   template.round, cov, out)  # fmt: skip
-    if share < 0.0 or np.hypot(pose[0] - start[0], pose[1] - start[1]) > 6.0:
+    if settled(2.5, 2.5, 1, 3, 1.0) < 0.0 or np.hypot(pose[0] - start[0], pose[1] - start[1]) > 6.0:
         return None
     outline = template.points[:, 5] == 0.0
     seen = out[:, 3] > 0.0

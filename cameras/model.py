@@ -47,8 +47,9 @@ class Model:
     it faces away from the camera: there a wall's top is seen.  facing_height_mm, facing_sigma_mm: where it faces the
     camera, down to the wall's foot.  inner: edges inside the outline.  height_mm: of the top face.  away (2,): how far
     a point was seen displaced for each millimetre of height when taught.  yaw_rad: its yaw then.
-    shift_mm (2,): how far, in the cell frame, light from one side makes its edges appear beside where they are.  turns: how many yaws look alike, 0 for all.
-    proposed_turns: what the outline alone suggests.  side_told: whether up can be told from down.
+    shift_mm (2,): how far, in the cell frame, light from one side makes its edges appear beside where they are.
+    turns: how many yaws look alike, 0 for all.  proposed_turns: what the outline alone suggests.  side_told: whether
+    up can be told from down.  mirrored_alike: whether the outline is its own mirror image.
     """
 
     part: str
@@ -79,14 +80,15 @@ class Model:
 
     def as_json(self) -> str:
         """The model as the text of its file."""
-        return json.dumps({
+        document = {
             "format": FORMAT, "part": self.part, "height_mm": self.height_mm, "turns": self.turns,
             "proposed_turns": self.proposed_turns, "side_told": self.side_told, "mirrored_alike": self.mirrored_alike,
-            "outline_mm": np.round(self.outline_mm, 3).tolist(),
-            "shift_mm": np.round(self.shift_mm, 4).tolist(), "yaw_rad": round(self.yaw_rad, 5), "away": np.round(self.away, 5).tolist(), "facing_height_mm": round(self.facing_height_mm, 3),
-            "facing_sigma_mm": round(self.facing_sigma_mm, 3),
+            "outline_mm": np.round(self.outline_mm, 3).tolist(), "shift_mm": np.round(self.shift_mm, 4).tolist(),
+            "yaw_rad": round(self.yaw_rad, 5), "away": np.round(self.away, 5).tolist(),
+            "facing_height_mm": round(self.facing_height_mm, 3), "facing_sigma_mm": round(self.facing_sigma_mm, 3),
             "outline": _packed(self.outline), "inner": [_packed(one) for one in self.inner],
-        }, indent=None, separators=(",", ":")) + "\n"  # fmt: skip
+        }  # fmt: skip
+        return json.dumps(document, separators=(",", ":"), allow_nan=False) + "\n"
 
 
 def _packed(contour: Contour) -> dict[str, Any]:

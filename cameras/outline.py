@@ -1,5 +1,7 @@
 """A lone part's outline in a taught image: where the part ends and its shadow, or the belt, begins."""
 
+from typing import Any
+
 import cv2
 import numpy as np
 from numpy.typing import NDArray
@@ -8,7 +10,7 @@ from cameras.symmetry import Frame, voted_plan
 
 FloatArray = NDArray[np.float64]
 Grey = NDArray[np.uint8]
-Mask = NDArray[np.uint8]
+Mask = NDArray[Any]  # uint8, as OpenCV gives it
 
 NOISE_FACTOR = 3.0
 LEAST_SLOPE = 2.0
@@ -30,7 +32,8 @@ def edge_lines(window: Grey, belt: NDArray[np.bool_]) -> Mask:
 
 def _slopes(window: Grey) -> tuple[FloatArray, FloatArray]:
     smooth = cv2.GaussianBlur(window.astype(np.float64), (0, 0), 1.0)
-    return cv2.Sobel(smooth, cv2.CV_64F, 1, 0, scale=0.125), cv2.Sobel(smooth, cv2.CV_64F, 0, 1, scale=0.125)
+    dx, dy = (cv2.Sobel(smooth, cv2.CV_64F, *order, scale=0.125) for order in ((1, 0), (0, 1)))
+    return np.asarray(dx, dtype=np.float64), np.asarray(dy, dtype=np.float64)
 
 
 def rough_outline(window: Grey, blob: Mask, corner: FloatArray, frame: Frame, top_mm: float, turns: int) -> FloatArray:
@@ -82,7 +85,7 @@ def largest(mask: Mask) -> Mask:
 
 
 def _without_shadow(window: Grey, mask: Mask, lines: Mask, blob: Mask) -> Mask:
-    """The mask less its shadow: outer regions darker than the belt whose edge to the belt is weaker than to the part."""
+    """The mask less its shadow: outer regions darker than the belt, with a softer edge to the belt than to the part."""
     ratio = _ratio(window, cv2.dilate(blob, np.ones((7, 7), np.uint8)) == 0)
     size = np.hypot(*_slopes(window))
     clear = ((cv2.distanceTransform((lines == 0).astype(np.uint8), cv2.DIST_L2, 5) > 1.5) & (mask > 0)).astype(np.uint8)
@@ -90,7 +93,7 @@ def _without_shadow(window: Grey, mask: Mask, lines: Mask, blob: Mask) -> Mask:
     seeds = np.where(clear > 0, seeds + 1, 0).astype(np.int32)
     seeds[cv2.dilate(mask, np.ones((3, 3), np.uint8)) == 0] = 1
     level = np.clip(size * (255.0 / max(float(size.max()), 1.0)), 0, 255).astype(np.uint8)
-    region = cv2.watershed(cv2.cvtColor(level, cv2.COLOR_GRAY2BGR), seeds)
+    region = np.asarray(cv2.watershed(cv2.cvtColor(level, cv2.COLOR_GRAY2BGR), seeds), dtype=np.int32)
     border = _borders(region, size, count + 1)
     outside, whole = {1}, int(mask.sum())
     left = whole
@@ -109,7 +112,7 @@ def _without_shadow(window: Grey, mask: Mask, lines: Mask, blob: Mask) -> Mask:
                 outside.add(k)
                 left -= int(own.sum())
                 changed = True
-    kept = np.isin(region, [k for k in range(2, count + 1) if k not in outside]).astype(np.uint8)
+    kept: Mask = np.isin(region, [k for k in range(2, count + 1) if k not in outside]).astype(np.uint8)
     kept = cv2.morphologyEx(kept, cv2.MORPH_CLOSE, np.ones((3, 3), np.uint8))
     return largest(cv2.morphologyEx(filled(kept), cv2.MORPH_OPEN, np.ones((3, 3), np.uint8)))
 

@@ -83,7 +83,7 @@ def _turned(points, affine, angle, du, dv, mask, reach):  # type: ignore[no-unty
 
 @njit("f8(u1[:,::1], u1[:,::1], i8[::1], i8[::1], u1[::1], i8, i8, b1)", cache=True, inline="always")
 def _score(own, near, du, dv, mask, j, i, glance):  # type: ignore[no-untyped-def]
-    """Score of one placement, 0 where too many points are missed; with `glance` only whether to look closer (1 or 0)."""
+    """Score of one placement, 0 where too many points are missed; `glance` lets a few more go."""
     rows, columns = near.shape
     missed, exact, outside, n = 0, 0, 0, mask.shape[0]
     for k in range(n):
@@ -114,8 +114,14 @@ def _noted(best, score, j, i, angle, step):  # type: ignore[no-untyped-def]
         best[0], best[1], best[2], best[3], best[4] = score, i, j, angle, 1.0
 
 
-@njit("void(u1[:,::1], u1[:,::1], i4[:,::1], f4[:,::1], i8, f8[:,::1], f8[:,::1], f8[::1], f8, f8, i8, f8, i8[::1], f8[:,:,:,::1])", cache=True)
-def placements(own, near, label, depth, patch, points, affine, anchor, deep, first, turns, step, box, blocks):  # type: ignore[no-untyped-def]
+@njit(
+    "void(u1[:,::1], u1[:,::1], i4[:,::1], f4[:,::1], i8, f8[:,::1], f8[:,::1], f8[::1], f8, f8, i8, f8, i8[::1], "
+    "f8[:,:,:,::1])",
+    cache=True,
+)
+def placements(  # type: ignore[no-untyped-def]
+    own, near, label, depth, patch, points, affine, anchor, deep, first, turns, step, box, blocks
+):
     """Best placement in each block of cells over one patch, and in each bin of turns: blocks (rows, columns, bins, 5).
 
     Each: score (mean of the shares of points met within a cell and exactly; 0: none), column, row, turn in radians,

@@ -4,7 +4,7 @@ An edge taken for lower than it is lands displaced away from the camera. Turned 
 edge misses its twin; the height at which it does not is the edge's.
 """
 
-from typing import Protocol
+from typing import Any, Protocol
 
 import cv2
 import numpy as np
@@ -61,7 +61,7 @@ def voted_plan(
     for h in np.linspace(0.0, top_mm, VOTED_HEIGHTS):
         at = (frame.to_pixels(grid, h) - corner).reshape(*x.shape, 2).astype(np.float32)
         one = cv2.remap(thick, at[..., 0], at[..., 1], cv2.INTER_LINEAR)
-        votes = np.zeros_like(one)
+        votes: NDArray[Any] = np.zeros_like(one)
         for k in range(count):
             middle = (len(side) - 1) / 2.0
             turn = cv2.getRotationMatrix2D((middle, middle), 360.0 * k / count, 1.0)
@@ -75,13 +75,13 @@ def voted_plan(
     return np.asarray(plan), height
 
 
-def _enclosing(agreed: NDArray[np.uint8], step: float) -> NDArray[np.uint8]:
+def _enclosing(agreed: NDArray[Any], step: float) -> NDArray[Any]:
     """The largest thing that agreed lines enclose, less the lines' own width."""
-    size = 2 * max(int(round(0.6 / step)), 1) + 1
+    size = 2 * max(round(0.6 / step), 1) + 1
     disc = cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (size, size))
     closed = cv2.morphologyEx(agreed, cv2.MORPH_CLOSE, disc)
     outlines, _ = cv2.findContours(closed, cv2.RETR_EXTERNAL, cv2.CHAIN_APPROX_NONE)
-    shape = np.zeros_like(agreed)
+    shape: NDArray[Any] = np.zeros_like(agreed)
     cv2.drawContours(shape, outlines, -1, 1, cv2.FILLED)
     shape = cv2.morphologyEx(shape, cv2.MORPH_OPEN, cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (size + 4, size + 4)))
     count, label, stats, _ = cv2.connectedComponentsWithStats(shape)
@@ -91,7 +91,7 @@ def _enclosing(agreed: NDArray[np.uint8], step: float) -> NDArray[np.uint8]:
 
 
 def _rim(shape: NDArray[np.uint8], step: float) -> NDArray[np.bool_]:
-    size = 2 * max(int(round(0.3 / step)), 1) + 1
+    size = 2 * max(round(0.3 / step), 1) + 1
     return np.asarray(cv2.morphologyEx(shape, cv2.MORPH_GRADIENT, np.ones((size, size), np.uint8)) > 0)
 
 
@@ -101,8 +101,9 @@ def _misses(seen: FloatArray, turns: int) -> float:
     count = turns or ROUND_TURNS
     missed = []
     for k in range(1, count):
-        apart, at = tree.query(turned(seen, 2.0 * np.pi * k / count), k=2)
-        missed.append(_to_line(turned(seen, 2.0 * np.pi * k / count), seen[at[:, 0]], seen[at[:, 1]], apart[:, 0]))
+        copy = turned(seen, 2.0 * np.pi * k / count)
+        apart, at = (np.asarray(one) for one in tree.query(copy, k=2))
+        missed.append(_to_line(copy, seen[at[:, 0]], seen[at[:, 1]], apart[:, 0]))
     every = np.concatenate(missed)
     return float(np.mean(np.minimum(every, 1.5) ** 2))
 
@@ -118,7 +119,7 @@ def _to_line(points: FloatArray, first: FloatArray, second: FloatArray, apart: F
 def wall_heights(
     pixels: FloatArray, frame: Frame, top_mm: float, turns: int
 ) -> tuple[tuple[float, float], float]:
-    """Heights of the outline (pixels (n, 2)) where it faces the camera and where away, at which its plan repeats; sigma."""
+    """Heights of the outline (pixels (n, 2)) where it faces the camera and where away, as it repeats; their sigma."""
     foot = frame.from_pixels(pixels, 0.0)
     along = np.roll(foot, -2, axis=0) - np.roll(foot, 2, axis=0)
     normal = np.column_stack([along[:, 1], -along[:, 0]])
@@ -132,8 +133,8 @@ def wall_heights(
     cost = np.array([_misses(level[::2], turns) for level in levels])
     best[:] = int(np.argmin(cost))
     for side in (0, 1, 0, 1):
-        cost = np.array([_misses(np.where(away, levels[best[1] if side == 0 else k], levels[k if side == 0 else best[0]])[::2],
-                                 turns) for k in range(len(steps))])  # fmt: skip
+        tried = [(k, best[1]) if side == 0 else (best[0], k) for k in range(len(steps))]
+        cost = np.array([_misses(np.where(away, levels[b], levels[a])[::2], turns) for a, b in tried])
         best[side] = int(np.argmin(cost))
     slope = float(np.linalg.norm(frame.away()))
     seen = SEEN_SIGMA_MM / max(slope, 1e-6)
@@ -183,7 +184,7 @@ def off_centre(polygon: FloatArray, turns: int) -> FloatArray:
         for k in range(1, turns):
             angle = 2.0 * np.pi * k / turns
             copy = turned(polygon - centre, angle)
-            apart, at = tree.query(copy)
+            apart, at = (np.asarray(one) for one in tree.query(copy))
             near = apart < within * ALIKE_MM
             rows.append(normal[at[near]] @ (np.eye(2) - turned(np.eye(2), angle).T))
             right.append(np.sum(normal[at[near]] * ((polygon - centre)[at[near]] - copy[near]), axis=1))
@@ -199,8 +200,8 @@ def repeated(line: FloatArray, every: FloatArray, frame: Frame, height: float, t
     count = turns or ROUND_TURNS
     tree = cKDTree(frame.from_pixels(every[:, :2], height))
     own = frame.from_pixels(line[:, :2], height)
-    met = np.mean([tree.query(turned(own, 2.0 * np.pi * m / count))[0] < ALIKE_MM for m in range(1, count)], axis=0)
-    return np.asarray(met >= 0.5)
+    missed = np.array([tree.query(turned(own, 2.0 * np.pi * m / count))[0] for m in range(1, count)])
+    return np.asarray(np.mean(missed < ALIKE_MM, axis=0) >= 0.5)
 
 
 def alike_under_turn(first: FloatArray, second: FloatArray, mirrored: bool = False) -> bool:

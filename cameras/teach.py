@@ -1,6 +1,7 @@
 """Teaching: from one image of a lone part, and the tool pose that grips it, to the part's outline and inner edges."""
 
 from dataclasses import dataclass, replace
+from typing import Any
 
 import cv2
 import numpy as np
@@ -48,7 +49,7 @@ class GripFrame:
 
     def from_pixels(self, pixels: FloatArray, height_mm: float) -> FloatArray:
         """Pixels (n, 2) to the grip frame (n, 2)."""
-        return (self.camera.to_cell(pixels, self.surface_mm + height_mm) - self.origin) @ self.turn
+        return np.asarray((self.camera.to_cell(pixels, self.surface_mm + height_mm) - self.origin) @ self.turn)
 
     def to_pixels(self, points_mm: FloatArray, height_mm: float) -> FloatArray:
         """Points of the grip frame (n, 2) to pixels (n, 2)."""
@@ -58,16 +59,20 @@ class GripFrame:
     def away(self) -> FloatArray:
         """How far (2,) a point moves in the grip frame, on the surface, for each millimetre that it is higher."""
         origin = np.zeros((1, 2))
-        return (self.from_pixels(self.to_pixels(origin, 1.0), 0.0) - origin)[0]
+        return np.asarray(self.from_pixels(self.to_pixels(origin, 1.0), 0.0)[0])
 
 
 def teach(grey: Grey, camera: CameraMap, surface_mm: float, taught: Taught, file: str = "image") -> Model:
-    """The model of the part that lies at the tool pose. Raises InputFault where there is none, or the border cuts it."""
+    """The model of the part that lies at the tool pose. Raises InputFault where there is none, or the border cuts it.
+
+    grey (rows, columns).  surface_mm: height of what the part lies on.  file: named in faults.
+    """
     frame = GripFrame(camera, surface_mm, taught.pose)
     window, corner, blob = _window(grey, frame, taught, file)
     chain = rough_outline(window, blob, corner, frame, taught.height_mm, taught.turns)
     if len(chain) < 8:
-        raise InputFault(file, "--tool", "no outline can be told from the belt", "take a sharper image, or change the light")
+        raise InputFault(file, "--tool", "no outline can be told from the belt",
+                         "take a sharper image, or change the light")
     pixels, steps = snapped(grey, chain)
     top = taught.height_mm
     lighter = float(np.median(steps)) < 0.0  # then a wall, in shade, is not seen as part of it
@@ -166,16 +171,15 @@ def _outline(
     """The outline's plan: seen points brought to the foot or the top of the wall, as they face the camera or not."""
     near, far = frame.from_pixels(pixels, heights[0]), frame.from_pixels(pixels, heights[1])
     plan = np.where((outward(near) @ frame.away() > 0.0)[:, None], far, near)
-    size = float(np.linalg.norm(np.diff(plan, axis=0), axis=1).sum())
     polygon = even(plan, 0.4, 0.25)
     if _area(polygon) < 0.0:
         polygon = polygon[::-1]
     points = even(polygon, SPACING_MM)
     normals = outward(points)
     nearest = np.argmin(np.linalg.norm(points[:, None] - plan[None], axis=2), axis=1)
-    spread = cv2.blur(np.ascontiguousarray(steps[nearest][:, None]), (1, 5)).ravel()
-    spread = spread if size > 0 else steps[nearest]
-    return Contour(points, normals, spread, heights[1], sigma), polygon
+    own = steps[nearest]
+    usual = np.convolve(np.concatenate([own[-2:], own, own[:2]]), np.full(5, 0.2), "valid")
+    return Contour(points, normals, usual, heights[1], sigma), polygon
 
 
 def _area(polygon: FloatArray) -> float:
@@ -190,7 +194,7 @@ def _inner(grey: Grey, polygon: FloatArray, frame: GripFrame, taught: Taught) ->
     low, high = np.floor(shape.min(axis=0)).astype(int) - 4, np.ceil(shape.max(axis=0)).astype(int) + 5
     low = np.maximum(low, 0)
     window = np.ascontiguousarray(grey[low[1] : high[1], low[0] : high[0]])
-    inside = np.zeros(window.shape, np.uint8)
+    inside: NDArray[Any] = np.zeros(window.shape, np.uint8)
     cv2.fillPoly(inside, [np.round(shape - low).astype(np.int32)], 1)
     inside = cv2.erode(inside, np.ones((9, 9), np.uint8))
     smooth = cv2.GaussianBlur(window, (0, 0), 1.0)
@@ -199,7 +203,7 @@ def _inner(grey: Grey, polygon: FloatArray, frame: GripFrame, taught: Taught) ->
     if len(size) == 0:
         return ()
     strong = max(float(np.percentile(size, 85)), 60.0)
-    lines = cv2.Canny(dx, dy, 0.5 * strong, strong, L2gradient=True) & (inside * 255)
+    lines = np.where(inside > 0, cv2.Canny(dx, dy, 0.5 * strong, strong, L2gradient=True), 0).astype(np.uint8)
     count, label = cv2.connectedComponents(lines, connectivity=8)
     kept = []
     for k in range(1, count):
@@ -209,7 +213,7 @@ def _inner(grey: Grey, polygon: FloatArray, frame: GripFrame, taught: Taught) ->
     return _levelled([one for one in kept if len(one) >= 4], frame, taught)
 
 
-def _sharp(grey: Grey, pixels: NDArray[np.int64], dx: NDArray[np.int16], dy: NDArray[np.int16]) -> FloatArray:
+def _sharp(grey: Grey, pixels: NDArray[Any], dx: NDArray[Any], dy: NDArray[Any]) -> FloatArray:
     """Edge pixels at their sub-pixel places: rows u, v, nu, nv, step."""
     profile, found = np.empty(MOST_SAMPLES), np.empty(2)
     rows = []

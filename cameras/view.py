@@ -51,14 +51,20 @@ class Views:
     def nearest(self, xy_mm: FloatArray) -> NDArray[np.int64]:
         """Index of the place nearest to each of the points (n, 2)."""
         apart = np.linalg.norm(self.places_mm[None] - np.asarray(xy_mm)[:, None], axis=2)
-        return np.argmin(apart, axis=1)
+        return np.asarray(np.argmin(apart, axis=1), dtype=np.int64)
 
 
 def views_of(camera: CameraMap, surface_mm: float, highest_mm: float, shape: tuple[int, int]) -> Views:
-    """Fit the local projections for an image of `shape` (rows, columns) and things up to `highest_mm` high."""
+    """Fit the local projections for an image of `shape` (rows, columns) and things up to `highest_mm` high.
+
+    Places of which the camera sees nothing are left out; there may be none left.
+    """
     rows, columns = shape
     u, v = np.meshgrid(np.linspace(0, columns - 1, 17), np.linspace(0, rows - 1, 17))
     seen = camera.to_cell(np.stack([u, v], axis=-1).reshape(-1, 2), surface_mm)
+    seen = seen[np.all(np.isfinite(seen), axis=1)]
+    if not len(seen):
+        return Views(np.zeros((0, 2)), np.zeros((0, 2, TERMS)), surface_mm)
     low, high = seen.min(axis=0), seen.max(axis=0)
     steps = [max(int(np.ceil((b - a) / SPACING_MM)) + 1, 2) for a, b in zip(low, high, strict=True)]
     if steps[0] * steps[1] > MOST_PLACES:
@@ -73,18 +79,23 @@ def views_of(camera: CameraMap, surface_mm: float, highest_mm: float, shape: tup
     points[..., :2] = places[:, None] + np.stack([dx, dy], axis=1)
     points[..., 2] = surface_mm + z
     pixels = camera.to_pixel(points.reshape(-1, 3)).reshape(len(places), len(dx), 2)
+    before = np.all(np.isfinite(pixels), axis=(1, 2))
+    places, pixels = places[before], pixels[before]
     fitted = np.einsum("tk,mkc->mct", np.linalg.pinv(_terms(dx, dy, z)), pixels)
     return Views(places, np.ascontiguousarray(fitted), surface_mm)
+
+
+@njit("f8(f8[::1], f8, f8, f8)", cache=True, inline="always")
+def _value(c, x, y, z):  # type: ignore[no-untyped-def]
+    along = c[1] + x * (c[3] + x * c[6] + y * c[7]) + y * c[4] + z * c[11]
+    across = c[2] + y * (c[5] + x * c[8] + y * c[9]) + z * c[12]
+    return c[0] + x * along + y * across + z * (c[10] + z * c[13])
 
 
 @njit("UniTuple(f8, 2)(f8[:,::1], f8, f8, f8)", cache=True, inline="always")
 def project(c, x, y, z):  # type: ignore[no-untyped-def]
     """Pixel u, v of one point by the coefficients (2, 14) of a place."""
-    u = (c[0, 0] + x * (c[0, 1] + x * (c[0, 3] + x * c[0, 6] + y * c[0, 7]) + y * c[0, 4] + z * c[0, 11])
-         + y * (c[0, 2] + y * (c[0, 5] + x * c[0, 8] + y * c[0, 9]) + z * c[0, 12]) + z * (c[0, 10] + z * c[0, 13]))  # fmt: skip
-    v = (c[1, 0] + x * (c[1, 1] + x * (c[1, 3] + x * c[1, 6] + y * c[1, 7]) + y * c[1, 4] + z * c[1, 11])
-         + y * (c[1, 2] + y * (c[1, 5] + x * c[1, 8] + y * c[1, 9]) + z * c[1, 12]) + z * (c[1, 10] + z * c[1, 13]))  # fmt: skip
-    return u, v
+    return _value(c[0], x, y, z), _value(c[1], x, y, z)
 
 
 @njit("void(f8[:,::1], f8, f8, f8, f8[:,::1])", cache=True)

@@ -1,10 +1,11 @@
-"""Finding over a whole recording: the cell's taught parts looked for in every image, and what was found written down."""
+"""Finding over a recording: the cell's taught parts looked for in every image, and what was found written down."""
 
 import csv
 import time
 from collections.abc import Callable, Iterable
 from dataclasses import replace
 from pathlib import Path
+from typing import Any
 
 import cv2
 import numpy as np
@@ -92,7 +93,7 @@ def write_overlays(folder: Path, recording: Recording, cell: Cell, sightings: Si
             part.write_bytes(cv2.imencode(".jpg", shown, [cv2.IMWRITE_JPEG_QUALITY, 88])[1].tobytes())
 
 
-def _draw(shown: NDArray[np.uint8], camera: CameraMap, cell: Cell, seen: Sightings, k: int,
+def _draw(shown: NDArray[Any], camera: CameraMap, cell: Cell, seen: Sightings, k: int,
           outlines: dict[str, FloatArray]) -> None:  # fmt: skip
     """One sighting: its outline, its grip frame's x axis, its name and score."""
     kind, down = str(seen.kind[k]), str(seen.side[k]) == "down"
@@ -111,4 +112,5 @@ def _draw(shown: NDArray[np.uint8], camera: CameraMap, cell: Cell, seen: Sightin
         cv2.arrowedLine(shown, start, end, colour, 1, cv2.LINE_AA, 4)
     text = f"{kind}{' down' if down else ''} {seen.score[k]:.2f}" if kind else "unknown"
     at = (int(pixels[:, 0].min()), int(pixels[:, 1].min()) - 4)
-    cv2.putText(shown, text.encode("ascii", "replace").decode(), at, cv2.FONT_HERSHEY_SIMPLEX, 0.42, colour, 1, cv2.LINE_AA)
+    plain = text.encode("ascii", "replace").decode()
+    cv2.putText(shown, plain, at, cv2.FONT_HERSHEY_SIMPLEX, 0.42, colour, 1, cv2.LINE_AA)

@@ -35,7 +35,8 @@ def pose_when_seen(
     try:
         x, y, yaw = (float(value) for value in tool.split(","))
     except ValueError:
-        raise InputFault("--tool", "", f"{printable(tool)!r} is not X,Y,YAW", "give three numbers: mm, mm, degrees") from None
+        raise InputFault("--tool", "", f"{printable(tool)!r} is not X,Y,YAW",
+                         "give three numbers: mm, mm, degrees") from None
     numbers = (x, y, yaw, counts or 0.0, touch_counts or 0.0)
     if not all(math.isfinite(value) and abs(value) < 1e12 for value in numbers):
         raise InputFault("--tool", "", "a number that is not finite", "give plain numbers")
@@ -92,10 +93,11 @@ def picture(
     high = np.minimum(np.ceil(reach.max(axis=0)).astype(int) + 12, [grey.shape[1], grey.shape[0]])
     window = grey[low[1] : high[1], low[0] : high[0]]
     shown = cv2.resize(window, None, fx=ENLARGED, fy=ENLARGED, interpolation=cv2.INTER_CUBIC)
-    shown = cv2.cvtColor(cv2.normalize(shown, None, 0, 255, cv2.NORM_MINMAX), cv2.COLOR_GRAY2BGR)
+    shown = cv2.cvtColor(cv2.normalize(shown, shown.copy(), 0, 255, cv2.NORM_MINMAX), cv2.COLOR_GRAY2BGR)
 
     def drawn(points: FloatArray, height: float) -> NDArray[np.int32]:
-        return np.round(((pixels(points, height) - low + 0.5) * ENLARGED - 0.5) * 16).astype(np.int32)
+        at = (pixels(points, height) - low + 0.5) * ENLARGED - 0.5
+        return np.asarray(np.round(at * 16), dtype=np.int32)
 
     for jaw in jaws:
         cv2.polylines(shown, [drawn(jaw, part.grasp_mm)], True, (240, 190, 60), 2, cv2.LINE_AA, 4)
