@@ -121,6 +121,8 @@ class Mover:
         lift = self.lift_from(start, hold.z_mm)
         enters = -np.inf if self.window_mm is None else self.passes(hold, self.window_mm[0])
         soonest = max(met_from_s, enters - lift.fall_s)
+        if soonest == np.inf:
+            return None  # the belt never brings it that far
         meeting = self._waited_for(start, free_s, (soonest, enters), hold, lift, shapes[0])
         if meeting is None:
             meeting = self._meet_soonest(start, free_s, soonest, hold, lift, shapes[0])
