@@ -191,7 +191,8 @@ class Grasping:
         poses = np.empty((count, 4))
         poses[:, 0] = place.slots_mm[slot, 0] + c * one.offset_mm[0] - s * one.offset_mm[1]
         poses[:, 1] = place.slots_mm[slot, 1] + s * one.offset_mm[0] + c * one.offset_mm[1]
-        poses[:, 2] = place.slots_mm[slot, 2] + ((one.grasp_mm or part.grasp_mm) - part.grasp_mm)
+        grasp_mm = part.grasp_mm if one.grasp_mm is None else one.grasp_mm
+        poses[:, 2] = place.slots_mm[slot, 2] + grasp_mm - part.grasp_mm
         poses[:, 3] = yaws + np.radians(one.yaw_deg)
         solved = self.arm.inverse(poses)[:, :, None, :]  # (y, 2, 1, 4)
         joints = self.arm.with_j4_turn(solved, TURNS).reshape(-1, 4)
