@@ -233,6 +233,18 @@ def test_a_part_that_has_gone_is_not_met() -> None:
     assert mover.pick(np.array(arm.home), 0.0, Hold(np.array([300.0, 2000.0]), 0.0, -47.0, 0, 0), slot) is None
 
 
+@pytest.mark.filterwarnings("error")
+def test_a_part_that_never_comes_is_not_met() -> None:
+    """The belt stops before the window."""
+    cell = changed()
+    arm = Arm(cell.arm, cell.tool)
+    mover = Mover(cell, arm, Belt(np.arange(0, 30, 0.1), np.minimum(np.arange(300) * 200.0, 1e4), cell.belt))
+    slot = arm.inverse([-60.0, 260.0, -40.0, 0.0])[0]
+    hold = Hold(np.array([300.0, -700.0]), 0.0, -47.0, 0, 0)
+    assert np.isinf(mover.passes(hold, -150.0))
+    assert mover.pick(np.array(arm.home), 6.0, hold, slot) is None
+
+
 # ---- what overlapping is worth
 
 
