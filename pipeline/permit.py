@@ -49,6 +49,8 @@ class Permit:
         joints = self.mover.joints_on(cycle.hold, t)
         if not np.isfinite(joints).all():
             return Refusal("out_of_reach", "leaves the reach of the arm while it is followed")
+        if np.abs(np.diff(joints[:, 0])).max() > np.pi:
+            return Refusal("joint_limit", "J1 would have to turn back by a whole turn while it follows the part")
         joints[:, 2] = self.mover.joints(cycle, t)[:, 2]
         beside = np.concatenate([np.linspace(cycle.met_s - BESIDE_S + SLACK_S, cycle.met_s, 9),
                                  np.linspace(cycle.left_s, cycle.left_s + BESIDE_S - SLACK_S, 9)])
