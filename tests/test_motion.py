@@ -59,8 +59,8 @@ def case(seed: int, shapes: tuple[int, int] = (TOGETHER, TOGETHER)) -> Case | No
     counts = np.concatenate([[0], np.cumsum(speeds[1:] * 0.1)]) / cell.belt.mm_per_count  # type: ignore[union-attr]
     mover = Mover(cell, arm, Belt(times, counts, cell.belt))
     reach = arm.link1_mm + arm.link2_mm
-    out = np.array([np.cos(rng.uniform(0, 2 * np.pi)), np.sin(rng.uniform(0, 2 * np.pi))])
-    at = base[:2] + rng.uniform(0.55, 0.8) * reach * out / np.hypot(*out)
+    aside = arm.base_yaw + rng.uniform(-1.3, 1.3)  # J1 stays away from the seam at half a turn
+    at = base[:2] + rng.uniform(0.55, 0.8) * reach * np.array([np.cos(aside), np.sin(aside)])
     hold = Hold(at - mover.belt.shift_mm(1.5), float(rng.uniform(-3, 3)), middle - 27.0, int(rng.integers(2)), 0)
     joints = np.array([rng.uniform(-2, 2), rng.choice([-1, 1]) * rng.uniform(0.6, 2.2), 0.0, rng.uniform(-2, 2)])
     start, slot = joints.copy(), joints + rng.uniform(-1, 1, 4) * (1.0, 0.3, 0.0, 1.0)
@@ -332,6 +332,19 @@ def test_a_part_taken_away_is_too_late() -> None:
     gone = permit.refused(cycle, cycle.grasp_end_s - 0.1)
     assert gone is not None
     assert (gone.reason, "0.10 s" in gone.detail) == ("too_late", True)
+
+
+def test_following_over_the_seam_of_j1_is_refused() -> None:
+    """An arm that turns past half a turn: the two sides of the seam are a whole turn apart."""
+    wide = {"arm__j1__min": -300.0, "arm__j1__max": 300.0, "arm__base_yaw_deg": 128.0}
+    cycle, permit = _picked(**wide)
+    assert cycle is not None
+    lane = permit.mover.joints_on(cycle.hold, np.linspace(cycle.met_s, cycle.left_s, 30))
+    assert np.abs(np.diff(lane[:, 0])).max() > 6, "this test is about a lane over the seam"
+    refused = permit.refused(cycle)
+    assert refused is not None
+    assert refused.reason == "joint_limit"
+    assert "J1" in refused.detail
 
 
 def test_a_higher_clear_height_makes_the_cycle_longer() -> None:
