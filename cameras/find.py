@@ -27,6 +27,7 @@ MOST_PEAKS = 40
 DEPTH_SHARE = 0.35  # of the depth of a part, what the patch under its middle has at the least
 SLACK_CELLS, BEYOND_CELLS = 3, 24
 TRIED_ON_ONE, TRIED_ON_MORE = 6, 5
+ROUND_DOWN = 0.1  # more of a circle must be found where nothing but a circle is known
 LEAST_ROUGH = 0.64  # score of a rough placement worth fitting
 PROMISING = 0.45
 SETTLED = 0.92
@@ -174,7 +175,8 @@ class PartFinder:
         unproject(views.coefficients[place], at_px[0], at_px[1], middle, start)
         fit = fit_pose(grey, views.coefficients[place], kind.template, (start[0], start[1], yaw), STEP_SHARE * least,
                        PROMISING)  # fmt: skip
-        if fit is None or fit.outline_share < self.least_score:
+        least_share = self.least_score + (ROUND_DOWN if kind.template.round and kind.down else 0.0)
+        if fit is None or fit.outline_share < least_share:
             return None
         rows, columns = grey.shape
         low, high = fit.polygon_px.min(axis=0), fit.polygon_px.max(axis=0)
@@ -211,10 +213,10 @@ class PartFinder:
             outline = np.asarray(max(outlines, key=cv2.contourArea)[:, 0], dtype=np.int64) + np.array([x0, y0])
             if not _has_rim(outline, edges):
                 continue
-            polygon = camera.to_cell(outline * CELL_PX + 0.5 * (CELL_PX - 1), self.surface_mm)
-            if len(polygon) >= 3 and cv2.contourArea(polygon.astype(np.float32)) >= UNKNOWN_LEAST_MM2:
-                centre = 0.5 * (polygon.min(axis=0) + polygon.max(axis=0))
-                found.append((centre, polygon - centre))
+            shape = camera.to_cell(outline * CELL_PX + 0.5 * (CELL_PX - 1), self.surface_mm)
+            if len(shape) >= 3 and cv2.contourArea(shape.astype(np.float32)) >= UNKNOWN_LEAST_MM2:
+                centre = 0.5 * (shape.min(axis=0) + shape.max(axis=0))
+                found.append((centre, shape - centre))
         return found
 
 
