@@ -79,17 +79,16 @@ class Belt:
             start, at, speed = self.starts_s[max(piece - 1, 0)], *self.coefficients[:2, max(piece - 1, 0)]
             ahead = travel_mm - at
             return float(start + ahead / speed) if speed > 0 else float(np.inf if ahead > 0 else start)
-        low, high = float(self.starts_s[piece - 1]), float(self.starts_s[piece])
+        start = float(self.starts_s[piece - 1])
+        low, high = 0.0, float(self.starts_s[piece]) - start  # since start: far from 0 a clock has no 1e-9 s
         c0, c1, c2, c3, c4 = self.coefficients[:, piece - 1].tolist()
-        start = low
         while high - low > 1e-9:
-            middle = 0.5 * (low + high)
-            s = middle - start
+            s = 0.5 * (low + high)
             if c0 + s * (c1 + s * (c2 + s * (c3 + s * c4))) >= travel_mm:
-                high = middle
+                high = s
             else:
-                low = middle
-        return high
+                low = s
+        return start + high
 
     def known_at(self, t: float) -> BeltState:
         """What a controller knows at time t, with no look ahead in its speed.
