@@ -21,7 +21,8 @@ HIT_PX = 1.6
 INNER_AT_FIRST = 0.3  # weight of inner edges while the outline is still sought; heights are held then
 INNER_SHARE, INNER_MOST, INNER_WORTH = 0.55, 0.85, 0.6  # more of the inner edges than this speaks for the side up
 PIXEL_SIGMA = 0.25
-DOWN_LIGHTER, DOWN_DARKER, DOWN_SIGMA = 0.92, 0.75, 0.15  # of the height: of the outline of a part turned over
+DOWN_LIGHTER, DOWN_DARKER, DOWN_SIGMA = 0.92, 0.75, 0.12  # of the height: of the outline of a part turned over
+DROP_SIGMA = 0.2  # of the height: how far down a wall is seen where it faces the camera
 LEAST_SCATTER_PX = 0.12
 CORRELATED = 16.0  # neighbouring edge points err together
 
@@ -31,7 +32,8 @@ class Template:
     """A model ready to be laid on images, for one side.
 
     points (n, 6): x, y, nx, ny in the grip frame (mirrored for the side down), grey step, group (0 outline, k inner).
-    heights (g,), sigmas (g,): of the outline where it faces the camera and where away, then of each inner contour.
+    heights (g,), sigmas (g,): of the outline where it faces the camera and where away, then of each inner contour; the
+    first sigma is that of the difference between the first two.
     away (2,): how far the taught points would lie towards the camera's foot for each millimetre that they are higher
     than `heights` says; zero where what is seen is not what was taught.  outline (k, 2): polygon.
     """
@@ -52,11 +54,11 @@ def template_of(model: Model, down: bool) -> Template:
     top = model.height_mm
     if down:
         lighter = float(np.median(model.outline.steps)) < 0.0
-        heights, sigmas = [(DOWN_LIGHTER if lighter else DOWN_DARKER) * top] * 2, [DOWN_SIGMA * top] * 2
+        heights, sigmas = [(DOWN_LIGHTER if lighter else DOWN_DARKER) * top] * 2, [DROP_SIGMA * top, DOWN_SIGMA * top]
         points = points * np.array([1.0, -1.0, 1.0, -1.0, 1.0, 1.0])
     else:
         heights = [model.facing_height_mm, model.outline.height_mm] + [one.height_mm for one in model.inner]
-        sigmas = [model.facing_sigma_mm, model.outline.height_sigma_mm] + [one.height_sigma_mm for one in model.inner]
+        sigmas = [DROP_SIGMA * top if model.turns == 1 else model.facing_sigma_mm, model.outline.height_sigma_mm] + [one.height_sigma_mm for one in model.inner]
     outline = model.outline_mm[::-1] * np.array([1.0, -1.0]) if down else model.outline_mm.copy()
     away = np.zeros(2) if down else model.away.copy()
     return Template(np.ascontiguousarray(points), np.array(heights), np.maximum(np.array(sigmas), 0.02), away,
@@ -138,15 +140,16 @@ def _solve(normal, prior, sigmas, heights, unit, is_round, moved, cov):  # type:
     size = 3 + heights.shape[0]
     matrix = normal[:, :size].copy()
     right = normal[:, size].copy()
-    # the first two heights are held by their mean and by their difference
-    mean = unit / (sigmas[0] * sigmas[0])
-    apart = unit / (sigmas[1] * sigmas[1])
-    off_mean = 0.5 * (prior[0] + prior[1] - heights[0] - heights[1])
-    off_apart = (prior[1] - prior[0]) - (heights[1] - heights[0])
-    for a in range(2):
-        right[3 + a] += 0.5 * mean * off_mean + (2 * a - 1) * apart * off_apart
-        for b in range(2):
-            matrix[3 + a, 3 + b] += 0.25 * mean + (apart if a == b else -apart)
+    # of the first two heights the second is held, and how far the first lies below it
+    top = unit / (sigmas[1] * sigmas[1])
+    drop = unit / (sigmas[0] * sigmas[0])
+    off_drop = (prior[1] - prior[0]) - (heights[1] - heights[0])
+    right[3] -= drop * off_drop
+    right[4] += drop * off_drop + top * (prior[1] - heights[1])
+    matrix[3, 3] += drop
+    matrix[4, 4] += drop + top
+    matrix[3, 4] -= drop
+    matrix[4, 3] -= drop
     for k in range(2, heights.shape[0]):
         hold = unit / (sigmas[k] * sigmas[k])
         matrix[3 + k, 3 + k] += hold

@@ -21,7 +21,7 @@ Grey = NDArray[np.uint8]
 SPACING_MM = 0.8
 LEAST_INNER_MM = 4.0
 MARGIN_PX = 14
-UNKNOWN_TOP, UNKNOWN_SIGMA = 0.55, 0.2  # of the height, where one view cannot tell it
+UNKNOWN_TOP, UNKNOWN_SIGMA = 0.65, 0.22  # of the height, where one view cannot tell it
 UNKNOWN_INNER = 0.85
 
 
