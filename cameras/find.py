@@ -27,6 +27,7 @@ MOST_PEAKS = 40
 DEPTH_SHARE = 0.35  # of the depth of a part, what the patch under its middle has at the least
 SLACK_CELLS, BEYOND_CELLS = 3, 24
 TRIED_ON_ONE, TRIED_ON_MORE = 6, 5
+LEAST_INNER = 0.4  # share of inner edges without which nothing says that a part lies the right side up
 ROUND_DOWN = 0.1  # more of a circle must be found where nothing but a circle is known
 LEAST_ROUGH = 0.64  # score of a rough placement worth fitting
 PROMISING = 0.45
@@ -177,6 +178,8 @@ class PartFinder:
                        PROMISING)  # fmt: skip
         least_share = self.least_score + (ROUND_DOWN if kind.template.round and kind.down else 0.0)
         if fit is None or fit.outline_share < least_share:
+            return None
+        if kind.model.mirrored_alike and not kind.down and fit.inner_share < LEAST_INNER:
             return None
         rows, columns = grey.shape
         low, high = fit.polygon_px.min(axis=0), fit.polygon_px.max(axis=0)

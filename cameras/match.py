@@ -58,7 +58,8 @@ def template_of(model: Model, down: bool) -> Template:
         points = points * np.array([1.0, -1.0, 1.0, -1.0, 1.0, 1.0])
     else:
         heights = [model.facing_height_mm, model.outline.height_mm] + [one.height_mm for one in model.inner]
-        sigmas = [DROP_SIGMA * top if model.turns == 1 else model.facing_sigma_mm, model.outline.height_sigma_mm] + [one.height_sigma_mm for one in model.inner]
+        drop = DROP_SIGMA * top if model.turns == 1 else model.facing_sigma_mm
+        sigmas = [drop, model.outline.height_sigma_mm] + [one.height_sigma_mm for one in model.inner]
     outline = model.outline_mm[::-1] * np.array([1.0, -1.0]) if down else model.outline_mm.copy()
     away = np.zeros(2) if down else model.away.copy()
     return Template(np.ascontiguousarray(points), np.array(heights), np.maximum(np.array(sigmas), 0.02), away,

@@ -87,7 +87,7 @@ def teach(grey: Grey, camera: CameraMap, surface_mm: float, taught: Taught, file
         polygon, outline = polygon - off, replace(outline, points_mm=outline.points_mm - off)
         inner = tuple(replace(one, points_mm=one.points_mm - off) for one in inner)
         shift = frame.turn @ off
-    mirrored = alike_under_turn(polygon, polygon * np.array([1.0, -1.0]), mirrored=True)
+    mirrored = taught.turns == 0 or alike_under_turn(polygon, polygon * np.array([1.0, -1.0]), mirrored=True)
     edge_mm = SPACING_MM * sum(len(one.steps) for one in inner)
     told = not mirrored or edge_mm > 0.15 * SPACING_MM * len(outline.steps)
     return Model(taught.part, taught.height_mm, taught.turns, turns_seen(polygon), told, mirrored, polygon,
