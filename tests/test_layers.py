@@ -38,7 +38,7 @@ pipeline.trajectory pipeline.study
 pipeline.fit pipeline.trade_cycle pipeline.reach pipeline.score pipeline.budget
 pipeline.sighted pipeline.reach_plot pipeline.reach_suggest pipeline.error_plot
 pipeline.account pipeline.check pipeline.tables
-pipeline.page
+pipeline.page pipeline.plots
 pipeline.outputs
 pipeline.app
 """

@@ -8,7 +8,7 @@ class Above {
     const [left, bottom, right, top] = scene.view;
     const wide = this.canvas.clientWidth, most = Math.max(window.innerHeight * 0.72, 320);
     const scale = Math.min(wide / (right - left), most / (top - bottom));
-    const height = Math.round((top - bottom) * scale);
+    const height = Math.round((top - bottom) * scale) + 24; // and a strip for the rule
     if (this.canvas.style.height !== `${height}px`) this.canvas.style.height = `${height}px`;
     const { context, width } = fresh(this.canvas, height);
     const aside = (width - (right - left) * scale) / 2;
@@ -78,7 +78,7 @@ class Above {
         sumX += x;
         least = Math.min(least, y);
       }
-      lettered(context, place.name, (2 * sumX) / place.slots.length, least - 16, inks.soft);
+      lettered(context, place.name, (2 * sumX) / place.slots.length, least - 22, inks.soft);
     }
     const hatch = hatching(context, inks.alarm);
     for (const keepout of scene.keepouts) {

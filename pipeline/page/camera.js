@@ -36,7 +36,7 @@ class Camera {
     const frame = scene.frames[this.shown];
     if (!frame) return;
     const { context, width } = fresh(this.canvas), scale = width / frame.size[0];
-    const bright = ["#5cb3ec", "#f0b23c", "#35c79a", "#ff8a4a", "#9ad6f5", "#e09cc4"];
+    const bright = ["#61a9f2", "#f5a240", "#3ac595", "#f36956", "#90cffb", "#e6b2c8"];
     for (const one of frame.found) {
       const ink = one.kind < 0 ? "#dddddd" : bright[scene.kinds[one.kind].colour];
       trace(context, one.at, ([x, y]) => [x * scale, y * scale]);

@@ -21,7 +21,8 @@ def ticks(low: float, high: float, most: int = 6) -> list[float]:
     raw = (high - low) / most
     size = 10.0 ** np.floor(np.log10(raw))
     step = next((s * size for s in STEPS if s * size >= raw), 10 * size)
-    return [round(float(k * step), 10) for k in range(int(np.ceil(low / step - 1e-9)), int(high / step + 1e-9) + 1)]
+    first, last = int(np.ceil(low / step - 1e-9)), int(np.floor(high / step + 1e-9))
+    return [round(k * float(step), 10) for k in range(first, last + 1)]
 
 
 class Frame:

@@ -10,6 +10,7 @@ class Desk {
     this.camera = scene.frames.length ? new Camera(byId("shot"), byId("found"), byId("shot-told")) : null;
     this.timeline = new Timeline(byId("timeline"), byId("overview"));
     byId("camera").hidden = !this.camera;
+    byId("camera").closest(".views").classList.toggle("blind", !this.camera);
     byId("live").hidden = false;
     byId("clock").min = scene.start;
     byId("clock").max = scene.end;
@@ -55,7 +56,15 @@ class Desk {
     byId("clock").setAttribute("aria-valuetext", `${this.t.toFixed(1)} seconds`);
     byId("time").textContent = `${this.t.toFixed(2)} s`;
     byId("now").textContent = this.sentence();
+    byId("next").textContent = this.coming();
     this.numbers();
+  }
+
+  /** The picks after this one. */
+  coming() {
+    const { pick } = doing(this.t);
+    const next = pick < 0 ? [] : scene.picks.slice(pick + 1, pick + 5).map((one) => scene.parts[one.part]);
+    return next.length ? `Then ${next.map((part) => `part ${part.no} (${kindOf(part)})`).join(", ")}.` : "";
   }
 
   sentence() {

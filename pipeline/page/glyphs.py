@@ -1,6 +1,7 @@
 """Kinds told apart by shape and colour: marks for the page, six colours that colour-blind readers can tell apart.
 
-The colours follow Okabe and Ito, Color Universal Design, 2008 (from memory), less black and yellow.
+The style sheet's colours were searched for: 10 units of CIELAB and more between any two as seen with normal, protan and
+deutan sight (the tests say how), and 3 to 1 in contrast with every ground they lie on.
 """
 
 from pipeline.page.markup import Markup, escaped, joined, tag

@@ -29,6 +29,8 @@ def _sentence(subject: Subject) -> str:
     told = f"{picked} of {seen} parts were picked, {figures['picks_per_min']:.1f} a minute."
     if missed:
         reasons = sorted(figures["missed"].items(), key=lambda item: (-item[1], item[0]))
+        if len(reasons) == 1:
+            return f"{told} {missed} {'was' if missed == 1 else 'were'} missed: {words(reasons[0][0])}."
         told += f" {missed} were missed: " + ", ".join(f"{many} {words(reason)}" for reason, many in reasons) + "."
     return told
 
@@ -40,11 +42,12 @@ def words(reason: str) -> str:
 
 def _tiles(subject: Subject) -> Markup:
     figures, run = subject.figures, subject.run
+    reasons = len(figures["missed"])
     cycle = sum(figures.get("cycle_s", {}).values())
     tiles = [
         ("picked", figures["picked"], f"of {figures['parts_seen']} seen"),
         ("picks a minute", f"{figures['picks_per_min']:.1f}", f"over {run.end_s - run.start_s:.1f} s"),
-        ("missed", sum(figures["missed"].values()), f"{len(figures['missed'])} reasons" if figures["missed"] else ""),
+        ("missed", sum(figures["missed"].values()), f"for {reasons} reason" + "s" * (reasons > 1) if reasons else ""),
         ("arm busy", f"{100 * figures['arm_busy']:.0f} %", "of the time"),
         ("mean cycle", f"{cycle:.2f} s" if cycle else "-", "rest to rest"),
         ("joint travel", f"{figures['joint_travel_deg_per_pick']:.0f}°", "J1, J2, J4 a pick"),

@@ -10,7 +10,7 @@ class Markup(str):
 
 
 Child = str | int | float | None
-VOID = frozenset({"meta", "link", "input", "br"})
+VOID = frozenset({"meta", "link", "img", "input", "br"})
 
 
 def escaped(text: object) -> Markup:

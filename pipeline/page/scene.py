@@ -141,4 +141,5 @@ def _view(subject: Subject) -> list[float]:
         low, high = belt["window"] or (-reach, reach)
         shown += [np.array([a * heading + b * left for a in (low - 120, high + 60) for b in belt["across"]])]
     points = np.vstack(shown)
-    return _flat([points.min(axis=0) - 30, points.max(axis=0) + 30])
+    named = np.array([30, 50])  # above a place its name is written
+    return _flat([points.min(axis=0) - 30, points.max(axis=0) + named])

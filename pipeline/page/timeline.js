@@ -159,7 +159,7 @@ function lanesOf(parts) {
   for (const k of order) {
     let lane = free.findIndex((until) => until <= shownFrom(parts[k]));
     if (lane < 0) lane = free.push(0) - 1;
-    free[lane] = shownTo(parts[k]) + 0.1;
+    free[lane] = shownTo(parts[k]);
     lanes[k] = lane;
   }
   return lanes;
