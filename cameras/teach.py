@@ -20,6 +20,7 @@ Grey = NDArray[np.uint8]
 
 SPACING_MM = 0.8
 LEAST_INNER_MM = 4.0
+CHAMFER_PX, CHAMFER_REACH_PX, CHAMFER_STEP = 2.0, 1.2, 0.5  # its step is at least half the edge's
 MARGIN_PX = 14
 UNKNOWN_TOP, UNKNOWN_SIGMA = 0.65, 0.22  # of the height, where one view cannot tell it
 UNKNOWN_INNER = 0.85
@@ -162,7 +163,21 @@ def snapped(grey: Grey, chain: FloatArray) -> tuple[FloatArray, FloatArray]:
         wide = np.concatenate([offset[-2:], offset, offset[:2]])
         offset = np.median(np.lib.stride_tricks.sliding_window_view(wide, 5), axis=1)
         points, steps = points + offset[:, None] * normals, moved[:, 1]
-    return points, steps
+    return _beyond_chamfer(grey, points, steps), steps
+
+
+def _beyond_chamfer(grey: Grey, points: FloatArray, steps: FloatArray) -> FloatArray:
+    """Outline pixels moved on, where a narrow dark chamfer lies between the edge and the belt, to the chamfer's end."""
+    normals = outward(points)
+    profile, found = np.empty(MOST_SAMPLES), np.empty(2)
+    on = np.zeros(len(points))
+    for k, ((u, v), (nu, nv)) in enumerate(zip(points + CHAMFER_PX * normals, normals, strict=True)):
+        least = CHAMFER_STEP * abs(steps[k]) + 3.0
+        edge_along(grey, u, v, nu, nv, CHAMFER_REACH_PX, least, -steps[k], True, profile, found)
+        if found[1] * steps[k] < 0.0:
+            on[k] = CHAMFER_PX + found[0]
+    near = np.lib.stride_tricks.sliding_window_view(np.concatenate([on[-3:], on, on[:3]]), 7)
+    return points + np.median(near, axis=1)[:, None] * normals
 
 
 def _outline(

@@ -49,7 +49,7 @@ def main() -> None:
     found = [seconds(lambda grey: finder.find(grey, camera), grey) for grey in images]
     least = [seconds(floor, grey) for grey in images]
     print(f"find {np.median(found) * 1e3:.1f} ms (longest {max(found) * 1e3:.1f})")
-    print(f"floor {np.median(least) * 1e3:.1f} ms, ratio {np.median(found) / np.median(least):.1f}, {len(images)} frames")
+    print(f"floor {np.median(least) * 1e3:.1f} ms: ratio {np.median(found) / np.median(least):.1f}, {len(images)} rows")
     before = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
     for k in range(FRAMES):
         finder.find(images[k % len(images)], camera)
