@@ -39,7 +39,7 @@ pipeline.fit pipeline.trade_cycle pipeline.reach pipeline.score pipeline.budget
 pipeline.sighted pipeline.reach_plot pipeline.reach_suggest pipeline.error_plot
 pipeline.account pipeline.check pipeline.tables
 pipeline.page pipeline.plots
-pipeline.outputs
+pipeline.outputs pipeline.compare pipeline.sweep pipeline.export pipeline.new_cell
 pipeline.app
 """
 

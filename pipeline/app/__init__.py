@@ -8,7 +8,7 @@ import sys
 
 import typer
 
-from pipeline.app import arm, calibrate, cell, desk, find, replay, score
+from pipeline.app import arm, calibrate, cell, desk, find, replay, score, sweep
 
 app = typer.Typer(
     name="sanderling",
@@ -24,7 +24,7 @@ def _root() -> None:
     """Replay a recording of a conveyor pick cell offline: what can be gripped, in which order, how many a minute."""
 
 
-for module in (cell, calibrate, find, arm, replay, score, desk):
+for module in (cell, calibrate, find, arm, replay, score, desk, sweep):
     module.register(app)
 
 

@@ -9,8 +9,10 @@ from numpy.typing import NDArray
 
 from cameras.faults import InputFault, printable
 from pipeline.policy import MOST_LOOKED_AT
+from pipeline.sweep.case import Case
 from pipeline.sweep.kept import Outcome
 from pipeline.sweep.points import Point
+from pipeline.sweep.resample import arrivals_a_minute
 
 FloatArray = NDArray[np.float64]
 Runner = Callable[[Sequence[Point]], list[Outcome]]
@@ -84,10 +86,10 @@ def greatest_factor(setting: str, lost_below: float, base: Sequence[Point], run:
     each = tuple(bracket.passes for bracket in brackets)
     if 0.0 in each:
         least = min((outcome for outcome in outcomes), key=lambda outcome: float(outcome.figures["lost_share"]))
-        return Answer(setting, np.nan, np.nan, np.nan, each, np.nan, tuple(outcomes), _why_none(setting, least))
+        return _none(setting, each, np.nan, outcomes, _why_none(setting, least))
     if np.inf in [bracket.fails for bracket in brackets]:
         why = f"at {FASTEST:g} times what was recorded still less is lost: give a longer run, with more parts"
-        return Answer(setting, np.nan, np.nan, np.nan, each, float(np.mean(lost)), tuple(outcomes), why)
+        return _none(setting, each, float(np.mean(lost)), outcomes, why)
     return Answer(setting, *mean_interval(each), each, float(np.mean(lost)), tuple(outcomes))
 
 
@@ -102,7 +104,7 @@ def shortest_horizon(within: float, base: Sequence[Point], run: Runner) -> Answe
     outcomes = run([_with(point, "horizon", horizon) for point in base for horizon in horizons])
     picked = np.array([_figures(outcome)["picked"] for outcome in outcomes], float).reshape(len(base), len(horizons))
     if not picked.any():
-        return Answer("horizon", *[np.nan] * 3, (), np.nan, tuple(outcomes), "nothing is picked at any horizon")
+        return _none("horizon", (), np.nan, outcomes, "nothing is picked at any horizon")
     rng = np.random.default_rng(0)
     drawn = picked[rng.integers(len(base), size=(2000, len(base)))].sum(axis=1)
     low, high = np.percentile(_shortest(drawn, within), [2.5, 97.5])
@@ -122,6 +124,15 @@ def mean_interval(values: Sequence[float]) -> tuple[float, float, float]:
     return mean, mean - half, mean + half
 
 
+def in_units(answer: Answer, case: Case) -> str:
+    """The answer in mm/s, parts a minute, or parts."""
+    if answer.setting == "horizon":
+        return f"{answer.value:.0f} parts"
+    if answer.setting == "belt-speed":
+        return f"{answer.value * float(np.ptp(case.travel_mm)) / case.lasts_s:.0f} mm/s on the mean"
+    return f"{answer.value * arrivals_a_minute(case):.1f} parts a minute on the mean"
+
+
 def _shortest(picked: FloatArray, within: float) -> FloatArray:
     """For each row of picks by horizon (n, h): the shortest horizon within a share of the row's best."""
     enough = picked >= (1 - within) * picked.max(axis=1, keepdims=True) - 1e-9
@@ -136,6 +147,10 @@ def _figures(outcome: Outcome) -> dict[str, Any]:
     if outcome.failed:
         raise InputFault("--find", outcome.point.told(), f"failed: {outcome.failed}", "mend that first")
     return outcome.figures
+
+
+def _none(setting: str, each: tuple[float, ...], share: float, outcomes: Sequence[Outcome], why: str) -> Answer:
+    return Answer(setting, np.nan, np.nan, np.nan, each, share, tuple(outcomes), why)
 
 
 def _why_none(setting: str, least: Outcome) -> str:

@@ -9,7 +9,9 @@ from matplotlib.figure import Figure
 
 from cameras.faults import printable
 from cameras.written import written_whole
+from pipeline.sweep.find import Answer
 from pipeline.sweep.kept import Outcome
+from pipeline.sweep.points import Row
 from pipeline.sweep.settings import Value
 from pipeline.sweep.tables import setting_names
 
@@ -34,6 +36,28 @@ def draw_sweep(folder: Path, outcomes: Sequence[Outcome]) -> list[Path]:
     if len(swept) >= 2:
         drawn.append(_saved(folder / "heat.png", (11, 4.6), partial(_heat, done=done, across=swept[0], up=swept[1])))
     return drawn
+
+
+def draw_answers(path: Path, answers: Sequence[tuple[Row, Answer]]) -> None:
+    """Every point that was run for the answers, and the answers with their intervals, as a PNG file."""
+    _saved(path, (8, 4.4), partial(_answers, answers=answers))
+
+
+def _answers(figure: Figure, answers: Sequence[tuple[Row, Answer]]) -> None:
+    ax, setting = figure.subplots(), answers[0][1].setting
+    figure_name, label = PANELS[0] if setting == "horizon" else PANELS[1]
+    for k, (row, answer) in enumerate(answers):
+        at = [float(dict(outcome.point.settings)[setting]) for outcome in answer.outcomes]
+        name = ", ".join(f"{name} {value}" for name, value in row)
+        found = [_figure_of(outcome, figure_name) for outcome in answer.outcomes]
+        dots = ax.scatter(at, found, s=18, marker=MARKS[k % 8], label=_shown(name or "one replay"), alpha=0.8)
+        if not answer.why:
+            ax.axvline(answer.value, color=dots.get_facecolor()[0], lw=1.5)
+            if np.isfinite([answer.low, answer.high]).all():
+                ax.axvspan(answer.low, answer.high, color=dots.get_facecolor()[0], alpha=0.15, lw=0)
+    ax.set(xlabel=setting + (", times what was recorded" if setting != "horizon" else ""), ylabel=label, ylim=(0, None))
+    ax.grid(alpha=0.25)
+    ax.legend(frameon=False, fontsize="small", title="lines: answers, bands: 95 % intervals", title_fontsize="small")
 
 
 def _values(outcomes: Sequence[Outcome], name: str) -> list[Value]:
@@ -99,7 +123,8 @@ def _misses(figure: Figure, done: Sequence[Outcome], name: str) -> None:
 
 def _share(outcomes: Sequence[Outcome], reason: str) -> float:
     seen = sum(outcome.figures["parts_seen"] for outcome in outcomes)
-    return 100.0 * sum(int(outcome.figures["missed"].get(reason, 0)) for outcome in outcomes) / max(seen, 1)
+    missed = sum(int(outcome.figures["missed"].get(reason, 0)) for outcome in outcomes)
+    return 100.0 * missed / max(int(seen), 1)
 
 
 def _heat(figure: Figure, done: Sequence[Outcome], across: str, up: str) -> None:

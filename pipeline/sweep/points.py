@@ -12,6 +12,7 @@ from cameras.faults import InputFault, printable
 from pipeline.sweep.case import digest
 from pipeline.sweep.settings import COMMAND_LINE, Value, check_name
 
+Row = tuple[tuple[str, Value], ...]  # settings by name
 MOST_POINTS = 1_000_000
 MOST_BYTES = 4 * 1024 * 1024
 
@@ -24,7 +25,7 @@ class Point:
     """
 
     recording: int
-    settings: tuple[tuple[str, Value], ...]
+    settings: Row
     seed: int | None = None
     length_s: float = 0.0
 
@@ -38,14 +39,14 @@ class Point:
         return ", ".join([f"{name} {value}" for name, value in self.settings] + seed) or "as it is"
 
 
-def grid(values: Mapping[str, Sequence[Value]]) -> list[tuple[tuple[str, Value], ...]]:
+def grid(values: Mapping[str, Sequence[Value]]) -> list[Row]:
     """Every combination of the values of each setting, the last one changing fastest."""
     if math.prod(len(one) for one in values.values()) > MOST_POINTS:
         raise InputFault(COMMAND_LINE, "", f"more than {MOST_POINTS} points", "give fewer values")
     return [tuple(zip(values, row, strict=True)) for row in itertools.product(*values.values())]
 
 
-def points_of(settings: Iterable[tuple[tuple[str, Value], ...]], recordings: int, seeds: Sequence[int] = (),
+def points_of(settings: Iterable[Row], recordings: int, seeds: Sequence[int] = (),
               length_s: float = 0.0) -> list[Point]:
     """A point for each of the settings, recordings and seeds; no seeds: parts arrive as recorded."""
     drawn: Sequence[int | None] = seeds or (None,)
@@ -69,7 +70,7 @@ def parsed(text: str) -> tuple[str, list[Value]]:
     return name, values
 
 
-def read_settings(path: Path) -> list[tuple[tuple[str, Value], ...]]:
+def read_settings(path: Path) -> list[Row]:
     """Settings from a TOML file: `[set]` with a list or {from, to, steps} a setting is a grid; `[[points]]` a list.
 
     Raises InputFault naming file and key.

@@ -79,6 +79,14 @@ def spread(case: Case, rate: float) -> Case:
     return _told(case, replace(recorded, donor=order), laid, _until_gone(case, laid, case.lasts_s, 0))
 
 
+def arrivals_a_minute(case: Case) -> float:
+    """How many parts came a minute, on the mean, while any did."""
+    if case.cell.belt is None:
+        return 60.0 * len(case.parts) / (case.lasts_s * len(case.recording) / (len(case.recording) - 1))
+    speed_mm_s = float(np.ptp(case.travel_mm)) / case.lasts_s
+    return 60.0 * speed_mm_s / float(arrivals_of(case).gap_mm.mean())
+
+
 def arrivals_of(case: Case) -> Arrivals:
     """What came in a recording. Raises InputFault where fewer than two parts did."""
     if len(case.parts) < 2 or len(case.recording) < 3:

@@ -161,7 +161,7 @@ def _put_key(raw: Raw, name: str, value: Value) -> None:
         else:
             raise KeyError(last)
     except (KeyError, ValueError, IndexError, TypeError):
-        raise _fault(name, "the cell has no such key", "write its path, as motion.grasp_s or places.0.yaw_deg") from None
+        raise _fault(name, "the cell has no such key", "write its path, as motion.grasp_s, places.0.yaw_deg") from None
 
 
 def _fault(name: str, fault: str, remedy: str) -> InputFault:

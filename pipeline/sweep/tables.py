@@ -1,9 +1,13 @@
-"""sweep.csv: a row for every point."""
+"""sweep.csv: a row for every point. find.json: answers to a question."""
 
+import json
+import math
 from collections.abc import Sequence
 from pathlib import Path
 
+from pipeline.sweep.find import Answer
 from pipeline.sweep.kept import Outcome
+from pipeline.sweep.points import Row
 from pipeline.tables import write_rows
 
 FIGURES = ("parts_seen", "had", "picked", "lost", "lost_share", "picks_per_min", "duration_s", "arm_busy", "waiting",
@@ -31,3 +35,15 @@ def write_sweep(path: Path, outcomes: Sequence[Outcome], recordings: Sequence[st
                 *missed, decide["median"], decide["max"], outcome.failed]
 
     write_rows(path, ",".join(header), map(row, outcomes))
+
+
+def write_answers(path: Path, answers: Sequence[tuple[Row, Answer]]) -> None:
+    """An object for each of the settings the question was asked with; null where there is no answer or no end."""
+    told = [{"with": dict(row), "setting": answer.setting, "value": _finite(answer.value), "low": _finite(answer.low),
+             "high": _finite(answer.high), "each": [_finite(value) for value in answer.each],
+             "share": _finite(answer.share), "why": answer.why} for row, answer in answers]  # fmt: skip
+    path.write_text(json.dumps(told, indent=1, ensure_ascii=False, allow_nan=False) + "\n", encoding="utf-8")
+
+
+def _finite(value: float) -> float | None:
+    return value if math.isfinite(value) else None
