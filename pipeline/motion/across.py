@@ -25,7 +25,10 @@ SETTLED_S = 1e-7
 MOST_S = 60.0
 SEARCHES, PATIENCE = 60, 40  # after so many steps any meeting will do
 
-TOGETHER, APART_J1, APART_J2 = range(3)  # all joints in time with each other, or one of them in its own least time
+# all joints in time with each other, or one of them in its own least time: next to the resting end, or to the part's end
+TOGETHER, J2_BY_REST, J2_BY_PART, J1_BY_REST, J1_BY_PART = range(5)
+SHAPES = (TOGETHER, J2_BY_REST, J2_BY_PART, J1_BY_REST, J1_BY_PART)
+_APART = {J2_BY_REST: 1, J2_BY_PART: 1, J1_BY_REST: 0, J1_BY_PART: 0}
 
 State = tuple[FloatArray, FloatArray, FloatArray]  # position, speed, acceleration of J1, J2, J4, each (3,)
 
@@ -48,17 +51,56 @@ class Across:
         self._ask = _asking(3, self._limits)
         self._asks = [_asking(1, self._limits[:, k:k + 1]) for k in range(3)]
 
-    def between(self, start: State, end: State, least_s: float = 0.0, shape: int = TOGETHER) -> Way:
+    def between(self, start: State, end: State, least_s: float = 0.0, shape: int = TOGETHER,
+                part_last: bool = True) -> Way:
         """The quickest move from one state to another that takes no less than least_s; raises MotionFault.
 
-        One of the two states must be at rest. APART_J1, APART_J2: that joint moves in its own least time, next to the
-        moving end; it takes another way past what stands there, in the same time.
+        One of the two states must be at rest; part_last says at which end the part is. Another shape than TOGETHER
+        takes another way past what stands there, in the same time where it can.
         """
         trajectory = self._together(start, end, least_s)
-        duration = max(least_s, *trajectory.independent_min_durations)
+        duration = max(least_s, self._least(trajectory, start, end, shape, part_last))
         if shape == TOGETHER and trajectory.duration <= duration + EXACT_S:
             return Way(trajectory.duration, curves_of(trajectory, 0.0, (1.0, 1.0, 1.0)))
-        return Way(duration, tuple(self._one(k, start, end, duration, apart=k == shape - 1) for k in range(3)))
+        apart = _APART.get(shape, -1)
+        curves = [self._one(k, start, end, duration, k == apart) for k in range(3)]
+        if shape in (J2_BY_REST, J1_BY_REST):
+            curves[apart] = self._by_rest(apart, start, end, part_last)[1](duration)
+        return Way(duration, tuple(curves))
+
+    def _least(self, together: ruckig.Trajectory, start: State, end: State, shape: int, part_last: bool) -> float:
+        """Least time of a way of some shape."""
+        least = max(together.independent_min_durations)
+        if shape in (J2_BY_REST, J1_BY_REST):
+            least = max(least, self._by_rest(_APART[shape], start, end, part_last)[0])
+        return float(least)
+
+    def _by_rest(self, k: int, start: State, end: State, part_last: bool) -> tuple[float, Callable[[float], Curve]]:
+        """One joint that makes its way next to its resting end: the least time, and the curve for a longer one.
+
+        Beside the part it stops from, or gathers, the speed of following. A way that ends at the part is one that
+        begins there, read backwards.
+        """
+        here, there = (end, start) if part_last else (start, end)
+        position, speed, accel = (float(x[k]) for x in here)
+        state = (position, -speed if part_last else speed, accel)
+        ask, stop, way = self._asks[k], ruckig.Trajectory(1), ruckig.Trajectory(1)
+        ask.control_interface = ruckig.ControlInterface.Velocity
+        rest = np.zeros(1)
+        first = (np.array([state[0]]), np.array([state[1]]), np.array([state[2]]))
+        _solve(self._alone, ask, first, (rest, rest, rest), 0.0, stop)
+        ask.control_interface = ruckig.ControlInterface.Position
+        stopped = curves_of(stop, 0.0, (1.0,))[0]
+        standing = np.array([stopped.state(stopped.end_s)[0]])
+        _solve(self._alone, ask, (standing, rest, rest), (there[0][k:k + 1], rest, rest), 0.0, way)
+
+        def curve(duration: float) -> Curve:
+            begin = duration - way.duration
+            made = Curve.joined([stopped, Curve.held(float(standing[0]), stopped.end_s, begin),
+                                 curves_of(way, begin, (1.0,))[0]])
+            return made.backwards() if part_last else made
+
+        return stop.duration + way.duration + 2 * EXACT_S, curve
 
     def meet(self, start: State, from_s: float, target: Callable[[float], State | None],
              least_s: float = 0.0, shape: int = TOGETHER) -> Way | None:
@@ -76,7 +118,7 @@ class Across:
             if end is None:
                 return None
             least = flip_time(float(start[0][1]), float(end[0][1]), self._singular)
-            needed = max(least_s, least, *self._together(start, end, 0.0).independent_min_durations)
+            needed = max(least_s, least, self._least(self._together(start, end, 0.0), start, end, shape, True))
             if needed > MOST_S:
                 return None
             spare = wanted - needed
@@ -92,12 +134,12 @@ class Across:
 
     def _one(self, k: int, start: State, end: State, duration: float, apart: bool) -> Curve:
         """One joint, in exactly that time: stretched, or (apart, or where it must) in its least time beside a rest."""
-        first, last = (tuple(x[k:k + 1] for x in state) for state in (start, end))
+        first, last = ((x[k:k + 1], v[k:k + 1], a[k:k + 1]) for x, v, a in (start, end))
         trajectory = ruckig.Trajectory(1)
-        _solve(self._alone, self._asks[k], first, last, duration, trajectory)  # type: ignore[arg-type]
+        _solve(self._alone, self._asks[k], first, last, duration, trajectory)
         if not apart and trajectory.duration <= duration + EXACT_S:
             return curves_of(trajectory, 0.0, (1.0,))[0]
-        _solve(self._alone, self._asks[k], first, last, 0.0, trajectory)  # type: ignore[arg-type]
+        _solve(self._alone, self._asks[k], first, last, 0.0, trajectory)
         spare = duration - trajectory.duration
         if spare <= EXACT_S:
             return curves_of(trajectory, 0.0, (1.0,))[0]

@@ -40,6 +40,13 @@ class Curve:
         p, v, a, j = self.coefficients[k].tolist()
         return p + x * (v + x * (a + x * j)), v + x * (2 * a + 3 * x * j), 2 * a + 6 * x * j
 
+    def backwards(self) -> "Curve":
+        """The same curve read backwards, over the same time."""
+        x, (p, v, a, j) = self.span, self.coefficients.T
+        ends = np.column_stack([p + x * (v + x * (a + x * j)), -(v + x * (2 * a + 3 * x * j)), a + 3 * x * j, -j])
+        first = float(self.start_s[0])
+        return Curve((first + self.end_s - self.start_s - x)[::-1], ends[::-1], self.end_s)
+
     @property
     def span(self) -> FloatArray:
         """Durations of the pieces (m,)."""

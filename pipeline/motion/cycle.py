@@ -228,7 +228,7 @@ class Mover:
             least = flip_time(float(place_joints[1]), float(state[0][1]), self.singular)
             if not np.isfinite(least):
                 return None
-            move = self.across.between(state, at_rest(place_joints), least, shape)
+            move = self.across.between(state, at_rest(place_joints), least, shape, part_last=False)
             needed = lift.rise_s(move.duration)
             if needed <= rise + SETTLED_S:
                 break
