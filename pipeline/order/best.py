@@ -15,8 +15,8 @@ from pipeline.order.tour import improve_round
 
 QUICK = 1000  # labels of each size a first search may keep
 SMALL = 14  # items for which the exact search needs no limit
-LABELS = 300_000  # of larger ones: what the exact search may keep, over all sizes
-KICKS, ROUNDS = 300_000, 2_000_000  # over the number of items: how long is improved
+LABELS, MADE = 300_000, 2_000_000  # of larger ones: what the exact search may keep and make, over all sizes
+KICKS, ROUNDS = 250_000, 3_000_000  # over the number of items: how long is improved
 BEATS = 8  # between which the clock is looked at
 SAME = 1e-9
 
@@ -125,12 +125,12 @@ def _round(task: Task, seed: int, until: float) -> _Best:
     """Nothing is ever late: a round through all, its way back free where the order is open."""
     n = len(task.go)
     cost = np.where(np.eye(n, dtype=bool), np.inf, task.cost)
-    near = np.ascontiguousarray(np.argsort(cost, axis=1, kind="stable")[:, : min(10, n - 1)])
-    warmth = float(np.median(cost.min(axis=1)))
+    near = np.ascontiguousarray(np.argsort(cost, axis=1, kind="stable")[:, : min(12, n - 1)])
+    warmth = 2.0 * float(np.median(cost.min(axis=1)))
     tour = _nearest_next(cost)
     value = improve_round(task.cost, near, tour, 0.0, 0, seed, 0.0)
     bound = round_bound(task.cost, value, task.unit)
-    for beat in range(BEATS):
+    for beat in range(BEATS if n > SMALL + 1 else 1):
         if value <= bound + SAME * abs(value) or (beat and perf_counter() > until):
             break
         value = improve_round(task.cost, near, tour, bound, KICKS // BEATS // n, seed + beat, warmth)
@@ -174,13 +174,16 @@ def _improved(task: Task, best: _Best, target: float, beats: int, seed: int, unt
 
 def _searched(task: Task, best: _Best, width: int, until: float) -> tuple[_Best, float, bool]:
     """The best of the exact search, a bound on orders that do everything, and whether nothing was left out."""
-    found = search(task, strict=True, width=width, upper=best.value if best.whole else np.inf, until=until)
+    made = MADE if len(task.go) - 1 > SMALL else np.inf
+    found = search(task, strict=True, width=width, upper=best.value if best.whole else np.inf, most_made=made,
+                   until=until)
     if found.nodes is not None:
         best = best.or_better(_Best(found.nodes, 0.0, found.value))
     if best.whole or (found.cut and width <= QUICK):
         return best, found.floor if best.whole else 0.0, best.whole and not found.cut
     apart = float(np.median(task.go[np.isfinite(task.go)]))
-    found = search(task, strict=False, width=width, most_lost=best.lost, bend=apart / task.weight.max(), until=until)
+    found = search(task, strict=False, width=width, most_lost=best.lost, bend=apart / task.weight.max(),
+                   most_made=made, until=until)
     if found.nodes is not None:
         best = best.or_better(_Best(found.nodes, found.lost, found.value))
     return best, 0.0, not found.cut

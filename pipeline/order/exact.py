@@ -31,12 +31,13 @@ class Found:
 
 def search(
     task: Task, *, strict: bool, width: int, upper: float = np.inf, most_lost: float = 0.0, bend: float = 0.0,
-    until: float | None = None,
+    most_made: float = np.inf, until: float = np.inf,
 ) -> Found:
     """Search all orders, or as many as `width` labels for each size of the rest allow.
 
     strict: every item must be done, and only orders below `upper` are sought; else orders that lose at most
-    `most_lost` of the weight. until: clock reading (perf_counter) after which no further bucket is begun.
+    `most_lost` of the weight. most_made: labels to make about in all; where they run out too early, `width` is halved.
+    until: clock reading (perf_counter) after which no further bucket is begun.
     """
     n = len(task.go) - 1
     nodes = _nodes(task, strict)
@@ -49,7 +50,9 @@ def search(
     limit, gone = _limits(task)
     _plant(pool, buckets, nodes, limit, gone, task)
     for bucket in range(n, -1, -1):
-        if until is not None and perf_counter() > until:
+        if 1.5 * n * state["made"] > most_made * (1.5 * n - bucket) and rules["width"] > 50:
+            rules["width"] //= 2
+        if perf_counter() > until:
             _abandon(pool, buckets[: bucket + 1], state)
             break
         labels.expand(pool, heads, buckets, counts, nodes, task.go, task.cost, limit, gone, rules, state, bucket)

@@ -10,6 +10,7 @@ legs looked up. 12 parts of 4 grasps: 100,000 states, 2.4 million legs, some mil
 """
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -33,7 +34,7 @@ class PickSequence:
     weight_bound: no sequence picks more; equal to `weight` unless cut.  states: how many were looked at.
     cut: the budget ran out, the sequence is the best found and not proven.
     first_weight, first_finish, first_travel (G,): the best that can follow each first choice (with the choice itself);
-    weight 0 and finish inf where it cannot be the first; None unless asked for.
+    weight 0 and finish inf where it cannot be the first; None unless asked for.  first_nodes: those sequences.
     """
 
     nodes: tuple[int, ...]
@@ -48,6 +49,7 @@ class PickSequence:
     first_weight: FloatArray | None = None
     first_finish: FloatArray | None = None
     first_travel: FloatArray | None = None
+    first_nodes: tuple[tuple[int, ...], ...] = ()
 
 
 @dataclass(frozen=True)
@@ -86,7 +88,7 @@ def best_pick_sequence(
     task = _checked(finish, part_of, by_part, weights, blocked_by, travel, (t_start, t0, dt), budget_states)
     nodes, times, states, cut = _solved(task, -1)
     weight = float(task.set_weight[_picked(task, nodes)])
-    first: dict[str, FloatArray] = {}
+    first: dict[str, Any] = {}
     if alternatives:
         first = _after_each_first(task, by_part)
     chosen = tuple(int(by_part[node]) for node in nodes)
@@ -180,15 +182,17 @@ def _picked(task: _Task, nodes: list[int]) -> int:
     return sum(1 << (int(np.searchsorted(task.begins, node, side="right")) - 1) for node in nodes)
 
 
-def _after_each_first(task: _Task, by_part: IntArray) -> dict[str, FloatArray]:
+def _after_each_first(task: _Task, by_part: IntArray) -> dict[str, Any]:
     weight, finish, travel = np.zeros(len(by_part)), np.full(len(by_part), np.inf), np.full(len(by_part), np.nan)
+    sequences: list[tuple[int, ...]] = [()] * len(by_part)
     for node in range(len(by_part)):
         nodes, times, _, _ = _solved(task, node)
         if nodes:
             at = by_part[node]
             weight[at], finish[at] = task.set_weight[_picked(task, nodes)], times[-1]
             travel[at] = _travelled(task, nodes)
-    return {"first_weight": weight, "first_finish": finish, "first_travel": travel}
+            sequences[at] = tuple(int(by_part[node]) for node in nodes)
+    return {"first_weight": weight, "first_finish": finish, "first_travel": travel, "first_nodes": tuple(sequences)}
 
 
 def _most_weight(task: _Task) -> float:
