@@ -7,15 +7,20 @@ same `Choice` and no more.
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Protocol
+from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from pipeline.legs import LegTimes, Nodes
 
+if TYPE_CHECKING:
+    from pipeline.order.lookahead import PickSequence
+
 FloatArray = NDArray[np.float64]
 TRAVEL_SHARE = 0.06
+MOST_STATES = 2_000_000
+STATES_PER_MS = 8000  # a budget in ms is one of states, so that the same input gives the same answer on any machine
 MOST_LOOKED_AT = 14  # parts: the exact look-ahead doubles its work with each
 
 
@@ -47,8 +52,9 @@ class Choice:
 class Picked:
     """The grasp chosen, and how good the choice is.
 
-    nodes: the whole sequence in view, the chosen one first. weight, finish_s: what it picks, when it ends. weight_bound:
-    no sequence over the same parts picks more. second_weight, second_finish_s: of the best that starts with another part.
+    nodes: the whole sequence in view, the chosen one first. weight, finish_s: what it picks, when it ends (joint travel
+    counted in). weight_bound: no sequence over the same parts picks more. finish_bound_s: none that picks as much ends
+    sooner. states: how many partial sequences were looked at.
     """
 
     node: int
@@ -56,6 +62,8 @@ class Picked:
     weight: float = 0.0
     finish_s: float = np.inf
     weight_bound: float = np.inf
+    finish_bound_s: float = -np.inf
+    states: int = 0
 
 
 class Policy(Protocol):
@@ -100,32 +108,38 @@ class Lookahead:
     part anyway, or two sequences end together, the one that moves less is taken.
     """
 
-    def __init__(self, objective: str = "picks") -> None:
+    def __init__(self, objective: str = "picks", budget_ms: float | None = None) -> None:
         self.by_travel = objective == "travel"
+        self.budget_states = MOST_STATES if budget_ms is None else max(int(budget_ms * STATES_PER_MS), 1)
 
     def choose(self, choice: Choice) -> Picked | None:
         """See Policy."""
+        best = self.best(choice)
+        if not best.nodes:
+            return None
+        sure = -np.inf if best.cut or self.by_travel else best.finish
+        return Picked(best.nodes[0], best.nodes, best.weight, best.finish, best.weight_bound, sure, best.states)
+
+    def best(self, choice: Choice, alternatives: bool = False) -> "PickSequence":
+        """The best sequence; with `alternatives` also the best that starts with each grasp."""
         from pipeline.order.lookahead import best_pick_sequence
 
         times = choice.legs(True)
         rows = np.concatenate([[0], times.start_of])
         travel = choice.travel()
-        best = best_pick_sequence(
-            times.finish[rows] + TRAVEL_SHARE * travel[:, :, None], choice.nodes.part, choice.weights, choice.blocked_by, choice.now_s,
-            float(times.start_s[0]), float(times.start_s[1] - times.start_s[0]),
-            travel=travel if self.by_travel else None,
+        return best_pick_sequence(
+            times.finish[rows] + TRAVEL_SHARE * travel[:, :, None], choice.nodes.part, choice.weights, choice.blocked_by,
+            choice.now_s, float(times.start_s[0]), float(times.start_s[1] - times.start_s[0]),
+            travel=travel if self.by_travel else None, budget_states=self.budget_states, alternatives=alternatives,
         )  # fmt: skip
-        if not best.nodes:
-            return None
-        return Picked(best.nodes[0], best.nodes, best.weight, best.finish, best.weight_bound)
 
 
 POLICIES = ("arrival", "nearest", "lookahead")
 
 
-def policy_named(name: str, objective: str = "picks") -> Policy:
-    """The policy of this name; raises KeyError for a name there is none of."""
+def policy_named(name: str, objective: str = "picks", budget_ms: float | None = None) -> Policy:
+    """The policy of this name, which takes about budget_ms at most; raises KeyError for a name there is none of."""
     made: dict[str, Callable[[], Policy]] = {
-        "arrival": Arrival, "nearest": Nearest, "lookahead": lambda: Lookahead(objective),
+        "arrival": Arrival, "nearest": Nearest, "lookahead": lambda: Lookahead(objective, budget_ms),
     }  # fmt: skip
     return made[name]()
