@@ -55,6 +55,10 @@ class Holds:
         """(h,) elbow of each."""
         return np.array([hold.elbow for hold in self.holds], np.int64)
 
+    def met_from_mm(self, row: int) -> float:
+        """How far along the part must be before this hold can be on it; -inf where anywhere will do."""
+        return -np.inf if self.usable[row, 0] else float(self.along_mm[self.usable[row].argmax()])
+
     def tips(self) -> FloatArray:
         """(h, 3): x, y at counts 0 and yaw of each."""
         return np.array([[*hold.at_mm, hold.yaw] for hold in self.holds]).reshape(-1, 3)

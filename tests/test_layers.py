@@ -30,6 +30,7 @@ pipeline.move_time pipeline.room
 pipeline.finding pipeline.teaching pipeline.follow
 pipeline.motion
 pipeline.grasp pipeline.legs
+pipeline.neighbours
 pipeline.order pipeline.permit pipeline.watch
 pipeline.policy
 pipeline.scene
