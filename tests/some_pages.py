@@ -1,5 +1,6 @@
 """Reports for tests: small streams, with made camera frames or without, written as report.html."""
 
+import json
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -7,6 +8,7 @@ import cv2
 import numpy as np
 from some_streams import Laid, Stream, belt, scattered
 
+from cameras.plane import fit_plane
 from cameras.recording import read_recording
 from cameras.sightings import Sightings
 from pipeline.follow import follow
@@ -68,11 +70,16 @@ def plain(folder: Path, images: bool = False, **changes: object) -> Made:
     laid = [*scattered(4, 11, 90.0), Laid(280.0, -520.0, 20.0, side="down")]
     places = [{"name": "tray", "origin_mm": [-60.0, 260.0, -40.0], "columns": 3, "pitch_mm": [40.0, 0.0],
                "endless": True}]
-    return made(belt(laid, 16.0, 150.0, **{"places": places, **changes}), folder, images=images)
+    cameras = [{"name": "overhead", "calibration": "camera.json"}] if images else []
+    changes = {"places": places, "cameras": cameras, **changes}
+    return made(belt(laid, 16.0, 150.0, **changes), folder, images=images)
 
 
 def _pictures(stream: Stream, folder: Path) -> None:
-    """Grey pictures with a number in each, under the names that frames.csv gives."""
+    """Grey pictures with a number in each, under the names that frames.csv gives; a camera that looks straight down."""
+    pixels = np.array([[0, 0], [319, 0], [0, 239], [319, 239], [160, 120], [80, 60.0]])
+    map_ = fit_plane(pixels, pixels * [1.0, -1.0] + [120.0, -200.0], image_size_px=SIZE_PX)
+    (folder / "camera.json").write_text(json.dumps(map_.document()), encoding="utf-8")
     for k in range(len(stream.times_s)):
         image = np.full((SIZE_PX[1], SIZE_PX[0]), 90, np.uint8)
         cv2.putText(image, str(k), (20, 140), cv2.FONT_HERSHEY_SIMPLEX, 3, 220, 4)

@@ -80,7 +80,7 @@ class Desk {
       told = `Pick ${pick + 1} of ${scene.picks.length}. ${told}`;
     }
     const chosen = scene.parts[this.chosen];
-    return chosen?.why ? `${told} Part ${chosen.no} is missed: ${chosen.why}.` : told;
+    return chosen?.why ? `${told} Part ${chosen.no} is missed, ${chosen.why}.` : told;
   }
 
   numbers() {

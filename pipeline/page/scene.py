@@ -8,6 +8,7 @@ from numpy.typing import ArrayLike
 
 from pipeline.page.drawn import thinned
 from pipeline.page.glyphs import COLOURS, shape_of
+from pipeline.page.head import words
 from pipeline.page.pack import packed
 from pipeline.page.sights import frames
 from pipeline.page.subject import Subject
@@ -93,7 +94,7 @@ def _parts(subject: Subject) -> list[dict[str, Any]]:
             "at": [*_flat(part.xy_mm), round(part.yaw_rad, 4)], "down": int(part.side == "down"),
             "known": _t(subject, window.known_s), "enters": _t(subject, window.enters_s),
             "leaves": _t(subject, window.leaves_s), "pick": subject.pick_of.get(part.number, -1),
-            "why": f"{fate.reason}: {fate.detail}" if fate else "",
+            "why": f"{words(fate.reason)}: {fate.detail}" if fate else "",
         }  # fmt: skip
         if len(part.outline_mm):
             entry["outline"] = _flat(thinned(part.outline_mm))
