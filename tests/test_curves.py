@@ -8,7 +8,7 @@ from hypothesis import strategies as st
 from some_arms import changed
 
 from pipeline.arm import Arm
-from pipeline.motion.across import APART_J1, APART_J2, TURNING, Across, at_rest
+from pipeline.motion.across import J1_BY_PART, J2_BY_PART, TURNING, Across, at_rest
 from pipeline.motion.curve import Curve, curves_of
 from pipeline.motion.flip import flip_time
 from pipeline.motion.lift import Lift, LiftLimits
@@ -119,7 +119,7 @@ def test_a_way_to_a_standing_part_takes_as_long_as_the_closed_form_says() -> Non
         assert way.duration == pytest.approx(needed, abs=1e-9)
 
 
-@pytest.mark.parametrize("shape", [APART_J1, APART_J2])
+@pytest.mark.parametrize("shape", [J1_BY_PART, J2_BY_PART])
 def test_a_joint_apart_takes_another_way_in_the_same_time(shape: int) -> None:
     cell = changed()
     across = Across(Arm(cell.arm, cell.tool), 0.1)
@@ -129,7 +129,7 @@ def test_a_joint_apart_takes_another_way_in_the_same_time(shape: int) -> None:
     middle = np.array([together.duration / 2])
     differs = [abs(float((a.at(middle) - b.at(middle))[0])) > 1e-3
                for a, b in zip(together.curves, apart.curves, strict=True)]
-    if shape == APART_J2:
+    if shape == J2_BY_PART:
         assert differs[1]
     assert [c.state(apart.duration)[0] for c in apart.curves] == pytest.approx([1.5, 1.0, 2.0])
 

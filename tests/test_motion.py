@@ -13,7 +13,7 @@ from pipeline.arm import Arm
 from pipeline.belt import Belt
 from pipeline.cell import Cell
 from pipeline.grasp import Grasping
-from pipeline.motion.across import APART_J1, APART_J2, TOGETHER, TURNING
+from pipeline.motion.across import SHAPES, TOGETHER, TURNING
 from pipeline.motion.cycle import Cycle, Hold, Mover
 from pipeline.move_time import move_time
 from pipeline.permit import Permit
@@ -85,7 +85,7 @@ def trip(one: Case) -> tuple[np.ndarray, np.ndarray]:
 
 
 @settings(max_examples=25, deadline=None)
-@given(st.integers(0, 10**6), st.sampled_from([TOGETHER, APART_J1, APART_J2]))
+@given(st.integers(0, 10**6), st.sampled_from(SHAPES))
 @example(1, TOGETHER)
 def test_the_part_is_met_and_left_in_place_and_in_speed(seed: int, shape: int) -> None:
     """Both sides of both seams agree within 1e-6 m and 1e-6 m/s, for the tip as for the joints."""
@@ -121,7 +121,7 @@ def test_the_tool_stays_on_the_part_from_meeting_to_leaving(seed: int) -> None:
 
 
 @settings(max_examples=25, deadline=None)
-@given(st.integers(0, 10**6), st.sampled_from([TOGETHER, APART_J1, APART_J2]))
+@given(st.integers(0, 10**6), st.sampled_from(SHAPES))
 def test_every_limit_is_kept_and_nothing_jumps(seed: int, shape: int) -> None:
     """Exactly over the curves' pieces; by differences of 1 ms over the whole trip, J3 and the lane included."""
     one = case(seed, (shape, shape))
@@ -153,7 +153,7 @@ def _differences_within(joints: np.ndarray, limits: object) -> None:
 
 
 @settings(max_examples=25, deadline=None)
-@given(st.integers(0, 10**6), st.sampled_from([TOGETHER, APART_J1, APART_J2]))
+@given(st.integers(0, 10**6), st.sampled_from(SHAPES))
 def test_the_tip_goes_sideways_only_above_the_clear_height(seed: int, shape: int) -> None:
     """Below it, and for the last approach, it is straight over its start, its part (as that moves) or its slot."""
     one = case(seed, (shape, shape))
