@@ -24,7 +24,7 @@ Grey = NDArray[np.uint8]
 
 DEFAULT_SCORE = 0.7
 MOST_PEAKS = 40
-DEPTH_SHARE = 0.35  # of the depth of a part, what the patch under its middle has at the least
+DEPTH_SHARE = 0.5  # of the depth of a part, what the patch under its middle has at the least
 SLACK_CELLS, BEYOND_CELLS = 3, 24
 TRIED_ON_ONE, TRIED_ON_MORE = 6, 5
 LEAST_INNER = 0.4  # share of inner edges without which nothing says that a part lies the right side up

@@ -23,6 +23,7 @@ INNER_SHARE, INNER_MOST, INNER_WORTH = 0.55, 0.85, 0.6  # more of the inner edge
 PIXEL_SIGMA = 0.25
 DOWN_LIGHTER, DOWN_DARKER, DOWN_SIGMA = 0.92, 0.75, 0.12  # of the height: of the outline of a part turned over
 DROP_SIGMA = 0.2  # of the height: how far down a wall is seen where it faces the camera
+STILL_MM, STILL_RAD = 3e-3, 1e-4  # a step this small ends the fit
 LEAST_SCATTER_PX = 0.12
 CORRELATED = 16.0  # neighbouring edge points err together
 
@@ -188,6 +189,8 @@ def settle(  # type: ignore[no-untyped-def]
         pose += moved[:3]
         if reach < 5.0:
             heights += moved[3:]
+        if k > 0 and far < STILL_MM and abs(moved[2]) < STILL_RAD:
+            break
     return _step(image, view, points, taught, pose, heights, prior, last_reach, least, stride, inner, normal, out)
 
 
