@@ -62,7 +62,8 @@ def _budget(subject: Subject, cameras: dict[str, CameraMap]) -> Markup | None:
         budget = error_budget(kind, doubt, finding_mm=float(np.median(seen.sigma_mm[own])),
                               finding_rad=float(np.median(seen.sigma_rad[own])), carry_mm=carry,
                               tolerance_mm=part.grip_tolerance_mm, tolerance_deg=part.grip_tolerance_deg)
-        rows = [[source, mm, deg] for source, mm, deg in budget.rows() if float(mm or 1) or float(deg or 1)]
+        rows = [[source, mm, "-" if part.turns == 0 else deg]  # the yaw of a round part means nothing
+                for source, mm, deg in budget.rows() if float(mm or 1) or float(deg or 1)]
         tables.append(plain_table(f"Error budget: {kind}", [("source", False), ("95 % within mm", True),
                                                             ("95 % within °", True)], rows))  # fmt: skip
     if not tables:

@@ -97,6 +97,7 @@ class Desk {
     this.playing = on;
     byId("play").textContent = on ? "Pause" : "Play";
     byId("play").setAttribute("aria-label", on ? "Pause" : "Play");
+    byId("now").setAttribute("aria-live", on ? "off" : "polite"); // no torrent of words while it plays
     if (!on) return;
     if (this.t >= scene.end) this.t = scene.start;
     let last = performance.now();

@@ -29,7 +29,7 @@ def _views(subject: Subject) -> Markup:
                  tag("figcaption", id_="shot-told"), class_="camera", id_="camera")  # fmt: skip
     joints = tag("dl", *(tag("div", tag("dt", name), tag("dd", "-", id_=f"now-{key}"))
                          for key, name in NUMBERS), class_="joints")  # fmt: skip
-    now = tag("div", tag("p", id_="now", class_="now"), joints, tag("p", id_="next", class_="next"))
+    now = tag("div", tag("p", id_="now", class_="now", aria_live="polite"), joints, tag("p", id_="next", class_="next"))
     return tag("div", above, tag("div", camera, now, class_="beside"), class_="views")
 
 
