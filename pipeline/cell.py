@@ -219,6 +219,7 @@ class OrderCell(Record):
     policy: Name = "lookahead"
     horizon: Annotated[int, Field(strict=True, ge=1, le=64)] = 12
     objective: Literal["picks", "travel"] = "picks"
+    budget_ms: Positive | None = None
 
 
 class Cell(Record):

@@ -1,13 +1,16 @@
 """The folder that a replay writes: tables, summary, pictures, report. Each file is written whole or not at all."""
 
+import json
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
 from cameras.written import written_whole
+from pipeline.decision import Decision, told
 from pipeline.finding import write_overlays
 from pipeline.page import write_page
+from pipeline.plan_graph import write_graph
 from pipeline.replay import Run, Setting
 from pipeline.study import Seen
 from pipeline.tables import summary, write_parts, write_picks, write_summary, write_trajectory
@@ -31,6 +34,19 @@ def write_run(out: Path, seen: Seen, setting: Setting, run: Run, horizon: int, t
     with written_whole(out / "summary.json") as part:
         write_summary(part, figures)
     return figures
+
+
+def write_decision(out: Path, decision: Decision) -> None:
+    """Write a decision: order.json, the graph behind it as order.graphml, and order.png, drawn over the belt."""
+    from pipeline.plots.decision import plot_decision
+    from pipeline.plots.written import saved
+
+    with written_whole(out / "order.json") as part:
+        text = json.dumps(told(decision), indent=1, ensure_ascii=False, allow_nan=False)
+        part.write_text(text + "\n", encoding="utf-8")
+    with written_whole(out / "order.graphml") as part:
+        write_graph(part, decision)
+    saved(plot_decision(decision), out / "order.png")
 
 
 def _more(seen: Seen, run: Run) -> dict[str, Any]:

@@ -19,7 +19,7 @@ from cameras.sightings import Sightings
 from pipeline.cell import Cell
 from pipeline.finding import calibration_of, found_in
 from pipeline.follow import Followed, follow
-from pipeline.policy import MOST_LOOKED_AT, POLICIES, policy_named
+from pipeline.policy import MOST_LOOKED_AT, POLICIES, Policy, policy_named
 from pipeline.replay import LEAST_SCORE, Run, Setting, replay, replay_ahead
 
 FloatArray = NDArray[np.float64]
@@ -99,12 +99,18 @@ def outlines(cell: Cell) -> dict[str, FloatArray | float]:
     return found
 
 
-def run(setting: Setting, order: str, horizon: int, tick: Callable[[float], None] = lambda now: None) -> Run:
-    """Replay under one order. Raises InputFault for an order there is none of."""
+def policy_of(setting: Setting, order: str, budget_ms: float = 0.0) -> Policy:
+    """The policy of an order; budget_ms bounds a decision, 0: the cell's. Raises InputFault for an unknown order."""
     if order not in POLICIES:
         raise InputFault(setting.cell.file, "order", f"{printable(order)!r} is not an order",
                          f"write {', '.join(POLICIES[:-1])} or {POLICIES[-1]}")
-    policy = policy_named(order, setting.cell.order.objective)
+    return policy_named(order, setting.cell.order.objective, budget_ms or setting.cell.order.budget_ms)
+
+
+def run(setting: Setting, order: str, horizon: int, tick: Callable[[float], None] = lambda now: None,
+        budget_ms: float = 0.0) -> Run:
+    """Replay under one order. Raises InputFault for an order there is none of."""
+    policy = policy_of(setting, order, budget_ms)
     if order == "lookahead":
         return replay_ahead(setting, policy, order, min(horizon, MOST_LOOKED_AT), tick)
     return replay(setting, policy, order, horizon, tick)

@@ -38,8 +38,8 @@ pipeline.replay
 pipeline.trajectory pipeline.study
 pipeline.fit pipeline.trade_cycle pipeline.reach pipeline.score pipeline.budget
 pipeline.sighted pipeline.reach_plot pipeline.reach_suggest pipeline.error_plot
-pipeline.account pipeline.check pipeline.tables
-pipeline.page pipeline.plots
+pipeline.account pipeline.check pipeline.tables pipeline.decision
+pipeline.plan_graph pipeline.page pipeline.plots
 pipeline.outputs pipeline.compare pipeline.sweep pipeline.export pipeline.new_cell
 pipeline.app
 """

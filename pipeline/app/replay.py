@@ -8,6 +8,7 @@ import typer
 from pipeline.app.shown import progress, show_table
 
 if TYPE_CHECKING:
+    from pipeline.decision import Decision
     from pipeline.replay import Run
     from pipeline.study import Seen
 
@@ -25,6 +26,7 @@ Order = Annotated[str, typer.Option(help="arrival, nearest or lookahead; otherwi
 Detections = Annotated[Path | None, typer.Option(help="Detections made elsewhere, in pixels, instead of images.")]
 Located = Annotated[Path | None, typer.Option(help="Poses made elsewhere, in the cell frame, instead of images.")]
 Horizon = Annotated[int, typer.Option(min=0, help="Parts looked at together; 0: the cell's.")]
+Budget = Annotated[float, typer.Option(min=0, help="Ms that one decision may take, about; 0: the cell's, or no limit.")]
 LeastScore = Annotated[float, typer.Option(min=0, max=1, help="Parts found with less are not picked.")]
 
 
@@ -33,6 +35,7 @@ def replay(
         bool, typer.Option("--trajectory", help="Also write the joints every 4 ms.")] = False,
     detections: Detections = None, located: Located = None, horizon: Horizon = 0, least_score: LeastScore = 0.5,
     overlays: Annotated[bool, typer.Option(help="Write each image with what was found drawn on it.")] = True,
+    budget_ms: Budget = 0.0,
 ) -> None:
     """Replay a recording: find, follow, filter, order, time and simulate; write tables, pictures and a report.
 
@@ -46,8 +49,9 @@ def replay(
     seen = _seen(whole, recording, detections, located)
     chosen = setting(seen, least_score)
     order, horizon = order or whole.order.policy, horizon or whole.order.horizon
-    done = run(chosen, order, horizon, _clock(seen))
-    figures = write_run(out, seen, chosen, done, horizon, trajectory, overlays and detections is None and located is None)
+    done = run(chosen, order, horizon, _clock(seen), budget_ms)
+    drawn = overlays and detections is None and located is None
+    figures = write_run(out, seen, chosen, done, horizon, trajectory, drawn)
     _tell(done, figures)
     print(f"-> {out}")
 
@@ -56,28 +60,54 @@ def plan(
     recording: Recorded, cell: CellFile, out: Out,
     frame: Annotated[int, typer.Option(help="Number of the image in frames.csv.")],
     order: Order = "", detections: Detections = None, located: Located = None, horizon: Horizon = 0,
-    least_score: LeastScore = 0.5,
+    least_score: LeastScore = 0.5, budget_ms: Budget = 0.0,
 ) -> None:
     """Plan from one image: what can be picked of what it shows, in which order, and what each choice costs.
 
     Example: sanderling plan demo_images/bells --frame 5 --cell demo_images/bells/cell.toml --out out/plan
     """
     from pipeline.cell import load_cell
-    from pipeline.outputs import write_run
-    from pipeline.study import one_frame, run, setting
+    from pipeline.decision import first_decision
+    from pipeline.outputs import write_decision, write_run
+    from pipeline.study import one_frame, policy_of, run, setting
 
     whole = load_cell(cell)
     seen = one_frame(whole, recording, _source(detections, located), frame)
     chosen = setting(seen, least_score)
     order, horizon = order or whole.order.policy, horizon or whole.order.horizon
-    done = run(chosen, order, horizon)
+    done = run(chosen, order, horizon, budget_ms=budget_ms)
+    decision = first_decision(chosen, policy_of(chosen, order, budget_ms), horizon, done)
     figures = write_run(out, seen, chosen, done, horizon, True, detections is None and located is None)
     show_table("Plan", ("pick", "part", "at", "decided s", "gripped s", "released s", "to", "elbow"),
                [(n, pick.part.kind, f"{pick.part.xy_mm[0]:.1f}, {pick.part.xy_mm[1]:.1f}", f"{pick.decided_s:.2f}",
                  f"{pick.cycle.grasp_start_s:.2f}", f"{pick.cycle.release_end_s:.2f}", f"{pick.place} {pick.slot + 1}",
                  ("right", "left")[pick.cycle.hold.elbow]) for n, pick in enumerate(done.picks, 1)])  # fmt: skip
+    if decision is not None:
+        write_decision(out, decision)
+        _explain(decision, done.decide_s[0])
     _tell(done, figures)
     print(f"-> {out}")
+
+
+def _explain(decision: "Decision", took_s: float) -> None:
+    """The first decision: what was chosen, what else could have come next, and how good it is at most."""
+    chosen, parts = decision.chosen, {one.part.number: one.part for one in decision.scene.candidates}
+    rows = []
+    for n, sequence in enumerate((chosen, *decision.others), 1):
+        first = parts[decision.part_no(sequence.nodes[0])]
+        weight, time_s = decision.costs(sequence)
+        rows.append((n, f"{first.number} {first.kind}", f"{sequence.weight:g}", f"{sequence.end_s:.3f}",
+                     f"{0 - weight:+g}", f"{time_s:+.3f}", " ".join(str(decision.part_no(n)) for n in sequence.nodes)))
+    show_table("What could come first",
+               ("", "part", "weight", "all done s", "more weight", "more time s", "order, by part"), rows)
+    bound = decision.picked.weight_bound
+    show_table("The first decision", ("", ""), [
+        ("parts, grasps", f"{len(decision.scene.choice.weights)}, {len(decision.scene.choice.nodes)}"),
+        ("weight, at most", f"{chosen.weight:g}, " + (f"{bound:g}" if bound < float("inf") else "not bounded")),
+        ("gap", f"{100 * decision.gap:.2f} %"),
+        ("sequences looked at", decision.picked.states),
+        ("took", f"{1e3 * took_s:.1f} ms"),
+    ])  # fmt: skip
 
 
 def _source(detections: Path | None, located: Path | None):  # type: ignore[no-untyped-def]

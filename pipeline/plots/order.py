@@ -21,14 +21,15 @@ def plot_order(run: Run, setting: Setting, ax: Axes | None = None) -> Axes:
         ax.scatter(at[own, 0], at[own, 1], color=COLOURS[k % len(COLOURS)], marker=MARKS[k % len(MARKS)], label=kind)
     for n, (x, y) in enumerate(at[:NUMBERED].tolist(), 1):
         ax.annotate(str(n), (x, y), xytext=(4, 4), textcoords="offset points", fontsize=7)
-    _surroundings(ax, setting)
+    surroundings(ax, setting)
     ax.set(xlabel="x, mm", ylabel="y, mm", aspect="equal")
     for text in ax.legend(frameon=False).get_texts():
         text.set_parse_math(False)
     return ax
 
 
-def _surroundings(ax: Axes, setting: Setting) -> None:
+def surroundings(ax: Axes, setting: Setting) -> None:
+    """Base, places, keep-outs and window of a cell."""
     base = setting.mover.arm.base_mm
     ax.plot(base[0], base[1], marker="+", markersize=14, color="black")
     for place in setting.grasping.places.values():

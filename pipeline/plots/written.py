@@ -3,6 +3,7 @@
 from collections import Counter
 from pathlib import Path
 
+from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 
 from cameras.written import written_whole
@@ -30,11 +31,12 @@ def write_plots(folder: Path, setting: Setting, run: Run) -> list[Path]:
         drawn["cycle_split"] = plot_cycle_split(split_of(run))
     if loads is not None:
         drawn["joint_loads"] = plot_joint_loads(loads)
-    paths = []
-    for name, ax in sorted(drawn.items()):
-        figure = ax.figure
-        with written_whole(folder / f"{name}.png") as part:
-            if isinstance(figure, Figure):
-                figure.savefig(part, dpi=130, format="png", metadata=PLAIN)
-        paths.append(folder / f"{name}.png")
-    return paths
+    return [saved(ax, folder / f"{name}.png") for name, ax in sorted(drawn.items())]
+
+
+def saved(ax: Axes, path: Path) -> Path:
+    """Write the figure of these axes as PNG; its path."""
+    with written_whole(path) as part:
+        if isinstance(ax.figure, Figure):
+            ax.figure.savefig(part, dpi=130, format="png", metadata=PLAIN)
+    return path
