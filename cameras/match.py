@@ -247,8 +247,9 @@ def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, sta
     worth = outline_share + (0.0 if outline.all() else INNER_WORTH * (min(inner_share, INNER_MOST) - INNER_SHARE))
     polygon = np.empty_like(template.outline)
     outline_pixels(view, template.outline, pose, 0.5 * (heights[0] + heights[1]), polygon)
-    return Fit(pose, heights, float(np.sqrt(unit * 0.5 * (cov[0, 0] + cov[1, 1]))), float(np.sqrt(unit * cov[2, 2])),
-               outline_share, inner_share, worth, polygon)  # fmt: skip
+    sigma_mm, sigma_rad = np.sqrt(unit * 0.5 * (cov[0, 0] + cov[1, 1])), np.sqrt(unit * cov[2, 2])
+    turn_sigma = np.pi if template.round else float(min(sigma_rad, np.pi))
+    return Fit(pose, heights, float(sigma_mm), turn_sigma, outline_share, inner_share, worth, polygon)
 
 
 def _scatter(out: FloatArray) -> float:

@@ -177,7 +177,7 @@ def _beyond_chamfer(grey: Grey, points: FloatArray, steps: FloatArray) -> FloatA
         if found[1] * steps[k] < 0.0:
             on[k] = CHAMFER_PX + found[0]
     near = np.lib.stride_tricks.sliding_window_view(np.concatenate([on[-3:], on, on[:3]]), 7)
-    return points + np.median(near, axis=1)[:, None] * normals
+    return np.asarray(points + np.median(near, axis=1)[:, None] * normals)
 
 
 def _outline(
