@@ -1,8 +1,10 @@
 """Reports for tests: small streams, with made camera frames or without, written as report.html."""
 
 import json
+import re
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import cv2
 import numpy as np
@@ -84,3 +86,10 @@ def _pictures(stream: Stream, folder: Path) -> None:
         image = np.full((SIZE_PX[1], SIZE_PX[0]), 90, np.uint8)
         cv2.putText(image, str(k), (20, 140), cv2.FONT_HERSHEY_SIMPLEX, 3, 220, 4)
         cv2.imwrite(str(folder / f"none-{k}.png"), image)
+
+
+def scene_of(text: str) -> dict[str, Any]:
+    """The data that a page's scripts read."""
+    found = re.search(r'<script type="application/json" id="scene">(.*?)</script>', text, re.DOTALL)
+    assert found
+    return json.loads(found[1])
