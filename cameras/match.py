@@ -25,7 +25,7 @@ DOWN_LIGHTER, DOWN_DARKER, DOWN_SIGMA = 0.92, 0.75, 0.12  # of the height: of th
 DROP_SIGMA = 0.2  # of the height: how far down a wall is seen where it faces the camera
 STILL_MM, STILL_RAD = 3e-3, 1e-4  # a step this small ends the fit
 LEAST_SCATTER_PX = 0.12
-CORRELATED = 16.0  # neighbouring edge points err together
+CORRELATED = 9.0  # neighbouring edge points err together
 
 
 @dataclass(frozen=True)
