@@ -50,7 +50,7 @@ def compare(
     from pipeline.compare import compare as compared
     from pipeline.compare.page import write_compare_page
     from pipeline.compare.plots import draw_compare
-    from pipeline.compare.tables import write_compare
+    from pipeline.compare.tables import figure_rows, write_compare
     from pipeline.study import Source
 
     cells, wanted = [load_cell(path) for path in cell], [one.strip() for one in orders.split(",") if one.strip()]
@@ -61,12 +61,7 @@ def compare(
         write_compare(table, tried)
         write_compare_page(page, tried)
     draw_compare(out, tried)
-    show_table("Compared", ("run", "picks a minute", "picked", "missed", "travel a pick", "waiting", "decide", "gap"), [
-        (one.label, f"{one.figures['picks_per_min']:.1f}", f"{one.figures['picked']} of {one.figures['parts_seen']}",
-         ", ".join(f"{many} {reason}" for reason, many in one.figures["missed"].items()) or "none",
-         f"{one.figures['joint_travel_deg_per_pick']:.0f} deg", f"{one.figures['waiting_s']:.0f} s",
-         f"{one.figures['decide_ms']['median']:.1f} ms",
-         "-" if one.figures["gap"] is None else f"{100 * one.figures['gap']:.2f} %") for one in tried])  # fmt: skip
+    show_table("Compared", ("", *(one.label for one in tried)), figure_rows(tried))
     print(f"-> {out / 'compare.html'}")
 
 

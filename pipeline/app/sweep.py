@@ -162,11 +162,18 @@ def _found(answers: list[tuple["Row", "Answer"]], cases: list["Case"], out: Path
 
 
 def _show(outcomes: list["Outcome"], names: list[str]) -> None:
-    """The first rows of the table."""
-    rows = [(names[one.point.recording], one.point.told(), f"{one.figures['picks_per_min']:.1f}",
+    """The first rows of the table: only columns in which points differ, then figures."""
+    from pipeline.sweep.tables import setting_names
+
+    asked = [("recording", [Path(names[one.point.recording]).name for one in outcomes]),
+             *((name, [str(dict(one.point.settings).get(name, "")) for one in outcomes])
+               for name in setting_names(outcomes)),
+             ("seed", [str(one.point.seed or "") for one in outcomes])]  # fmt: skip
+    shown = [(name, column) for name, column in asked if len(set(column)) > 1]
+    rows = [(*(column[k] for _, column in shown), f"{one.figures['picks_per_min']:.1f}",
              f"{one.figures['picked']} of {one.figures['parts_seen']}", f"{100 * one.figures['lost_share']:.1f} %",
-             f"{100 * one.figures['waiting']:.0f} %") for one in outcomes if not one.failed]  # fmt: skip
-    show_table("Sweep", ("recording", "with", "picks a minute", "picked", "lost", "waiting"), rows[:SHOWN])
+             f"{100 * one.figures['waiting']:.0f} %") for k, one in enumerate(outcomes) if not one.failed]  # fmt: skip
+    show_table("Sweep", (*(name for name, _ in shown), "picks/min", "picked", "lost", "waiting"), rows[:SHOWN])
     if len(rows) > SHOWN:
         print(f"and {len(rows) - SHOWN} more in sweep.csv")
 

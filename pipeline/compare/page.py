@@ -2,7 +2,7 @@
 
 import base64
 import hashlib
-from collections.abc import Sequence
+from collections.abc import Callable, Iterable, Sequence
 from importlib.resources import files
 from pathlib import Path
 
@@ -11,6 +11,7 @@ import numpy as np
 from pipeline.account.phases import SPLIT, split_of
 from pipeline.account.windows import windows_of
 from pipeline.compare.runs import Tried
+from pipeline.compare.tables import figure_rows
 from pipeline.page.charts import Frame, chart, key, stacked
 from pipeline.page.head import words
 from pipeline.page.listings import plain_table
@@ -18,6 +19,8 @@ from pipeline.page.markup import Markup, joined, tag
 from pipeline.page.measures import STYLE
 
 MOST_PARTS = 300
+Best = Callable[[Iterable[float]], float]
+BEST: dict[str, Best] = {"picks a minute": max, "picked": max, "joint travel a pick, °": min}
 STYLES = (("pipeline.page", "page.css"), ("pipeline.page", "desk.css"), ("pipeline.compare", "compare.css"))
 
 
@@ -53,31 +56,16 @@ def _sentence(tried: Sequence[Tried]) -> str:
 
 
 def _figures(tried: Sequence[Tried]) -> Markup:
-    """A row a figure, a column a run; the best of a row is marked where runs differ."""
-    rows = [
-        _row(tried, "picks a minute", "picks_per_min", ".1f", max), _row(tried, "picked", "picked", "d", max),
-        _row(tried, "parts seen", "parts_seen", "d", None),
-        *([f"missed: {words(reason)}", *(str(one.figures["missed"].get(reason, 0)) for one in tried)]
-          for reason in sorted({reason for one in tried for reason in one.figures["missed"]})),
-        _row(tried, "joint travel a pick, °", "joint_travel_deg_per_pick", ".0f", min),
-        _row(tried, "waiting, s", "waiting_s", ".1f", None),
-        _row(tried, "arm busy, of the time", "arm_busy", ".0%", None),
-        ["to decide, median and most, ms",
-         *("{median:.1f}, {max:.1f}".format(**one.figures["decide_ms"]) for one in tried)],
-        _row(tried, "decisions short of their bound by, mean", "gap", ".2%", None),
-        _row(tried, "decisions at their bound", "decisions_best", ".0%", None),
-    ]  # fmt: skip
+    """A row a figure, a column a run; the best of some rows is marked where runs differ."""
+    rows: list[list[str]] = [_marked(row, BEST[row[0]]) if row[0] in BEST else row for row in figure_rows(tried)]
     return plain_table("All runs", [("figure", False), *((one.label, True) for one in tried)], rows)
 
 
-def _row(tried: Sequence[Tried], name: str, figure: str, form: str, best: object) -> list[str]:
-    values = [one.figures[figure] for one in tried]
-    shown = ["-" if value is None else format(value, form) for value in values]
-    if best in (max, min) and len(set(shown)) > 1:
-        top = max(values) if best is max else min(values)
-        shown = [tag("span", text, class_="best") if value == top else text
-                 for text, value in zip(shown, values, strict=True)]
-    return [name, *shown]
+def _marked(row: list[str], best: Best) -> list[str]:
+    if len(set(row[1:])) < 2:
+        return row
+    top = best(float(text) for text in row[1:])
+    return [row[0], *(tag("span", text, class_="best") if float(text) == top else text for text in row[1:])]
 
 
 def _side_by_side(tried: Sequence[Tried]) -> Markup:

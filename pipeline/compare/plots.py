@@ -12,9 +12,12 @@ from cameras.written import written_whole
 from pipeline.account.phases import SPLIT, split_of
 from pipeline.compare.runs import Tried
 from pipeline.compare.tables import reasons_of
+from pipeline.plots.axes import COLOURS, axes_of
+from pipeline.plots.written import PLAIN
 
 FloatArray = NDArray[np.float64]
 HATCHES = ("", "//", "..", "xx", "\\\\", "++", "oo", "--", "**")
+DASHES = ("-", "--", "-.", ":")
 
 
 def draw_compare(folder: Path, tried: Sequence[Tried]) -> list[Path]:
@@ -25,12 +28,12 @@ def draw_compare(folder: Path, tried: Sequence[Tried]) -> list[Path]:
 
 def _picks(figure: Figure, tried: Sequence[Tried]) -> None:
     """Picks so far over time; the steeper, the better."""
-    ax = figure.subplots()
-    for one, dash in zip(tried, _dashes(), strict=False):
+    ax = axes_of(figure.subplots())
+    for k, one in enumerate(tried):
         released = np.sort([pick.cycle.release_end_s for pick in one.run.picks]) - one.run.start_s
         times = np.concatenate([[0.0], released, [one.run.end_s - one.run.start_s]])
         counts = np.concatenate([[0], np.arange(1, len(released) + 1), [len(released)]])
-        ax.step(times, counts, where="post", lw=1.5, ls=dash, label=_shown(one.label))
+        ax.step(times, counts, where="post", lw=1.5, ls=DASHES[k % 4], color=COLOURS[k % 6], label=_shown(one.label))
     ax.set(xlabel="time, s", ylabel="picks so far", ylim=(0, None), xlim=(0, None))
     ax.grid(alpha=0.25)
     ax.legend(frameon=False)
@@ -50,9 +53,10 @@ def _cycle(figure: Figure, tried: Sequence[Tried]) -> None:
 
 def _bars(figure: Figure, tried: Sequence[Tried], amounts: dict[str, FloatArray], label: str) -> None:
     """A stacked bar a run."""
-    ax, at = figure.subplots(), np.zeros(len(tried))
+    ax, at = axes_of(figure.subplots()), np.zeros(len(tried))
     for k, (name, many) in enumerate(amounts.items()):
-        ax.barh(np.arange(len(tried)), many, left=at, label=name, hatch=HATCHES[k % 9], edgecolor="white", lw=0.5)
+        ax.barh(np.arange(len(tried)), many, left=at, label=name, color=COLOURS[k % 6], hatch=HATCHES[k % 9],
+                edgecolor="white", lw=0.5)
         at += many
     ax.set_yticks(np.arange(len(tried)), [_shown(one.label) for one in tried])
     ax.invert_yaxis()
@@ -62,15 +66,11 @@ def _bars(figure: Figure, tried: Sequence[Tried], amounts: dict[str, FloatArray]
         figure.legend(loc="outside lower center", ncols=4, frameon=False, fontsize="small")
 
 
-def _dashes() -> list[str]:
-    return ["-", "--", "-.", ":"] * 250
-
-
 def _saved(path: Path, draw: Callable[[Figure, Sequence[Tried]], None], tried: Sequence[Tried]) -> Path:
     figure = Figure(figsize=(8, 4.2), layout="constrained")
     draw(figure, tried)
     with written_whole(path) as part:
-        figure.savefig(part, dpi=120, format="png")
+        figure.savefig(part, dpi=120, format="png", metadata=PLAIN)
     return path
 
 

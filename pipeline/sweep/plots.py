@@ -9,6 +9,8 @@ from matplotlib.figure import Figure
 
 from cameras.faults import printable
 from cameras.written import written_whole
+from pipeline.plots.axes import COLOURS, MARKS, axes_of
+from pipeline.plots.written import PLAIN
 from pipeline.sweep.find import Answer
 from pipeline.sweep.kept import Outcome
 from pipeline.sweep.points import Row
@@ -16,8 +18,7 @@ from pipeline.sweep.settings import Value
 from pipeline.sweep.tables import setting_names
 
 PANELS = (("picks_per_min", "picks a minute"), ("lost_share", "lost, % of those that can be had"))
-MOST_LINES = 8
-MARKS = "os^Dv<>P"
+MOST_LINES = 6
 
 
 def draw_sweep(folder: Path, outcomes: Sequence[Outcome]) -> list[Path]:
@@ -34,7 +35,8 @@ def draw_sweep(folder: Path, outcomes: Sequence[Outcome]) -> list[Path]:
             drawn.append(_saved(folder / f"missed_{_file(name)}.png", (7, 4.2),
                                 partial(_misses, done=done, name=name)))
     if len(swept) >= 2:
-        drawn.append(_saved(folder / "heat.png", (11, 4.6), partial(_heat, done=done, across=swept[0], up=swept[1])))
+        across, up = sorted(swept, key=lambda name: isinstance(_values(done, name)[0], str))[:2]  # numbers before words
+        drawn.append(_saved(folder / "heat.png", (11, 4.6), partial(_heat, done=done, across=across, up=up)))
     return drawn
 
 
@@ -44,17 +46,18 @@ def draw_answers(path: Path, answers: Sequence[tuple[Row, Answer]]) -> None:
 
 
 def _answers(figure: Figure, answers: Sequence[tuple[Row, Answer]]) -> None:
-    ax, setting = figure.subplots(), answers[0][1].setting
+    ax, setting = axes_of(figure.subplots()), answers[0][1].setting
     figure_name, label = PANELS[0] if setting == "horizon" else PANELS[1]
     for k, (row, answer) in enumerate(answers):
         at = [float(dict(outcome.point.settings)[setting]) for outcome in answer.outcomes]
         name = ", ".join(f"{name} {value}" for name, value in row)
         found = [_figure_of(outcome, figure_name) for outcome in answer.outcomes]
-        dots = ax.scatter(at, found, s=18, marker=MARKS[k % 8], label=_shown(name or "one replay"), alpha=0.8)
+        colour = COLOURS[k % 6]
+        ax.scatter(at, found, s=18, marker=MARKS[k % 6], color=colour, label=_shown(name or "one replay"), alpha=0.8)
         if not answer.why:
-            ax.axvline(answer.value, color=dots.get_facecolor()[0], lw=1.5)
+            ax.axvline(answer.value, color=colour, lw=1.5)
             if np.isfinite([answer.low, answer.high]).all():
-                ax.axvspan(answer.low, answer.high, color=dots.get_facecolor()[0], alpha=0.15, lw=0)
+                ax.axvspan(answer.low, answer.high, color=colour, alpha=0.15, lw=0)
     ax.set(xlabel=setting + (", times what was recorded" if setting != "horizon" else ""), ylabel=label, ylim=(0, None))
     ax.grid(alpha=0.25)
     ax.legend(frameon=False, fontsize="small", title="lines: answers, bands: 95 % intervals", title_fontsize="small")
@@ -84,11 +87,11 @@ def _where(outcomes: Sequence[Outcome], name: str, value: Value) -> list[Outcome
 def _curves(figure: Figure, done: Sequence[Outcome], name: str, by: str | None) -> None:
     """A figure against a setting, a line for each value of another; the band spans seeds, recordings and the rest."""
     for ax, (key, label) in zip(figure.subplots(1, 2), PANELS, strict=True):
-        for mark, (word, line) in zip(MARKS, _lines(done, by), strict=False):
+        for k, (word, line) in enumerate(_lines(done, by)):
             values = [value for value in _values(done, name) if _where(line, name, value)]
             mean, least, most = np.array([_spread(_where(line, name, value), key) for value in values]).T
-            ax.plot(values, mean, marker=mark, ms=4, lw=1.5, label=word)
-            ax.fill_between(values, least, most, alpha=0.15, lw=0)
+            ax.plot(values, mean, marker=MARKS[k % 6], color=COLOURS[k % 6], ms=4, lw=1.5, label=word)
+            ax.fill_between(values, least, most, color=COLOURS[k % 6], alpha=0.15, lw=0)
         ax.set(xlabel=_shown(name), ylabel=label)
         ax.set_ylim(bottom=0)
         ax.grid(alpha=0.25)
@@ -105,14 +108,14 @@ def _lines(done: Sequence[Outcome], by: str | None) -> Iterator[tuple[str, list[
 
 def _misses(figure: Figure, done: Sequence[Outcome], name: str) -> None:
     """Misses by reason, stacked, in % of the parts seen."""
-    ax, values = figure.subplots(), _values(done, name)
+    ax, values = axes_of(figure.subplots()), _values(done, name)
     reasons = sorted({reason for outcome in done for reason in outcome.figures["missed"]})
     bottom = np.zeros(len(values))
     hatches = ("", "//", "..", "xx", "\\\\", "++", "oo", "--", "**")
     for k, reason in enumerate(reasons):
         share = np.array([_share(_where(done, name, value), reason) for value in values])
-        ax.bar(np.arange(len(values)), share, bottom=bottom, label=reason.replace("_", " "), hatch=hatches[k % 9],
-               edgecolor="white", linewidth=0.5)
+        ax.bar(np.arange(len(values)), share, bottom=bottom, label=reason.replace("_", " "), color=COLOURS[k % 6],
+               hatch=hatches[k % 9], edgecolor="white", linewidth=0.5)
         bottom += share
     ax.set_xticks(np.arange(len(values)), [_shown(value) for value in values], rotation=45 if len(values) > 8 else 0)
     ax.set(xlabel=_shown(name), ylabel="missed, % of the parts seen")
@@ -150,7 +153,7 @@ def _saved(path: Path, size: tuple[float, float], draw: Callable[[Figure], None]
     figure = Figure(figsize=size, layout="constrained")
     draw(figure)
     with written_whole(path) as part:
-        figure.savefig(part, dpi=120, format="png")
+        figure.savefig(part, dpi=120, format="png", metadata=PLAIN)
     return path
 
 
