@@ -113,13 +113,13 @@ def ascent(
         else:
             stale += 1
             if stale >= 10:
-                step, stale = step * 0.7, 0
+                step, stale = step * 0.9, 0
         norm = 0.0
         for i in range(size):
             more, extra = out[i] - 1.0, into[i] - 1.0
             if symmetric:
                 more = extra = (more + extra) / 2
-            was_out[i], was_into[i] = 0.7 * more + 0.3 * was_out[i], 0.7 * extra + 0.3 * was_into[i]
+            was_out[i], was_into[i] = 0.5 * more + 0.5 * was_out[i], 0.5 * extra + 0.5 * was_into[i]
             norm += was_out[i] ** 2 + was_into[i] ** 2
         if norm < 1e-12 or step < 1e-4 or best >= upper:
             break
@@ -131,7 +131,7 @@ def ascent(
     return best
 
 
-def round_bound(cost: FloatArray, upper: float, unit: float = 0.0, rounds: int = 1500) -> float:
+def round_bound(cost: FloatArray, upper: float, unit: float = 0.0, rounds: int = 3000) -> float:
     """No round through all N nodes costs less (diagonal not used, inf where there is no leg); `upper`: a known one.
 
     Where costs are whole numbers of a unit so is the least, and the bound is rounded up.

@@ -53,69 +53,74 @@ def leg_finish(table: FloatArray, row: int, node: int, start: float, t0: float, 
     return float(here + (there - here) * share)
 
 
+@compiled("f8(f8[:,::1], i8[::1], f8[::1], f8, i8)")
+def _slowest_kept(earliest: FloatArray, sets: IntArray, set_weight: FloatArray, t_start: float, share: int) -> float:
+    """Seconds a weight up to which a state of these sets goes on, so that about `share` do; inf: all of them."""
+    pace = np.empty(earliest.shape[1] * len(sets))
+    live = 0
+    for s in sets:
+        for a in range(earliest.shape[1]):
+            if earliest[s, a] < NEVER:
+                pace[live] = (earliest[s, a] - t_start) / max(set_weight[s], 1e-300)
+                live += 1
+    return float(np.sort(pace[:live])[share - 1]) if live > share else np.inf
+
+
+@compiled("void(f8[:,:,::1], i8[::1], i8[::1], f8[:,::1], i2[:,::1], f8, f8, f8, i8, i8, i8)")
+def _go_on(
+    table: FloatArray, begins: IntArray, blocked: IntArray, earliest: FloatArray, parent: NDArray[np.int16],
+    start: float, t0: float, dt: float, first: int, s: int, a: int,
+) -> None:
+    """From node a (-1: the start) after set s, free at `start`, to every node that may be next."""
+    steps = table.shape[1]
+    k, part = _placed(start, t0, dt, steps)
+    if k < 0:
+        return
+    here, there = table[a + 1, k], table[a + 1, min(k + 1, steps - 1)]
+    for p in range(len(begins) - 1):
+        if (s >> p) & 1 or (blocked[p] & s) != blocked[p]:
+            continue
+        then = s | (1 << p)
+        for b in range(begins[p], begins[p + 1]):
+            done = here[b] + (there[b] - here[b]) * part
+            if done < earliest[then, b] and (s > 0 or first < 0 or b == first):
+                earliest[then, b] = done
+                parent[then, b] = a
+
+
 @compiled("Tuple((f8[:,::1], i2[:,::1], i8, b1))(f8[:,:,::1], i8[::1], i8[::1], f8[::1], f8, f8, f8, i8, i8)")
 def earliest_finish(
     table: FloatArray, begins: IntArray, blocked: IntArray, set_weight: FloatArray, t_start: float, t0: float,
     dt: float, first: int, budget: int,
 ) -> tuple[FloatArray, NDArray[np.int16], int, bool]:
-    """Earliest finish and the node before, per set and last node; states expanded; whether some were left out.
+    """Earliest finish and the node before, per set and last node; states gone on from; whether some were left out.
 
     Sets go by size. Where a size holds more states than its share of the budget, those with most weight a second go on.
     """
-    m, count, steps = len(begins) - 1, table.shape[2], table.shape[1]
+    m, count = len(begins) - 1, table.shape[2]
     earliest = np.full((1 << m, count), NEVER)
     parent = np.full((1 << m, count), -1, np.int16)
     sizes = np.zeros(1 << m, np.int64)
     for s in range(1, 1 << m):
         sizes[s] = sizes[s >> 1] + (s & 1)
     by_size = np.argsort(sizes, kind="mergesort")
-    part_of = np.empty(count, np.int64)
-    for p in range(m):
-        part_of[begins[p]:begins[p + 1]] = p
-    expanded, cut, at = 0, False, 0
-    while at < len(by_size):
-        end = at
-        live = 0
-        while end < len(by_size) and sizes[by_size[end]] == sizes[by_size[at]]:
-            for a in range(count):
-                live += earliest[by_size[end], a] < NEVER
-            end += 1
-        share = max(budget - expanded, 0) // (m + 1 - sizes[by_size[at]])
-        limit = np.inf
-        if live > max(share, 1):
-            cut = True
-            seconds = np.empty(live)
-            i = 0
-            for s in by_size[at:end]:
-                for a in range(count):
-                    if earliest[s, a] < NEVER:
-                        seconds[i] = (earliest[s, a] - t_start) / max(set_weight[s], 1e-300)
-                        i += 1
-            limit = np.sort(seconds)[max(share, 1) - 1]
-        for s in by_size[at:end]:
-            for a in range(-1, count):
-                if (a < 0) != (s == 0):
-                    continue
-                start = t_start if a < 0 else earliest[s, a]
-                if start >= NEVER or (a >= 0 and (start - t_start) / max(set_weight[s], 1e-300) > limit):
-                    continue
-                expanded += 1
-                k, part = _placed(start, t0, dt, steps)
-                if k < 0:
-                    continue
-                here, there = table[a + 1, k], table[a + 1, min(k + 1, steps - 1)]
-                for p in range(m):
-                    if (s >> p) & 1 or (blocked[p] & s) != blocked[p]:
-                        continue
-                    if s == 0 and first >= 0 and part_of[first] != p:
-                        continue
-                    then = s | (1 << p)
-                    for b in range(begins[p], begins[p + 1]):
-                        done = here[b] + (there[b] - here[b]) * part
-                        if done < earliest[then, b] and (s > 0 or first < 0 or b == first):
-                            earliest[then, b] = done
-                            parent[then, b] = a
+    _go_on(table, begins, blocked, earliest, parent, t_start, t0, dt, first, 0, -1)
+    expanded, cut, end = 1, False, 1
+    for size in range(1, m + 1):
         at = end
+        while end < len(by_size) and sizes[by_size[end]] == size:
+            end += 1
+        share = max((budget - expanded) // (m + 1 - size), 1)
+        slowest = np.inf
+        if share < count * (end - at):
+            slowest = _slowest_kept(earliest, by_size[at:end], set_weight, t_start, share)
+            cut = cut or slowest < np.inf
+        for s in by_size[at:end]:
+            for a in range(count):
+                pace = (earliest[s, a] - t_start) / max(set_weight[s], 1e-300)
+                if earliest[s, a] < NEVER and pace <= slowest:
+                    expanded += 1
+                    _go_on(table, begins, blocked, earliest, parent, earliest[s, a], t0, dt, first, s, a)
     return earliest, parent, expanded, cut
 
 
