@@ -12,7 +12,9 @@ ENDLESS = {"places": [{"name": "tray", "origin_mm": [-60.0, 260.0, -40.0], "colu
                        "pitch_mm": [40.0, 40.0], "endless": True}]}  # fmt: skip
 
 
-def stream(parts: int = 10, gap_mm: float = 80.0, seconds: float = 20.0, speed: float = 100.0, **changes: object) -> Stream:
+def stream(
+    parts: int = 10, gap_mm: float = 80.0, seconds: float = 20.0, speed: float = 100.0, **changes: object
+) -> Stream:
     """Parts on a belt, with a place that is never full."""
     return belt(scattered(4, parts, gap_mm), seconds, speed, **{**ENDLESS, **changes})
 

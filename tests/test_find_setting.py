@@ -48,7 +48,7 @@ def test_the_greatest_factor_is_found_to_one_percent(limits: list[float]) -> Non
 def test_seeds_are_tried_together() -> None:
     """Each step asks all that are still open at once, so that cores stay busy."""
     counts: list[int] = []
-    greatest_factor("belt-speed", 0.01, BASE, losing({k: 1.2 for k in range(1, 6)}, counts))
+    greatest_factor("belt-speed", 0.01, BASE, losing(dict.fromkeys(range(1, 6), 1.2), counts))
     assert set(counts) == {5}
     assert len(counts) < 12
 

@@ -131,9 +131,9 @@ def test_settings_are_read_from_a_file(tmp_path: Path) -> None:
     assert rows[-1] == (("order", "arrival"), ("horizon", 3))
 
 
-@pytest.mark.parametrize("text", ["", "[set]\nwrong = 1", "[set]\nhorizon = []", "[set]\nhorizon = [true]", "nonsense = 1",
-                                  "[set]\nbelt-speed = [nan]", "[set]\nhorizon = {from = 1}", "not toml", "set = 3",
-                                  "[[points]]\nhorizon = [[1]]", "points = [1]"])
+@pytest.mark.parametrize("text", ["", "[set]\nwrong = 1", "[set]\nhorizon = []", "[set]\nhorizon = [true]",
+                                  "nonsense = 1", "[set]\nbelt-speed = [nan]", "[set]\nhorizon = {from = 1}", "not toml",
+                                  "set = 3", "[[points]]\nhorizon = [[1]]", "points = [1]"])
 def test_a_wrong_settings_file_is_refused(tmp_path: Path, text: str) -> None:
     path = tmp_path / "settings.toml"
     path.write_text(text)
@@ -224,7 +224,8 @@ def test_a_cluster_gives_the_same(small: Case, tmp_path: Path) -> None:
     """On a cluster of two workers that the test starts."""
     distributed = pytest.importorskip("distributed")
     points = points_of(grid({"belt-speed": [0.8, 1.2, 1.6], "order": ["arrival", "none"]}), 1)
-    with distributed.LocalCluster(n_workers=2, threads_per_worker=1, processes=False, dashboard_address=None) as cluster:
+    two = {"n_workers": 2, "threads_per_worker": 1, "processes": False, "dashboard_address": None}
+    with distributed.LocalCluster(**two) as cluster:
         far = run_points([small], points, tmp_path / "far", dask=cluster.scheduler_address)
         near = run_points([small], points, tmp_path / "near", jobs=1)
     assert [o.figures.get("picked") for o in far] == [o.figures.get("picked") for o in near]

@@ -88,7 +88,9 @@ def _seen_by_each(cells: Sequence[Cell], folder: Path, source: Source, rows: Row
 
 def _looks(cell: Cell) -> tuple[object, ...]:
     """All of a cell that finding depends on."""
-    cameras = [(camera.name, str(cell.beside(camera.calibration or "").resolve())) for camera in cell.cameras]
-    parts = [(name, str(cell.beside(part.model or "").resolve()), part.height_mm, part.turns)
-             for name, part in cell.parts.items()]  # fmt: skip
+    def file(name: str | None) -> Path | None:
+        return cell.beside(name).resolve() if name else None
+
+    cameras = [(camera.name, file(camera.calibration)) for camera in cell.cameras]
+    parts = [(name, file(part.model), part.height_mm, part.turns) for name, part in cell.parts.items()]
     return tuple(cameras), tuple(parts), cell.surface_mm, cell.belt.counts_modulus if cell.belt else None
