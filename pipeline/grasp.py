@@ -30,10 +30,19 @@ TURNS = np.arange(-2, 3)
 
 @dataclass(frozen=True)
 class Refusal:
-    """Why a part can't be had: one of the reasons of parts.csv, and a sentence with the constraint and its amount."""
+    """Why a part can't be had: one of the reasons of parts.csv, and a sentence with the constraint and its amount.
+
+    remedy: what would have saved it, where that was looked for and one number alone would.
+    """
 
     reason: str
     detail: str
+    remedy: str = ""
+
+    @property
+    def told(self) -> str:
+        """Detail and remedy in one line."""
+        return f"{self.detail}; {self.remedy}" if self.remedy else self.detail
 
 
 @dataclass(frozen=True)
@@ -88,6 +97,7 @@ class Grasping:
         heading = np.radians(cell.belt.heading_deg) if cell.belt else 0.0
         self.heading = np.array([np.cos(heading), np.sin(heading)])
         self.lane_mm = self._lane()
+        self._inside = self._in_window()
 
     def _lane(self) -> FloatArray:
         """Distances along the heading at which a passing part is looked at."""
@@ -98,6 +108,13 @@ class Grasping:
         middle = float(self.arm.base_mm[:2] @ self.heading)
         low, high = belt.window_mm or (middle - reach, middle + reach)
         return np.linspace(low - LANE_PAD_MM, high + LANE_PAD_MM, LANE_POINTS)
+
+    def _in_window(self) -> NDArray[np.bool_]:
+        """Which points of the lane lie in the window or next to its ends: a part must be had at one of them."""
+        window = self.cell.belt.window_mm if self.cell.belt else None
+        low, high = window or (-np.inf, np.inf)
+        step = 0.0 if len(self.lane_mm) < 2 else float(self.lane_mm[1] - self.lane_mm[0])
+        return np.asarray((self.lane_mm > low - step) & (self.lane_mm < high + step))
 
     def grips(self, part: PartCell) -> tuple[GripCell, ...]:
         """The taught grip, then the further ones of the cell file."""
@@ -124,14 +141,14 @@ class Grasping:
             for turn in self._turns(lane[:, 3]):
                 joints = self.arm.with_j4_turn(lane, np.array(turn))
                 usable = self._usable(joints)
-                if usable.any():
+                if usable[self._inside].any():
                     at = poses[y, 0, :2] - (along[0] - xy_mm @ self.heading) * self.heading
                     hold = Hold(at, float(yaws[y]), float(poses[y, 0, 2]), elbow, int(turn))
                     found.append((hold, int(grips[y]), joints, usable))
                 else:
-                    shortest.look(joints)
+                    shortest.look(joints[self._inside])
         if not found:
-            return shortest.refusal(poses, along)
+            return shortest.refusal(poses[:, self._inside], along[self._inside])
         holds, which, joints_of, usable_of = zip(*found, strict=True)
         return Holds(holds, np.array(which), np.stack(joints_of), np.stack(usable_of), along)
 
@@ -203,6 +220,16 @@ class Grasping:
         usable = self._usable(joints)
         rows = np.repeat(np.arange(count), 2 * len(TURNS))
         return Drops(poses[rows[usable]], joints[usable])
+
+    def above(self, xy_mm: FloatArray, z_mm: float, like: FloatArray) -> FloatArray | None:
+        """Joints (4,) with the tip over a point, on the elbow of `like` (4,) and J4 nearest to its; None out of reach."""
+        poses = np.empty((FREE_YAWS, 4))
+        poses[:, :2], poses[:, 2] = xy_mm, z_mm
+        poses[:, 3] = np.arange(FREE_YAWS) * 2 * np.pi / FREE_YAWS
+        elbow = int(self.arm.elbow_of(like))
+        joints = self.arm.with_j4_turn(self.arm.inverse(poses)[:, elbow, None], TURNS).reshape(-1, 4)
+        joints = joints[self._usable(joints)]
+        return joints[np.abs(joints[:, 3] - like[3]).argmin()] if len(joints) else None
 
     def pairs(self, kind: str, holds: Holds, place: str, slot: int) -> "Grasps":
         """For each hold and each elbow at the slot the drop that turns J4 least."""

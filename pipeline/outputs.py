@@ -11,6 +11,7 @@ from pipeline.decision import Decision, told
 from pipeline.finding import write_overlays
 from pipeline.page import write_page
 from pipeline.plan_graph import write_graph
+from pipeline.remedy import with_remedies
 from pipeline.replay import Run, Setting
 from pipeline.study import Seen
 from pipeline.tables import summary, write_parts, write_picks, write_summary, write_trajectory
@@ -19,6 +20,7 @@ from pipeline.tables import summary, write_parts, write_picks, write_summary, wr
 def write_run(out: Path, seen: Seen, setting: Setting, run: Run, horizon: int, trajectory: bool,
               overlays: bool) -> dict[str, Any]:
     """Write everything about a run; its figures, as in summary.json."""
+    run = with_remedies(setting, run)
     figures = summary(run, horizon, seen.find_s.tolist(), _more(seen, run))
     with written_whole(out / "parts.csv") as part:
         write_parts(part, run, seen.recording)

@@ -17,7 +17,7 @@ from pipeline.trajectory import sampled
 
 FloatArray = NDArray[np.float64]
 
-PARTS = "part_no,part,side,x_mm,y_mm,yaw_deg,score,first_frame,frames_seen,fate,reason,detail,sigma_mm,sigma_deg"
+PARTS = "part_no,part,side,x_mm,y_mm,yaw_deg,score,first_frame,frames_seen,fate,reason,detail,sigma_mm,sigma_deg,remedy"
 PICKS = ("pick,part_no,part,decided_s,grasp_start_s,grasp_end_s,release_start_s,release_end_s,x_mm,y_mm,z_mm,yaw_deg,"
          "j1_deg,j2_deg,j3_mm,j4_deg,elbow,place,slot,place_x_mm,place_y_mm,place_z_mm,place_yaw_deg,place_j1_deg,"
          "place_j2_deg,place_j3_mm,place_j4_deg,depart_s,met_s,left_s,there_s")
@@ -46,7 +46,8 @@ def write_parts(path: Path, run: Run, recording: Recording) -> None:
         return [part.number, part.kind or "unknown", part.side, *_mm(part.xy_mm), f"{degrees(part.yaw_rad):.4f}",
                 f"{part.score:.4f}", int(recording.frame[part.first_row]), part.frames_seen,
                 "missed" if fate else "picked", fate.reason if fate else "", fate.detail if fate else "",
-                f"{part.sigma_mm:.4f}", f"{np.degrees(part.sigma_rad):.4f}"]
+                f"{part.sigma_mm:.4f}", f"{np.degrees(part.sigma_rad):.4f}",
+                fate.remedy if fate else ""]
 
     write_rows(path, PARTS, (row(k) for k in range(len(run.parts))))
 

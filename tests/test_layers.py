@@ -35,7 +35,7 @@ pipeline.order pipeline.permit pipeline.watch
 pipeline.policy
 pipeline.scene
 pipeline.replay
-pipeline.trajectory pipeline.study
+pipeline.trajectory pipeline.study pipeline.remedy
 pipeline.fit pipeline.trade_cycle pipeline.reach pipeline.score pipeline.budget
 pipeline.sighted pipeline.reach_plot pipeline.reach_suggest pipeline.error_plot
 pipeline.account pipeline.check pipeline.tables pipeline.decision

@@ -58,7 +58,7 @@ def _instance(subject: Subject, k: int) -> str:
 def _case(subject: Subject, k: int) -> Markup:
     part, fate = subject.run.parts[k], subject.run.fates[k]
     return tag("li", jump(f"part {part.number}", subject.best_moment_s(k), subject, part.number), " ",
-               named(part.kind, subject.kinds), " ", tag("span", fate.detail if fate else "", class_="detail"))
+               named(part.kind, subject.kinds), " ", tag("span", fate.told if fate else "", class_="detail"))
 
 
 def jump(text: str, at_s: float, subject: Subject, part: int) -> Markup:
