@@ -10,7 +10,7 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from cameras.camera import load_camera
+from cameras.camera import CameraMap, load_camera
 from cameras.faults import InputFault, printable
 from cameras.locate import read_detections, read_located
 from cameras.model import load_model
@@ -19,6 +19,7 @@ from cameras.sightings import Sightings
 from pipeline.cell import Cell
 from pipeline.finding import calibration_of, found_in
 from pipeline.follow import Followed, follow
+from pipeline.map_share import with_map_share
 from pipeline.policy import MOST_LOOKED_AT, POLICIES, Policy, policy_named
 from pipeline.replay import LEAST_SCORE, Run, Setting, replay, replay_ahead
 
@@ -54,7 +55,7 @@ def see(cell: Cell, folder: Path, source: Source, rows: Rows = iter) -> Seen:
     """Read a recording and everything that lies in it. Raises InputFault."""
     recording = _read(cell, folder, source)
     sightings, find_s = sightings_of(cell, recording, source, rows)
-    return Seen(cell, recording, sightings, follow(sightings, recording, cell, outlines(cell)), find_s)
+    return Seen(cell, recording, sightings, _followed(cell, recording, sightings, source), find_s)
 
 
 def one_frame(cell: Cell, folder: Path, source: Source, frame: int) -> Seen:
@@ -66,7 +67,7 @@ def one_frame(cell: Cell, folder: Path, source: Source, frame: int) -> Seen:
                          f"choose one from {recording.frame.min()} to {recording.frame.max()}")
     sightings, find_s = sightings_of(cell, recording, source, lambda rows: [row])
     sightings = sightings.where(sightings.row == row)
-    return Seen(cell, recording, sightings, follow(sightings, recording, cell, outlines(cell)), find_s[find_s > 0])
+    return Seen(cell, recording, sightings, _followed(cell, recording, sightings, source), find_s[find_s > 0])
 
 
 def sightings_of(cell: Cell, recording: Recording, source: Source, rows: Rows = iter) -> tuple[Sightings, FloatArray]:
@@ -74,11 +75,22 @@ def sightings_of(cell: Cell, recording: Recording, source: Source, rows: Rows = 
     if source.located is not None:
         return read_located(source.located, recording, list(cell.parts)), np.zeros(0)
     if source.detections is not None:
-        names = [str(name) for name in np.unique(recording.cameras)]
-        cameras = {name: load_camera(calibration_of(cell, name)) for name in names}
         heights = {name: cell.surface_mm + part.height_mm for name, part in cell.parts.items()}
-        return read_detections(source.detections, recording, cameras, heights), np.zeros(0)
+        return read_detections(source.detections, recording, maps_of(cell, recording), heights), np.zeros(0)
     return found_in(recording, cell, rows)
+
+
+def maps_of(cell: Cell, recording: Recording) -> dict[str, CameraMap]:
+    """The map of each camera that a recording names. Raises InputFault."""
+    return {str(name): load_camera(calibration_of(cell, str(name))) for name in np.unique(recording.cameras)}
+
+
+def _followed(cell: Cell, recording: Recording, sightings: Sightings, source: Source) -> Followed:
+    """The parts; what came through a map is as unsure as the map as well."""
+    followed = follow(sightings, recording, cell, outlines(cell))
+    if source.located is not None:
+        return followed
+    return with_map_share(followed, sightings, recording, maps_of(cell, recording), cell)
 
 
 def setting(seen: Seen, least_score: float = LEAST_SCORE) -> Setting:

@@ -29,7 +29,7 @@ pipeline.arm pipeline.belt pipeline.belt_scale pipeline.places
 pipeline.move_time pipeline.room
 pipeline.finding pipeline.teaching pipeline.follow
 pipeline.motion
-pipeline.grasp pipeline.legs
+pipeline.grasp pipeline.legs pipeline.map_share
 pipeline.neighbours
 pipeline.order pipeline.permit pipeline.watch
 pipeline.policy

@@ -124,7 +124,7 @@ def test_the_part_that_would_have_to_be_gone_is_named() -> None:
 
 
 def test_a_ring_of_parts_is_named() -> None:
-    """Each of the three has its jaws' room taken by the next, both ways round."""
+    """Each has its jaws' room taken by the other, either way round."""
     laid = [Laid(300.0, -450.0), Laid(321.0, -450.0, 180.0)]
     stream = belt(laid, 14, 70.0, **AIM, parts__lever__outline_radius_mm=12.0)
     told = remedies(stream.setting(), stream.run(Arrival()))
