@@ -53,6 +53,11 @@ class Belt:
         at_mm = self.recorded_mm[:1] if still else self.recorded_mm
         self.starts_s, self.coefficients = _averaged(knots, at_mm, self.speeds_mm_s, self.smoothed_s)
 
+    @property
+    def fastest_mm_s(self) -> float:
+        """The speed that all but a twentieth of the recorded intervals keep below."""
+        return float(np.percentile(np.abs(self.speeds_mm_s), 95.0))
+
     def travel_mm(self, t: ArrayLike) -> FloatArray:
         """Mm along the heading since counts 0, at times t of any shape."""
         s, (c0, c1, c2, c3, c4) = self._at(t)

@@ -96,11 +96,13 @@ class ToolCell(Record):
 
 
 class BeltCell(Record):
-    """`[belt]`: the belt's height, direction, scale and pick window."""
+    """`[belt]`: the belt's height, direction and scale (and their standard errors), and its pick window."""
 
     surface_mm: Number
     heading_deg: Number
     mm_per_count: Number
+    mm_per_count_error: NotNegative | None = None
+    heading_error_deg: NotNegative | None = None
     counts_modulus: Annotated[int, Field(strict=True, ge=2)] | None = None
     window_mm: Point | None = None
 
@@ -120,11 +122,12 @@ class TrayCell(Record):
 
 
 class CameraCell(Record):
-    """One of `[[cameras]]`."""
+    """One of `[[cameras]]`; time_error_s: standard deviation of its time stamps."""
 
     name: Name = "overhead"
     calibration: Name | None = None
     latency_s: NotNegative = 0.0
+    time_error_s: NotNegative | None = None
 
 
 class GripCell(Record):

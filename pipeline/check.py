@@ -9,6 +9,7 @@ import numpy as np
 from cameras.camera import load_camera
 from cameras.faults import InputFault, InputFaults
 from cameras.model import load_model
+from pipeline.budget import ErrorBudget, budgets_of, maps_at_hand
 from pipeline.cell import Cell
 from pipeline.reach import Reacher
 
@@ -26,7 +27,7 @@ def check_cell(cell: Cell) -> list[Verdict]:
     """Every check of a cell. Raises InputFaults where files that it names can't be used."""
     files = list(_files(cell))
     reacher = Reacher(cell)
-    return [*files, _home(reacher), *_window(reacher), *_slots(reacher), *_carry(cell)]
+    return [*files, _home(reacher), *_window(reacher), *_slots(reacher), *_carry(cell), *_budget(cell)]
 
 
 def _files(cell: Cell) -> Iterator[Verdict]:
@@ -96,3 +97,20 @@ def _carry(cell: Cell) -> Iterator[Verdict]:
         room = cell.motion.travel_mm - hang - cell.surface_mm - tallest
         yield Verdict("way across", room >= 0, f"a carried part passes {room:.1f} mm above the tallest that lies"
                       if room >= 0 else f"a carried part may meet one that lies by {-room:.1f} mm: raise travel_mm")
+
+
+def budgets(cell: Cell) -> list[ErrorBudget]:
+    """What is known of the errors at the gripper before anything has been seen."""
+    return budgets_of(cell, maps_at_hand(cell, [camera.name for camera in cell.cameras]))
+
+
+def _budget(cell: Cell) -> Iterator[Verdict]:
+    """What is known of the errors at the gripper leaves room in what the grips tolerate."""
+    for one in budgets(cell):
+        if one.told:
+            total, without = one.total, ", ".join(one.missing)
+            limits = [(total.within_mm, one.tolerance_mm, "mm"), (total.within_deg, one.tolerance_deg, "deg")]
+            found = " and ".join(f"{within:.3f} of {limit:g} {unit}" for within, limit, unit in limits
+                                 if limit is not None and not (unit == "deg" and one.round))
+            yield Verdict(f"grip of {one.part}", one.met,
+                          f"95 % within {found}" + (f", without {without}" if without else ""))

@@ -7,6 +7,8 @@ from typing import Any
 import numpy as np
 
 from cameras.written import written_whole
+from pipeline.belt import Belt
+from pipeline.budget import budgets_of, maps_at_hand
 from pipeline.decision import Decision, told
 from pipeline.finding import write_overlays
 from pipeline.page import write_page
@@ -63,5 +65,13 @@ def _more(seen: Seen, run: Run) -> dict[str, Any]:
     return {
         "cell": seen.cell.name,
         "cycle_s": {name: round(float(np.mean(times)), 4) if times else 0.0 for name, times in split.items()},
+        "error_budget": _error_budget(seen),
         "drift": list(drift.findings) if drift is not None else [],
     }
+
+
+def _error_budget(seen: Seen) -> dict[str, Any]:
+    """For each kind of part what puts it off at the gripper; empty without a calibrated camera."""
+    maps = maps_at_hand(seen.cell, np.unique(seen.recording.cameras).tolist())
+    belt = Belt(seen.recording.times_s, seen.recording.counts, seen.cell.belt)
+    return {one.part: one.document() for one in budgets_of(seen.cell, maps, seen.sightings, belt.fastest_mm_s)}

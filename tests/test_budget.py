@@ -1,10 +1,11 @@
 import numpy as np
 import pytest
 from made_camera import MILD, SIZE, made_camera, made_touches
+from some_arms import changed
 
 from cameras.lens import Lens
 from cameras.plane import fit_plane
-from pipeline.budget import BudgetLine, MapDoubt, error_budget, longest_carry_mm, map_doubt
+from pipeline.budget import BudgetLine, MapDoubt, budgets_of, error_budget, longest_carry_mm, map_doubt
 from pipeline.cell import load_cell
 
 NO_DOUBT = MapDoubt(0.0, 0.0, 0.0, 0.0)
@@ -71,3 +72,58 @@ def test_the_longest_carry_runs_from_the_image_to_the_window_s_end(recordings_fo
     seen = camera.to_cell([[0.0, 0.0], [1023.0, 0.0], [0.0, 799.0], [1023.0, 799.0]])
     assert longest_carry_mm(cell, [camera]) == pytest.approx(220.0 - seen[:, 1].min(), abs=1.0)
     assert longest_carry_mm(load_cell(recordings_folder / "tray" / "cell.toml"), [camera]) == 0.0
+
+
+def test_what_is_not_known_is_told_and_not_summed():
+    """None is unknown; 0 is known to be nothing."""
+    whole = {"finding_mm": 0.1, "carry_mm": 500.0, "scale_error": 0.001, "heading_error_rad": 5e-4, "speed_mm_s": 200.0,
+             "time_error_s": 0.001}  # fmt: skip
+    names = {"scale_error": "belt scale", "heading_error_rad": "heading", "time_error_s": "time stamp",
+             "speed_mm_s": "time stamp", "finding_mm": "finding"}  # fmt: skip
+    assert error_budget("lever", NO_DOUBT, **whole).missing == ()
+    assert error_budget("lever", NO_DOUBT, **{**whole, "scale_error": 0.0}).missing == ()
+    for key, name in names.items():
+        lacking = error_budget("lever", NO_DOUBT, **{**whole, key: None})
+        (source,) = lacking.missing
+        assert source.startswith(name)
+        assert (source, "not given", "") in lacking.rows()
+        assert lacking.total.within_mm < error_budget("lever", NO_DOUBT, **whole).total.within_mm
+
+
+def test_the_yaw_of_a_round_part_is_not_judged():
+    asked = {"finding_mm": 0.01, "finding_rad": np.pi, "tolerance_mm": 1.0, "tolerance_deg": 1.0}
+    assert not error_budget("lever", NO_DOUBT, **asked).met
+    dome = error_budget("dome", NO_DOUBT, round_part=True, **asked)
+    assert dome.met
+    assert {deg for _, _, deg in dome.rows()} <= {"-", ""}
+    assert dome.document()["sum"]["within_deg"] is None
+
+
+def test_the_document_holds_every_line_the_sum_and_the_verdict():
+    met = error_budget("lever", NO_DOUBT, finding_mm=0.1, carry_mm=400.0, scale_error=1e-4, tolerance_mm=0.3)
+    told = met.document()
+    assert [line["source"] for line in told["lines"]] == [line.source for line in met.lines]
+    assert told["sum"]["within_mm"] == pytest.approx(met.total.within_mm, abs=1e-4)
+    assert (told["tolerance_mm"], told["met"]) == (0.3, True)
+    assert [line["within_mm"] for line in told["lines"] if line["source"].startswith("time")] == [None]
+    assert error_budget("lever", NO_DOUBT, finding_mm=0.1).document()["met"] is None
+
+
+def test_a_cell_s_own_errors_come_into_its_budgets():
+    """Each key of the cell file changes its line and no other; a tray has none of them."""
+    camera = made_camera()
+    touched = made_touches(camera)
+    maps = {"": fit_plane(touched.pixels, touched.points, Lens(MILD, SIZE))}
+    plain = {"parts__lever__grip_tolerance_mm": 0.5}
+    given = {"belt__mm_per_count_error": 1e-5, "belt__heading_error_deg": 0.02,
+             "cameras": [{"name": "overhead", "time_error_s": 0.001}]}  # fmt: skip
+    (bare,) = budgets_of(changed(**plain), maps, None, 200.0)
+    assert bare.tolerance_mm == 0.5
+    assert len(bare.missing) == 4
+    for key, value in given.items():
+        (one,) = budgets_of(changed(**plain, **{key: value}), maps, None, 200.0)
+        assert len(one.missing) == 3
+        assert one.total.within_mm > bare.total.within_mm
+    tray = changed(belt=None, tray={"surface_mm": -50.0})
+    assert [line.source for line in budgets_of(tray, maps)[0].lines] == ["lens", "plane map", "finding"]
+    assert budgets_of(changed(), {}) == []

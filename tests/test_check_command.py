@@ -1,13 +1,17 @@
 """What `check` finds in a cell, and how it ends."""
 
+import json
 from pathlib import Path
 
 import numpy as np
 import pytest
+from made_camera import MILD, SIZE, made_camera, made_touches
 from some_arms import changed, written_cell
 from typer.testing import CliRunner, Result
 
 from cameras.faults import InputFaults
+from cameras.lens import Lens
+from cameras.plane import fit_plane
 from pipeline.app import app
 from pipeline.arm import Arm
 from pipeline.check import check_cell
@@ -100,3 +104,18 @@ def test_the_trade_cycle_is_25_300_25(change: dict[str, object]) -> None:
 def test_an_arm_too_small_has_no_trade_cycle() -> None:
     cell = changed(arm__link1_mm=60.0, arm__link2_mm=60.0)
     assert trade_cycle(Arm(cell.arm, cell.tool)) is None
+
+
+@pytest.mark.parametrize(("tolerance_mm", "status"), [(1.0, 0), (0.01, 1)])
+def test_what_the_map_alone_leaves_open_is_held_against_the_grip(tmp_path: Path, tolerance_mm: float,
+                                                                 status: int) -> None:
+    camera = made_camera()
+    touched = made_touches(camera)
+    fitted = fit_plane(touched.pixels, touched.points, Lens(MILD, SIZE))
+    (tmp_path / "overhead.json").write_text(json.dumps(fitted.document()))
+    parts = {"lever": {"grasp_mm": 3.0, "height_mm": 6.0, "places": ["tray"], "grip_tolerance_mm": tolerance_mm}}
+    shown = check(written_cell(tmp_path, cameras=[{"name": "overhead", "calibration": "overhead.json"}], parts=parts,
+                               belt__heading_error_deg=0.001))
+    assert shown.exit_code == status, shown.output
+    assert "not given" in shown.output
+    assert "grip of lever" in shown.output

@@ -22,13 +22,15 @@ def check(
 ) -> None:
     """Read everything a cell names, say what is wrong and where, and sum the cell up."""
     from pipeline.cell import load_cell
-    from pipeline.check import check_cell
+    from pipeline.check import budgets, check_cell
 
     read = load_cell(cell)
     verdicts = check_cell(read)
     cycles = [("limits of the cell file", _cycle(read)), *_fitted(read, moves)]
     _sum_up(read)
     show_table("25 mm up, 300 across, 25 down, and back", ("with", "time"), cycles)
+    for budget in budgets(read):
+        show_table(f"Errors at the gripper: {budget.part}", ("source", "95 % within mm", "deg"), budget.rows())
     show_table("Checks", ("check", "verdict", "found"),
                [(one.what, "well" if one.well else "FAILED", one.found) for one in verdicts])
     failed = sum(not one.well for one in verdicts)

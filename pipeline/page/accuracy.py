@@ -2,9 +2,8 @@
 
 import numpy as np
 
-from cameras.camera import CameraMap, load_camera
-from cameras.faults import InputFault
-from pipeline.budget import error_budget, longest_carry_mm, map_doubt
+from cameras.camera import CameraMap
+from pipeline.budget import budgets_of, maps_at_hand
 from pipeline.page.listings import plain_table
 from pipeline.page.markup import Child, Markup, joined, tag
 from pipeline.page.subject import Subject
@@ -15,7 +14,8 @@ BASIS = {"pose": "lens and touches: any height maps", "rays": "touches at two he
 
 def accuracy(subject: Subject) -> Markup | None:
     """The section's content; None where no camera's calibration can be read."""
-    cameras = _cameras(subject)
+    names = np.unique(subject.seen.recording.cameras).tolist()
+    cameras = maps_at_hand(subject.setting.cell, names)
     if not cameras:
         return None
     head = [("camera", False), ("rests on", False), ("touches", True), ("residual RMS mm", True),
@@ -29,19 +29,6 @@ def accuracy(subject: Subject) -> Markup | None:
     return joined(plain_table("Plane maps", head, rows), tag("p", note, class_="note"), _budget(subject, cameras))
 
 
-def _cameras(subject: Subject) -> dict[str, CameraMap]:
-    found: dict[str, CameraMap] = {}
-    cell = subject.setting.cell
-    for name in np.unique(subject.seen.recording.cameras).tolist():
-        try:
-            named = cell.camera(name).calibration
-            if named is not None:
-                found[name] = load_camera(cell.beside(named))
-        except InputFault:
-            continue
-    return found
-
-
 def _scale(subject: Subject, camera: CameraMap) -> float:
     """Mm a pixel in the middle of what the camera sees, on the surface."""
     middle = camera.touched_px.mean(axis=0)
@@ -51,22 +38,12 @@ def _scale(subject: Subject, camera: CameraMap) -> float:
 
 def _budget(subject: Subject, cameras: dict[str, CameraMap]) -> Markup | None:
     """95 % of the errors of each kind of part, source by source."""
-    cell, seen = subject.setting.cell, subject.seen.sightings
-    carry = longest_carry_mm(cell, list(cameras.values()))
-    tables = []
-    for kind, part in cell.parts.items():
-        own = seen.kind == kind
-        if not own.any():
-            continue
-        doubt = map_doubt(next(iter(cameras.values())), cell.surface_mm + part.height_mm)
-        budget = error_budget(kind, doubt, finding_mm=float(np.median(seen.sigma_mm[own])),
-                              finding_rad=float(np.median(seen.sigma_rad[own])), carry_mm=carry,
-                              tolerance_mm=part.grip_tolerance_mm, tolerance_deg=part.grip_tolerance_deg)
-        rows = [[source, mm, "-" if part.turns == 0 else deg]  # the yaw of a round part means nothing
-                for source, mm, deg in budget.rows() if float(mm or 1) or float(deg or 1)]
-        tables.append(plain_table(f"Error budget: {kind}", [("source", False), ("95 % within mm", True),
-                                                            ("95 % within °", True)], rows))  # fmt: skip
+    budgets = budgets_of(subject.setting.cell, cameras, subject.seen.sightings, subject.setting.belt.fastest_mm_s)
+    head = [("source", False), ("95 % within mm", True), ("95 % within °", True)]
+    tables = [plain_table(f"Error budget: {one.part}", head, [list(row) for row in one.rows()]) for one in budgets]
     if not tables:
         return None
-    note = "Errors of the belt's scale, its heading and the time stamps are not in a cell file and not in these sums."
-    return joined(tag("div", *tables, class_="charts"), tag("p", note, class_="note"))
+    note = ("What is not given counts as nothing. The cell file may give mm_per_count_error, heading_error_deg and "
+            "time_error_s.")
+    missing = any(one.missing for one in budgets)
+    return joined(tag("div", *tables, class_="charts"), tag("p", note, class_="note") if missing else None)
