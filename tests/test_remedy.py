@@ -98,6 +98,19 @@ def test_a_part_is_told_apart_that_another_order_would_have_saved() -> None:
     assert remedies(setting, lost)[2] == "another order would do: picked first, at no cost to the others"
 
 
+def test_a_part_that_only_wants_time_is_told_nothing_of_reach() -> None:
+    """An arm with nothing else to do would have had it: no window or base is to blame, whatever reason is given."""
+    stream = belt([Laid(280.0, -450.0), Laid(320.0, -452.0), Laid(240.0, -452.0)], 14, 300.0, **AIM,
+                  belt__window_mm=[-100.0, 20.0])
+    run = stream.run(Arrival())
+    late = [part.number for part, fate in zip(run.parts, run.fates, strict=True) if fate is not None]
+    assert late
+    for reason in ("too_late", "out_of_reach"):
+        fates = tuple(fate and Refusal(reason, "") for fate in run.fates)
+        told = remedies(stream.setting(), replace(run, fates=fates))
+        assert [told[number] for number in late] == [None] * len(late)
+
+
 def test_the_keep_out_that_is_lower_or_moved_does() -> None:
     stream = tray([Laid(170.0, 100.0)], 1, **AIM, keepouts=[POST], arm__link_radius_mm=0.0)
     told = remedy_of(stream)

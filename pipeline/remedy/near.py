@@ -32,7 +32,7 @@ class Remedy:
 
 def nearest(trials: Trials, k: int, refusal: Refusal) -> str | None:
     """What would have saved part k; None where no single number would. Raises OutOfTrials."""
-    for ways in _WAYS.get(refusal.reason, ()):
+    for ways in _ways(trials, k, refusal.reason):
         found = list(ways(trials, k))
         if found:
             return min(found, key=lambda one: one.by).sentence
@@ -193,8 +193,21 @@ def _changed(trials: Trials, k: int, key: Key, value: float, sign: float, most: 
         yield Remedy(by, changed(by), told.format(round(value + sign * by, 6)))
 
 
+Ways = Callable[[Trials, int], Iterator[Remedy]]
 # of each reason what is looked for, the later ones where the earlier ones find nothing
-_WAYS: dict[str, tuple[Callable[[Trials, int], Iterator[Remedy]], ...]] = {
+_WAYS: dict[str, tuple[Ways, ...]] = {
     "joint_limit": (_joint_limit, _window_end, _base), "out_of_reach": (_window_end, _base, _joint_limit),
-    "too_late": (_too_late, _sooner), "keepout": (_keepout,), "no_room": (_no_room,), "place_full": (_place_full,),
+    "keepout": (_keepout,), "no_room": (_no_room,), "place_full": (_place_full,),
 }  # fmt: skip
+
+
+def _ways(trials: Trials, k: int, reason: str) -> Iterator[Ways]:
+    """What to look for. A part that an arm with nothing else to do would have had is but a matter of time."""
+    if reason == "too_late":
+        yield _too_late
+        reason = "out_of_reach"
+    elif reason in ("joint_limit", "out_of_reach", "keepout", "no_room") and trials.alone(trials.set.cell, k):
+        yield _too_late
+        return
+    if reason in _WAYS and (reason == "place_full" or not trials.alone(trials.set.cell, k)):
+        yield from _WAYS[reason]

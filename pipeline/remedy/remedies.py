@@ -7,7 +7,7 @@ from pipeline.remedy.rings import rings_of
 from pipeline.remedy.trial import OutOfTrials, Trials
 from pipeline.replay import Run, Setting
 
-MOST_PARTS, MOST_CYCLES = 20, 240
+MOST_PARTS, MOST_CYCLES = 20, 200
 NONE_FOR = ("wrong_side", "unknown", "low_score")
 NOT_LOOKED_FOR = "not looked for"
 
