@@ -132,8 +132,8 @@ def test_settings_are_read_from_a_file(tmp_path: Path) -> None:
 
 
 @pytest.mark.parametrize("text", ["", "[set]\nwrong = 1", "[set]\nhorizon = []", "[set]\nhorizon = [true]",
-                                  "nonsense = 1", "[set]\nbelt-speed = [nan]", "[set]\nhorizon = {from = 1}", "not toml",
-                                  "set = 3", "[[points]]\nhorizon = [[1]]", "points = [1]"])
+                                  "nonsense = 1", "[set]\nbelt-speed = [nan]", "[set]\nhorizon = {from = 1}",
+                                  "not toml", "set = 3", "[[points]]\nhorizon = [[1]]", "points = [1]"])
 def test_a_wrong_settings_file_is_refused(tmp_path: Path, text: str) -> None:
     path = tmp_path / "settings.toml"
     path.write_text(text)
@@ -186,21 +186,22 @@ def test_broken_off_it_goes_on_where_it_was(tmp_path: Path) -> None:
     words = ["sweep", str(folder), "--cell", str(folder / "cell.toml"), "--located", "located.csv", "--set",
              "belt-speed=0.5:2:20", "--set", "order=arrival", "--out", str(out)]
 
-    def broken_off(with_signal: int, points: int) -> tuple[int, dict[str, int]]:
+    def broken_off(with_signal: int, points: int) -> tuple[int, str, dict[str, int]]:
         process = subprocess.Popen([sys.executable, "-c", MAIN, *words, "--jobs", "1"], stderr=subprocess.PIPE,
                                    start_new_session=True)
         until = time.monotonic() + 120
         while len(list(out.glob("points/*.json"))) < points and time.monotonic() < until and process.poll() is None:
             time.sleep(0.005)
         os.killpg(process.pid, with_signal)
-        process.communicate(timeout=60)
-        return process.returncode, {path.name: path.stat().st_mtime_ns for path in out.glob("points/*.json")}
+        told = process.communicate(timeout=60)[1].decode()
+        return process.returncode, told, {path.name: path.stat().st_mtime_ns for path in out.glob("points/*.json")}
 
-    status, first = broken_off(signal.SIGINT, 3)
+    status, said, first = broken_off(signal.SIGINT, 3)
     assert status == 130
+    assert said.strip().splitlines() == ["interrupted; what is done is kept, the same command goes on from there"]
     assert 3 <= len(first) < 20
     assert not (out / "sweep.csv").exists()
-    _, second = broken_off(signal.SIGKILL, len(first) + 3)
+    _, _, second = broken_off(signal.SIGKILL, len(first) + 3)
     assert first.items() <= second.items()
     assert len(first) < len(second) < 20
     told = sanderling(*words, "--jobs", "1")

@@ -49,6 +49,7 @@ def sweep(
     Settings: belt-speed, arrival-rate, limits (factors); order, horizon; window-shift, window-length, base-x, base-y,
     travel-height, clear-height, approach (mm); base-yaw (deg); grasp-dwell, release-dwell, latency (s); or any key of
     the cell file, as motion.grasp_s. A table of poses or detections may be named as it is called in each recording.
+    Points that are done are kept in OUT: a sweep that was broken off goes on where it was.
 
     Example: sanderling sweep demo_images/bells --cell demo_images/bells/cell.toml --set belt-speed=0.8:1.6:5 --set
     order=arrival,lookahead --out out/sweep
@@ -75,16 +76,22 @@ def sweep(
         return run_points(cases, points, out / "points", jobs, dask,
                           lambda outcomes, total: progress(outcomes, total, "replay"))
 
-    if find:
-        asked = [(row, points_of([row], len(cases), draws, lasts)) for row in rows or [()]]
-        outcomes = _found([(row, _answer(find, shares, base, run)) for row, base in asked], cases, out)
-    else:
-        outcomes = run(points_of(rows, len(cases), draws, lasts))
-        draw_sweep(out, outcomes)
-        _show(outcomes, names)
+    try:
+        answers = [(row, _answer(find, shares, points_of([row], len(cases), draws, lasts), run))
+                   for row in rows or [()] if find]  # fmt: skip
+        outcomes = _points_of(answers) if find else run(points_of(rows, len(cases), draws, lasts))
+    except KeyboardInterrupt:
+        print("interrupted; what is done is kept, the same command goes on from there", file=sys.stderr)
+        raise typer.Exit(130) from None
+    took_s = time.perf_counter() - begun
     with written_whole(out / "sweep.csv") as part:
         write_sweep(part, outcomes, names)
-    _sum_up(outcomes, time.perf_counter() - begun, jobs, dask)
+    if find:
+        _tell_answers(answers, cases, out)
+    else:
+        draw_sweep(out, outcomes)
+        _show(outcomes, names)
+    _sum_up(outcomes, took_s, jobs, dask)
     print(f"-> {out}")
     if any(outcome.failed for outcome in outcomes):
         raise typer.Exit(1)
@@ -143,8 +150,13 @@ def _answer(find: str, shares: tuple[float, float], base: "Sequence[Point]", run
     return shortest_horizon(shares[1], base, run) if find == "horizon" else greatest_factor(find, shares[0], base, run)
 
 
-def _found(answers: list[tuple["Row", "Answer"]], cases: list["Case"], out: Path) -> list["Outcome"]:
-    """Tell the answers, write and draw them; every point that was run for them."""
+def _points_of(answers: list[tuple["Row", "Answer"]]) -> list["Outcome"]:
+    """Every point that was run for some answers, once."""
+    return list({outcome.point: outcome for _, answer in answers for outcome in answer.outcomes}.values())
+
+
+def _tell_answers(answers: list[tuple["Row", "Answer"]], cases: list["Case"], out: Path) -> None:
+    """Write, draw and show answers."""
     from pipeline.sweep.find import in_units
     from pipeline.sweep.plots import draw_answers
     from pipeline.sweep.tables import write_answers
@@ -158,7 +170,6 @@ def _found(answers: list[tuple["Row", "Answer"]], cases: list["Case"], out: Path
         rows.append((", ".join(f"{name} {value}" for name, value in row) or "the cell as it is",
                      answer.why or f"{answer.value:.3g}", *told, ", ".join(f"{value:.3g}" for value in answer.each)))
     show_table(f"Found: {answers[0][1].setting}", ("with", "answer", "95 % interval", "in units", "seed by seed"), rows)
-    return list({outcome.point: outcome for _, answer in answers for outcome in answer.outcomes}.values())
 
 
 def _show(outcomes: list["Outcome"], names: list[str]) -> None:
