@@ -13,6 +13,7 @@ from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_valida
 
 from cameras.faults import InputFault, InputFaults, printable
 
+MOST_ON_TRAY = 200  # parts ordered at once where nothing moves
 MOST_BYTES = 4 * 1024 * 1024
 
 Number = Annotated[float, Field(strict=True, allow_inf_nan=False)]
@@ -241,6 +242,12 @@ class Cell(Record):
     motion: MotionCell
     order: OrderCell = OrderCell()
     file: Path = Field(default=Path("cell.toml"), exclude=True)
+
+    @property
+    def horizon(self) -> int:
+        """Parts looked at together: as the file says; otherwise 12 on a belt, and a whole tray."""
+        whole = self.belt is None and "horizon" not in self.order.model_fields_set
+        return MOST_ON_TRAY if whole else self.order.horizon
 
     @property
     def surface_mm(self) -> float:

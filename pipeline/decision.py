@@ -36,7 +36,7 @@ class Decision:
     """The choice that led to the first pick of a run.
 
     start_mm (2,): where the tool tip stands. chosen: the sequence in view. others: for every other part that can be
-    picked next, the best that begins with it, the best of them first (none where more parts lie there than are looked at together).
+    picked next, the best that begins with it, in order of their worth.
     """
 
     setting: Setting
@@ -67,8 +67,8 @@ class Decision:
 
 
 def first_decision(setting: Setting, policy: Policy, horizon: int, run: Run) -> Decision | None:
-    """The decision behind the first pick of a run; None where nothing was picked."""
-    if not run.picks:
+    """The decision behind a run's first pick; None where nothing was picked, and for a whole tray of many parts."""
+    if not run.picks or run.picks[0].looked_at > MOST_LOOKED_AT:
         return None
     first = run.picks[0]
     watch = Watch(setting.cell, setting.recording, setting.belt, setting.parts)
@@ -96,11 +96,10 @@ def _led_to(scene: Scene, picked: Picked, pick: Pick) -> bool:
 
 def _explained(setting: Setting, scene: Scene, start_mm: FloatArray, picked: Picked) -> Decision:
     choice, others = scene.choice, list[Sequence]()
-    if len(choice.weights) <= MOST_LOOKED_AT:
-        best = Lookahead(setting.cell.order.objective).best(choice, alternatives=True)
-        for part in np.flatnonzero(np.arange(len(choice.weights)) != choice.nodes.part[picked.node]):
-            ways = [timed(choice, nodes) for nodes in best.first_nodes if nodes and choice.nodes.part[nodes[0]] == part]
-            others += [min(ways, key=_rank)] if ways else []
+    best = Lookahead(setting.cell.order.objective).best(choice, alternatives=True)
+    for part in np.flatnonzero(np.arange(len(choice.weights)) != choice.nodes.part[picked.node]):
+        ways = [timed(choice, nodes) for nodes in best.first_nodes if nodes and choice.nodes.part[nodes[0]] == part]
+        others += [min(ways, key=_rank)] if ways else []
     return Decision(setting, scene, start_mm, picked, timed(choice, picked.nodes), tuple(sorted(others, key=_rank)))
 
 

@@ -51,8 +51,8 @@ class Nodes:
 
 @dataclass(frozen=True)
 class LegTimes:
-    """contact, finish (a, g, k): when the part is gripped and when the arm is free again, for legs begun at start_s (k,)
-    from each of a places: row 0 where the arm is now, row start_of[b] where grasp b ends. inf: can't be had.
+    """contact, finish (a, g, k): when the part is gripped and when the arm is free again, for legs begun at start_s
+    (k,) from each of a places: row 0 where the arm is now, row start_of[b] where grasp b ends. inf: can't be had.
     """
 
     start_s: FloatArray
@@ -80,7 +80,7 @@ class Legs:
         """Leg times for an arm at rest at start (4,) from now on; without `later` only those that begin now, here."""
         span = self._span(nodes, belt.speed_mm_s)
         step = max(span / START_TIMES, LEAST_STEP_S)
-        start_s = now + (step * np.arange(START_TIMES + 1) if later else np.zeros(1))
+        start_s: FloatArray = np.asarray(now + (step * np.arange(START_TIMES + 1) if later else np.zeros(1)), np.float64)
         places, start_of = np.unique(np.round(nodes.drop, 9), axis=0, return_inverse=True)
         starts = np.concatenate([start[None], places]) if later else start[None]
         heights = self.mover.arm.forward(starts)[:, 2]
@@ -97,9 +97,25 @@ class Legs:
         _leg_times(
             np.ascontiguousarray(starts[:, TURNING]), out, np.ascontiguousarray(lane[:, :, TURNING]), speed, usable,
             t_at, np.ascontiguousarray(nodes.drop[:, TURNING]), back, opens, closes, self._tables, self._limits,
-            self.mover.motion.grasp_s, self.mover.motion.release_s, self.mover.singular, still, start_s, contact, finish,
+            self.mover.motion.grasp_s, self.mover.motion.release_s, self.mover.singular, still, start_s, contact,
+            finish,
         )  # fmt: skip
         return LegTimes(start_s, start_of + 1, contact, finish)
+
+    def still(self, rests: FloatArray, holds: FloatArray, hold_mm: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Legs where nothing moves: s from leaving each rest (a, 4) to contact with each hold (b, 4), tip at hold_mm
+        (b,): (a, b); and from contact until the arm is free at each rest: (b, a). inf: can't be had."""
+        heights = self.mover.arm.forward(rests)[:, 2]
+        lows, low = np.unique(np.round(heights, 6), return_inverse=True)
+        grips, grip = np.unique(np.round(hold_mm, 6), return_inverse=True)
+        ends = np.ascontiguousarray(rests[:, TURNING]), np.ascontiguousarray(holds[:, TURNING])
+        legs = []
+        for there in (True, False):
+            table = np.array([[self._table(*((z, g) if there else (g, z))) for g in grips] for z in lows], np.int64)
+            legs.append(_still_legs(*ends, np.ascontiguousarray(table[low][:, grip]), self._tables, self._limits,
+                                    self.mover.singular))
+        motion = self.mover.motion
+        return legs[0], np.ascontiguousarray(legs[1].T) + motion.grasp_s + motion.release_s
 
     def _span(self, nodes: Nodes, speed: float) -> float:
         """How far ahead legs may begin: until the last part has left its window."""
@@ -200,6 +216,22 @@ def _carry(
     return grasp_s + total + release_s
 
 
+@njit("float64[:, ::1](float64[:, ::1], float64[:, ::1], int64[:, ::1], float64[:, :, ::1], float64[:, ::1], float64)",
+      cache=True, nogil=True)  # fmt: skip
+def _still_legs(
+    rests: FloatArray, holds: FloatArray, lift: NDArray[np.int64], tables: FloatArray, limits: FloatArray,
+    singular: float,
+) -> FloatArray:
+    """(a, b) s of the lift between each rest and each hold, one way or the other."""
+    legs, speed = np.full(lift.shape, np.inf), np.zeros(3)
+    for a in range(len(rests)):
+        for b in range(len(holds)):
+            across = _across(rests[a], holds[b], speed, limits, singular)
+            if across < np.inf:
+                legs[a, b] = _lift_times(tables[lift[a, b]], across)[1]
+    return legs
+
+
 @njit("boolean(float64[::1], int64, float64, boolean)", cache=True)
 def _past(t_at: FloatArray, k: int, start: float, still: bool) -> bool:
     """Whether a part has passed point k and the next one too before any leg can begin."""
@@ -216,8 +248,8 @@ def _past(t_at: FloatArray, k: int, start: float, still: bool) -> bool:
 def _leg_times(
     starts: FloatArray, out: NDArray[np.int64], lane: FloatArray, speed: FloatArray, usable: NDArray[np.bool_],
     t_at: FloatArray, slot: FloatArray, back: NDArray[np.int64], opens: FloatArray, closes: FloatArray,
-    tables: FloatArray, limits: FloatArray, grasp_s: float, release_s: float, singular: float, still: bool, start_s: FloatArray,
-    contact: FloatArray, finish: FloatArray,
+    tables: FloatArray, limits: FloatArray, grasp_s: float, release_s: float, singular: float, still: bool,
+    start_s: FloatArray, contact: FloatArray, finish: FloatArray,
 ) -> None:  # fmt: skip
     """Fill contact and finish (a, g, k)."""
     g, m = t_at.shape

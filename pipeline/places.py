@@ -46,6 +46,16 @@ class Filling:
             return filled
         return filled % slots if self._places[place].endless else None
 
+    def coming(self, place: str, number: int) -> list[int]:
+        """Indices of the next `number` slots to be filled, fewer where the place will be full."""
+        filled, slots = self._filled[place], len(self._places[place].slots_mm)
+        last = filled + number if self._places[place].endless else min(filled + number, slots)
+        return [k % slots for k in range(filled, last)]
+
+    def filled(self, place: str) -> int:
+        """How many slots have been filled."""
+        return self._filled[place]
+
     def fill(self, place: str) -> None:
         """Take the next slot."""
         self._filled[place] += 1

@@ -7,7 +7,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pipeline.decision import Decision
-from pipeline.policy import MOST_LOOKED_AT
 
 START = "start"
 ELBOWS = ("right", "left")
@@ -20,21 +19,18 @@ def decision_graph(decision: Decision) -> "nx.DiGraph[str]":
     tool tip at the start) and rank (from 1 in the order chosen, 0 outside it). An edge has time_s (from leaving to
     being free again, begun now), travel_s (joint travel, each joint's at its full speed) and frees: whether the part it
     comes from must go before the one it leads to. No edge leads from the start to a part that is blocked, nor from a
-    part to one that must go before it. Where more parts lie there than are looked at together, only the grasps of the
-    order are nodes.
+    part to one that must go before it.
     """
     choice, scene = decision.scene.choice, decision.scene
-    many = len(choice.weights) > MOST_LOOKED_AT
-    kept = sorted(decision.chosen.nodes) if many else list(range(len(choice.nodes)))
     rank = {node: n for n, node in enumerate(decision.chosen.nodes, 1)}
     graph: nx.DiGraph[str] = nx.DiGraph(now_s=_plain(choice.now_s))
     graph.add_node(START, part_no=0, kind="", elbow="", turn=0, place="", slot=0, rank=0, **_at(decision.start_mm))
-    for node in kept:
+    for node in range(len(choice.nodes)):
         one, hold, _, _ = scene.grasp(node)
         graph.add_node(_name(node), part_no=one.part.number, kind=one.part.kind, elbow=ELBOWS[hold.elbow],
                        turn=int(hold.turn), place=one.place, slot=one.slot + 1, rank=rank.get(node, 0),
                        **_at(decision.at_mm(node)))
-    _join(graph, decision, kept)
+    _join(graph, decision)
     return graph
 
 
@@ -43,12 +39,12 @@ def write_graph(path: Path, decision: Decision) -> None:
     nx.write_graphml(decision_graph(decision), path, encoding="utf-8", named_key_ids=True)
 
 
-def _join(graph: "nx.DiGraph[str]", decision: Decision, kept: list[int]) -> None:
+def _join(graph: "nx.DiGraph[str]", decision: Decision) -> None:
     choice = decision.scene.choice
     times, travel = choice.legs(True), choice.travel()
     takes = times.finish[np.concatenate([[0], times.start_of])].min(axis=2) - choice.now_s  # waiting is allowed
-    for before in (-1, *kept):
-        for node in kept:
+    for before in range(-1, len(choice.nodes)):
+        for node in range(len(choice.nodes)):
             if np.isfinite(takes[before + 1, node]) and _may_follow(choice.nodes.part, choice.blocked_by, before, node):
                 graph.add_edge(START if before < 0 else _name(before), _name(node),
                                time_s=_plain(takes[before + 1, node]), travel_s=_plain(travel[before + 1, node]),

@@ -6,19 +6,21 @@ same `Choice` and no more.
 """
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from pipeline.legs import LegTimes, Nodes
+from pipeline.tray_order import Tray, TrayOrder, to_go, tray_order
 
 if TYPE_CHECKING:
     from pipeline.order.lookahead import PickSequence
 
 FloatArray = NDArray[np.float64]
 TRAVEL_SHARE = 0.06
+FAR_S = 1e6
 MOST_STATES = 2_000_000
 STATES_PER_MS = 2000  # so a budget in ms gives the same answer on any machine; one core looks at 2,000 to 7,500
 MOST_LOOKED_AT = 14  # parts: the exact look-ahead doubles its work with each
@@ -31,6 +33,8 @@ class Choice:
     nodes: the grasps. weights (n,): worth of each part. along_mm (n,): how far along the heading each is. blocked_by
     (n,): bit p set where part p must go first; such a part's grasps can't be next. legs(later): leg times, from here
     and now, or from every grasp at any time. travel() (g+1, g): joint travel from row to column, in s at full speed.
+    numbers (n,): of the parts. tray(): where nothing moves and more than MOST_LOOKED_AT parts lie there, the whole tray
+    as it was when last looked at, and how many slots of each queue have been filled since (q,); otherwise None.
     """
 
     now_s: float
@@ -40,6 +44,8 @@ class Choice:
     blocked_by: NDArray[np.int64]
     legs: Callable[[bool], LegTimes]
     travel: Callable[[], FloatArray]
+    numbers: NDArray[np.int64] = field(default_factory=lambda: np.zeros(0, np.int64))
+    tray: Callable[[], tuple[Tray, NDArray[np.int64]] | None] = lambda: None
 
     def next_ones(self) -> tuple[FloatArray, FloatArray]:
         """Contact and finish (g,) of each grasp taken next; inf where it can't be."""
@@ -105,18 +111,23 @@ class Lookahead:
     """The first grasp of the sequence that picks most weight and then ends first (or, for `travel`, moves least).
 
     Each leg's joint travel counts as TRAVEL_SHARE of its time when ends are compared: where the arm has to wait for a
-    part anyway, or two sequences end together, the one that moves less is taken.
+    part anyway, or two sequences end together, the one that moves less is taken. A tray of more than
+    MOST_LOOKED_AT parts is ordered whole, for the earliest finish whatever the objective and the budget.
     """
 
     def __init__(self, objective: str = "picks", budget_ms: float | None = None) -> None:
         from pipeline.order.lookahead import best_pick_sequence  # loaded before the clock starts, not for other rules
 
         self._best_sequence = best_pick_sequence
+        self._kept: tuple[Tray, TrayOrder] | None = None
         self.by_travel = objective == "travel"
         self.budget_states = MOST_STATES if budget_ms is None else max(int(budget_ms * STATES_PER_MS), 1)
 
     def choose(self, choice: Choice) -> Picked | None:
         """See Policy."""
+        whole = choice.tray()
+        if whole is not None:
+            return self._on_tray(choice, *whole)
         best = self.best(choice)
         if not best.nodes:
             return None
@@ -133,6 +144,33 @@ class Lookahead:
             choice.blocked_by, choice.now_s, float(times.start_s[0]), float(times.start_s[1] - times.start_s[0]),
             travel=travel if self.by_travel else None, budget_states=self.budget_states, alternatives=alternatives,
         )  # fmt: skip
+
+    def _on_tray(self, choice: Choice, tray: Tray, used: NDArray[np.int64]) -> Picked | None:
+        """The next of the whole tray's order, which is kept as long as the tray is the same."""
+        if self._kept is None or self._kept[0] is not tray:
+            self._kept = tray, tray_order(tray)
+        order, row_of = self._kept[1].order, {int(number): k for k, number in enumerate(choice.numbers)}
+        _, finish = choice.next_ones()
+        left = [part for part in order if int(tray.numbers[part]) in row_of]
+        for k, part in enumerate(left):
+            nodes = np.flatnonzero((choice.nodes.part == row_of[int(tray.numbers[part])]) & np.isfinite(finish))
+            if len(nodes):
+                queue, filled = tray.queue[part], used.copy()
+                filled[queue] += 1
+                after = to_go(tray, np.array(left[:k] + left[k + 1 :], np.int64), filled)
+                ways = slice(*tray.slots[queue, filled[queue] - 1 : filled[queue] + 1])
+                same = (choice.nodes.drop[nodes][:, None] == tray.rests[ways][None]).all(axis=2)
+                ends = finish[nodes] + np.where(same, after[ways], np.inf).min(axis=1, initial=np.inf)
+                node = int(nodes[np.argmin(np.where(np.isfinite(ends), ends, FAR_S + finish[nodes]))])
+                return _of_tray(choice, node, float(ends.min()), tray, self._kept[1], row_of)
+        return None
+
+
+def _of_tray(choice: Choice, node: int, ends_s: float, tray: Tray, order: TrayOrder, row_of: dict[int, int]) -> Picked:
+    weight = sum(float(tray.weights[part]) for part in order.order[: order.picked] if int(tray.numbers[part]) in row_of)
+    begun = len(row_of) == len(order.order)
+    return Picked(node, (node,), weight, ends_s, float(choice.weights.sum()),
+                  choice.now_s + order.bound_s if begun and order.bound_s else -np.inf)
 
 
 POLICIES = ("arrival", "nearest", "lookahead")

@@ -6,36 +6,23 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from pipeline.cell import Cell
-from pipeline.follow import Part
-from pipeline.grasp import Grasping, Grasps, Holds, Refusal
+from pipeline.candidate import Candidate
+from pipeline.cell import MOST_ON_TRAY, Cell
+from pipeline.grasp import Grasping, Holds, Refusal
 from pipeline.legs import Legs, Nodes
 from pipeline.motion.across import TURNING
 from pipeline.motion.cycle import Hold
+from pipeline.neighbours import ROOM_MM, Neighbours
 from pipeline.places import Filling
 from pipeline.policy import MOST_LOOKED_AT, Choice
-from pipeline.shapes import Shapes, gaps
+from pipeline.trays import Trays
 from pipeline.watch import Watch
 
 FloatArray = NDArray[np.float64]
-ROOM_MM = 0.2  # kept between the jaws and what else lies there
-NEAR_MM = 150.0
+MOST_BITS = 62  # parts that others may wait for
 MOST_GRASPS = 4  # of a part are handed to the policy
 MOVED_MM, TURNED_RAD = 0.5, 0.02  # an estimate that has moved more has its grasps worked out anew
 AWAY_S, NARROW_S = 0.02, 0.3  # what counts against a grasp: each radian of J4 from where it stands, a lane it can't use
-
-
-@dataclass(frozen=True)
-class Candidate:
-    """A part that may be picked: its row, its holds at the latest estimate, its place and slot, its grasps."""
-
-    row: int
-    part: Part
-    xy_mm: FloatArray
-    holds: Holds
-    place: str
-    slot: int
-    grasps: Grasps
 
 
 @dataclass(frozen=True)
@@ -45,6 +32,7 @@ class Scene:
     candidates: tuple[Candidate, ...]
     node_of: NDArray[np.int64]
     choice: Choice
+    on_axis: bool = False
 
     def grasp(self, node: int) -> tuple[Candidate, Hold, FloatArray, FloatArray]:
         """Candidate, hold, joints (4,) and pose (4,) at the slot of a node."""
@@ -52,12 +40,20 @@ class Scene:
         one = self.candidates[k]
         return one, one.holds.holds[one.grasps.hold[row]], one.grasps.drop_joints[row], one.grasps.drop_pose[row]
 
+    def alike(self, node: int) -> set[tuple[int, int]]:
+        """(part row, grasp row) of the node, and, the tool on the quill axis, of those that move J1 and J2 alike."""
+        k, row = self.node_of[node].tolist()
+        one = self.candidates[k]
+        if not self.on_axis:
+            return {(one.row, row)}
+        elbow, end = one.holds.elbow[one.grasps.hold], one.grasps.drop_joints[:, 1] > 0
+        return {(one.row, int(r)) for r in np.flatnonzero((elbow == elbow[row]) & (end == end[row]))}
+
     def met_from_mm(self, node: int) -> float:
         """How far along the part must be before it can be met with this grasp; -inf where anywhere will do."""
         k, row = self.node_of[node].tolist()
         one = self.candidates[k]
-        usable = one.holds.usable[one.grasps.hold[row]]
-        return -np.inf if usable[0] else float(one.holds.along_mm[usable.argmax()])
+        return float(one.holds.met_from_mm(int(one.grasps.hold[row])))
 
 
 class SceneBuilder:
@@ -68,9 +64,10 @@ class SceneBuilder:
         self.cell, self.watch, self.grasping, self.legs = cell, watch, grasping, legs
         self.belt, self.least_score = legs.mover.belt, least_score
         self.refusals: dict[int, Refusal] = {}
-        self.crowded: dict[int, Refusal] = {}  # parts that had no room when last looked at
+        self.crowded: dict[int, Refusal] = {}  # parts that had no room, or no slot, when last looked at
         self._holds: dict[int, tuple[FloatArray, float, Holds]] = {}
-        self._shape_of, self._outlines = _outline_table(watch.parts, outlines)
+        self._trays = Trays(grasping, legs, watch.until_s)
+        self._neighbours = Neighbours(watch.parts, outlines, grasping)
 
     def scene(self, now: float, start: FloatArray, filling: Filling, horizon: int,
               banned: set[tuple[int, int]]) -> Scene | None:
@@ -85,7 +82,7 @@ class SceneBuilder:
             one = None if k in self.refusals else self._candidate(k, frame, filling)
             if one is not None:
                 candidates.append(one)
-            if len(candidates) == min(horizon, MOST_LOOKED_AT):
+            if len(candidates) == min(horizon, MOST_LOOKED_AT if self.cell.belt else MOST_ON_TRAY):
                 break
         node_of, blocked = self._nodes(candidates, frame, float(start[3]), banned)
         if not len(node_of):
@@ -95,8 +92,9 @@ class SceneBuilder:
         along = np.array([one.xy_mm @ self.belt.heading + state.travel_mm for one in candidates])
         choice = Choice(now, nodes, weights, along, blocked,
                         lambda later: self.legs.times(start, now, nodes, state, later),
-                        lambda: self._travel(start, nodes))
-        return Scene(tuple(candidates), node_of, choice)
+                        lambda: self._travel(start, nodes), np.array([one.part.number for one in candidates]),
+                        lambda: self._trays.tray(candidates, node_of, blocked, weights, start, now, filling))
+        return Scene(tuple(candidates), node_of, choice, not self.grasping.arm.offset_mm.any())
 
     def _candidate(self, k: int, frame: int, filling: Filling) -> Candidate | None:
         """The part as it is known, or None where it may not be picked (with the refusal kept where it never may)."""
@@ -117,8 +115,10 @@ class SceneBuilder:
                 if len(grasps.hold):
                     return Candidate(k, part, xy, holds, place, slot, grasps)
         places = ", ".join(self.cell.parts[kind].places)
-        self.refusals[k] = (Refusal("place_full", f"no slot is left in {places}") if all(s is None for _, s in free)
-                            else Refusal("out_of_reach", f"no slot to be filled next can be reached in {places}"))
+        if all(slot is None for _, slot in free):
+            self.refusals[k] = Refusal("place_full", f"no slot is left in {places}")
+        else:  # another kind may fill the slot
+            self.crowded[k] = Refusal("out_of_reach", f"no slot to be filled next can be reached in {places}")
         return None
 
     def _holds_of(self, k: int, kind: str, xy: FloatArray, yaw: float) -> Holds | Refusal:
@@ -143,11 +143,11 @@ class SceneBuilder:
             known = self.watch.parts[k].known
             at = max(known.by(frame), 0)
             poses[i] = (*known.xy_mm[at], known.yaw_rad[at])
-        bit = {one.row: 1 << i for i, one in enumerate(candidates)}
+        bit = {one.row: 1 << i for i, one in enumerate(candidates[:MOST_BITS])}
         blocked = np.zeros(len(candidates), np.int64)
         chosen: list[tuple[int, int]] = []
         for i, one in enumerate(candidates):
-            room = self._room(one, things, poses)[one.grasps.hold]
+            room = self._neighbours.room(one.row, one.xy_mm, one.holds, things, poses)[0][one.grasps.hold]
             met = room < ROOM_MM
             rows = np.flatnonzero(~met.any(axis=1))
             self.crowded.pop(one.row, None)
@@ -157,19 +157,6 @@ class SceneBuilder:
             rows = np.array([r for r in rows if (one.row, int(r)) not in banned], np.int64)
             chosen += [(i, r) for r in self._best(one, rows, j4)]
         return np.array(chosen, np.int64).reshape(-1, 2), blocked
-
-    def _room(self, one: Candidate, things: NDArray[np.int64], poses: FloatArray) -> FloatArray:
-        """(h, things) mm between the jaws of each hold and each thing that lies there; inf far away."""
-        room = np.full((len(one.holds.holds), len(things)), np.inf)
-        near = np.flatnonzero((np.hypot(*(poses[:, :2] - one.xy_mm).T) < NEAR_MM) & (things != one.row))
-        if len(near):
-            tips = one.holds.tips()
-            for grip in np.unique(one.holds.grip):
-                rows = np.flatnonzero(one.holds.grip == grip)
-                jaws = self.grasping.footprint(one.part.kind, int(grip))
-                found, _ = gaps(jaws, tips[rows], self._outlines, self._shape_of[things[near]], poses[near])
-                room[np.ix_(rows, near)] = found
-        return room
 
     def _no_room(self, room: FloatArray, things: NDArray[np.int64]) -> Refusal:
         """What the least obstructed grasp of room (g, things) would meet."""
@@ -227,22 +214,3 @@ def _behind(met: NDArray[np.bool_], bits: Sequence[int]) -> tuple[NDArray[np.int
     count = np.where(able, met.sum(axis=1), met.shape[1] + 1)
     mask = int(masks[count.argmin()])
     return np.flatnonzero(able & (masks & ~mask == 0)), mask
-
-
-def _outline_table(parts: Sequence[Part],
-                   outlines: Mapping[str, FloatArray | float]) -> tuple[NDArray[np.int64], Shapes]:
-    """Shape number of each part, and the shapes: of each kind as it lies up and down, then things not recognised."""
-    kinds = sorted(outlines)
-    shapes: list[FloatArray | float] = []
-    for kind in kinds:
-        outline = outlines[kind]
-        shapes += [outline, outline if np.isscalar(outline) else np.asarray(outline) * (1.0, -1.0)]
-    numbers = np.zeros(len(parts), np.int64)
-    for k, part in enumerate(parts):
-        if part.kind in outlines and not len(part.outline_mm):
-            numbers[k] = 2 * kinds.index(part.kind) + (part.side == "down")
-        else:  # an outline of its own lies along the cell's axes: turned back by the yaw it will be turned by
-            c, s = np.cos(part.yaw_rad), np.sin(part.yaw_rad)
-            numbers[k] = len(shapes)
-            shapes.append(part.outline_mm @ np.array([[c, -s], [s, c]]) if len(part.outline_mm) else 0.0)
-    return numbers, Shapes.of(shapes)

@@ -16,7 +16,7 @@ from cameras.locate import read_detections, read_located
 from cameras.model import load_model
 from cameras.recording import Recording, read_recording
 from cameras.sightings import Sightings
-from pipeline.cell import Cell
+from pipeline.cell import MOST_ON_TRAY, Cell
 from pipeline.finding import calibration_of, found_in
 from pipeline.follow import Followed, follow
 from pipeline.map_share import with_map_share
@@ -124,7 +124,8 @@ def run(setting: Setting, order: str, horizon: int, tick: Callable[[float], None
     """Replay under one order. Raises InputFault for an order there is none of."""
     policy = policy_of(setting, order, budget_ms)
     if order == "lookahead":
-        return replay_ahead(setting, policy, order, min(horizon, MOST_LOOKED_AT), tick)
+        most = MOST_ON_TRAY if setting.cell.belt is None else MOST_LOOKED_AT
+        return replay_ahead(setting, policy, order, min(horizon, most), tick)
     return replay(setting, policy, order, horizon, tick)
 
 

@@ -31,8 +31,10 @@ pipeline.finding pipeline.teaching pipeline.follow
 pipeline.motion
 pipeline.grasp pipeline.legs pipeline.map_share
 pipeline.neighbours
-pipeline.order pipeline.permit pipeline.watch
+pipeline.order pipeline.permit pipeline.watch pipeline.tray_steps
+pipeline.tray_order pipeline.candidate
 pipeline.policy
+pipeline.trays
 pipeline.scene
 pipeline.replay
 pipeline.trajectory pipeline.study pipeline.remedy

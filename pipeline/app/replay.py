@@ -48,7 +48,7 @@ def replay(
     whole = load_cell(cell)
     seen = _seen(whole, recording, detections, located)
     chosen = setting(seen, least_score)
-    order, horizon = order or whole.order.policy, horizon or whole.order.horizon
+    order, horizon = order or whole.order.policy, horizon or whole.horizon
     done = run(chosen, order, horizon, _clock(seen), budget_ms)
     drawn = overlays and detections is None and located is None
     figures = write_run(out, seen, chosen, done, horizon, trajectory, drawn)
@@ -74,7 +74,7 @@ def plan(
     whole = load_cell(cell)
     seen = one_frame(whole, recording, _source(detections, located), frame)
     chosen = setting(seen, least_score)
-    order, horizon = order or whole.order.policy, horizon or whole.order.horizon
+    order, horizon = order or whole.order.policy, horizon or whole.horizon
     done = run(chosen, order, horizon, budget_ms=budget_ms)
     decision = first_decision(chosen, policy_of(chosen, order, budget_ms), horizon, done)
     figures = write_run(out, seen, chosen, done, horizon, True, detections is None and located is None)
@@ -84,7 +84,7 @@ def plan(
                  ("right", "left")[pick.cycle.hold.elbow]) for n, pick in enumerate(done.picks, 1)])  # fmt: skip
     if decision is not None:
         write_decision(out, decision)
-        _explain(decision, done.decide_s[0])
+        _explain(decision, done.picks[0].decide_s)
     _tell(done, figures)
     print(f"-> {out}")
 
