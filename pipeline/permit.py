@@ -1,18 +1,22 @@
-"""Whether a planned cycle may be carried out: limits, singularities, keep-outs and window along the whole of it."""
+"""The cycle of a grasp, and whether it may be carried out: limits, singularities, keep-outs and window all along it."""
 
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
+from pipeline.belt import SMOOTHED_S
 from pipeline.grasp import Grasping, Refusal
-from pipeline.motion.across import TURNING
-from pipeline.motion.cycle import Cycle, Mover, Transfer
+from pipeline.motion.across import SHAPES, TOGETHER, TURNING
+from pipeline.motion.curve import Curve
+from pipeline.motion.cycle import Cycle, Hold, Mover, Transfer
 from pipeline.motion.flip import BESIDE_S
+from pipeline.motion.lift import MotionFault
 
 FloatArray = NDArray[np.float64]
-FOLLOWED = 12  # times looked at while the tool is with the part
-STEP_S = 0.008  # between postures held against keep-outs
+FOLLOWED = 6  # times looked at while the tool is with the part, at least
+STEP_S = 0.008  # between postures held against limits and keep-outs
 SLACK_S = 0.008
 WINDOW_MM = 0.05
 ROUNDING = 1e-9
@@ -25,10 +29,60 @@ class Permit:
     mover: Mover
     grasping: Grasping
 
+    def cycle(self, start: FloatArray, free_s: float, hold: Hold, drop_joints: FloatArray, from_mm: float = -np.inf,
+              until_s: float = np.inf) -> Cycle | Refusal:
+        """The soonest cycle of a grasp by an arm at rest at start (4,) from free_s on, or why none can be carried out.
+
+        from_mm: how far along the part must be before it is met. The ways to the part and to the slot are tried in
+        turn, each for itself.
+        """
+        met_from = self.mover.passes(hold, from_mm) if np.isfinite(from_mm) else -np.inf
+
+        def made(out: int, back: int) -> Cycle | Refusal:
+            try:
+                cycle = self.mover.pick(start, free_s, hold, drop_joints, met_from, (out, back))
+            except MotionFault as fault:
+                return Refusal("joint_limit", str(fault))
+            return Refusal("too_late", "the arm can't meet it inside the window") if cycle is None else cycle
+
+        def first_allowed(ways: Iterable[tuple[int, int]],
+                          refused: Callable[[Cycle], Refusal | None]) -> tuple[int, Cycle | Refusal]:
+            """The first way that is not refused; otherwise why the first one is."""
+            failed: Refusal | None = None
+            for k, way in enumerate(ways):
+                one = made(*way)
+                why = one if isinstance(one, Refusal) else self.at_part_refused(one, until_s) or refused(one)
+                if why is None:
+                    return k, one
+                failed = failed or why
+                if why.reason != "keepout" and k == 0:
+                    break
+            return -1, failed or Refusal("too_late", "no way to it")
+
+        out, cycle = first_allowed(((shape, TOGETHER) for shape in SHAPES), self.out_refused)
+        if isinstance(cycle, Refusal) or self.back_refused(cycle) is None:
+            return cycle
+        return first_allowed(((SHAPES[out], shape) for shape in SHAPES), self.back_refused)[1]
+
     def refused(self, cycle: Cycle, until_s: float = np.inf) -> Refusal | None:
         """Why a cycle may not be carried out, or None. until_s: when the part is taken away."""
-        return (self._window(cycle, until_s) or self._followed(cycle) or self._across(cycle) or self._height(cycle)
-                or self._keepouts(cycle))
+        return self.at_part_refused(cycle, until_s) or self.out_refused(cycle) or self.back_refused(cycle)
+
+    def at_part_refused(self, cycle: Cycle, until_s: float = np.inf) -> Refusal | None:
+        """The same of window, following and heights: whatever way the arm takes to the part and from it."""
+        return (self._window(cycle, until_s) or self._followed(cycle) or self._height(cycle)
+                or self._keepouts(cycle, cycle.met_s, cycle.left_s))
+
+    def out_refused(self, cycle: Cycle) -> Refusal | None:
+        """The same of the way to the part. A start nearer to a limit than its margin is allowed for."""
+        return (self._inside(cycle.out, cycle.start_joints)
+                or self._beside(cycle, cycle.met_s - BESIDE_S + SLACK_S, cycle.met_s)
+                or self._keepouts(cycle, cycle.depart_s, cycle.met_s))
+
+    def back_refused(self, cycle: Cycle) -> Refusal | None:
+        """The same of the way to the slot."""
+        return (self._inside(cycle.back, None) or self._beside(cycle, cycle.left_s, cycle.left_s + BESIDE_S - SLACK_S)
+                or self._keepouts(cycle, cycle.left_s, cycle.release_end_s))
 
     def _window(self, cycle: Cycle, until_s: float) -> Refusal | None:
         if cycle.grasp_end_s > until_s:
@@ -45,41 +99,49 @@ class Permit:
         return None
 
     def _followed(self, cycle: Cycle) -> Refusal | None:
-        t = np.linspace(cycle.met_s, cycle.left_s, FOLLOWED)
+        t = np.linspace(cycle.met_s, cycle.left_s, FOLLOWED + int((cycle.left_s - cycle.met_s) / STEP_S))
         joints = self.mover.joints_on(cycle.hold, t)
         if not np.isfinite(joints).all():
             return Refusal("out_of_reach", "leaves the reach of the arm while it is followed")
         if np.abs(np.diff(joints[:, 0])).max() > np.pi:
             return Refusal("joint_limit", "J1 would have to turn back by a whole turn while it follows the part")
         joints[:, 2] = self.mover.joints(cycle, t)[:, 2]
-        beside = np.concatenate([np.linspace(cycle.met_s - BESIDE_S + SLACK_S, cycle.met_s, 9),
-                                 np.linspace(cycle.left_s, cycle.left_s + BESIDE_S - SLACK_S, 9)])
-        bend = np.abs(np.concatenate([joints[:, 1], self.mover.joints(cycle, beside)[:, 1]]))
-        if bend.min() < self.grasping.singular or bend.max() > np.pi - self.grasping.singular:
-            return Refusal("joint_limit", "comes too near the stretched or folded arm beside the part")
+        singular = self._singular(joints)
+        if singular is not None:
+            return singular
         over = _over(joints.min(axis=0), joints.max(axis=0), self.grasping.lower, self.grasping.upper)
         if over is not None:
             return over
         belt, limits = self.mover.belt, self.mover.arm.limits
         speed, accel = self.mover.arm.follow(joints, belt.speed_mm_s(t)[:, None] * belt.heading,
                                              belt.accel_mm_s2(t)[:, None] * belt.heading)
-        fast = (np.abs(speed) / limits.speed).max(), (np.abs(accel) / limits.accel).max()
+        # where frames come faster than the belt is smoothed one count is a large step: the jerk is then averaged
+        apart = 1 if belt.smoothed_s >= SMOOTHED_S else FOLLOWED
+        jerk = (accel[apart:] - accel[:-apart]) / (apart * (t[1] - t[0]))
+        fast = ((np.abs(speed) / limits.speed).max(), (np.abs(accel) / limits.accel).max(),
+                (np.abs(jerk) / limits.jerk).max(initial=0.0))
         if max(fast) > 1:
             return Refusal("joint_limit", f"following the belt would ask {100 * max(fast):.0f} % of a joint's limits")
         return None
 
-    def _across(self, cycle: Cycle) -> Refusal | None:
-        """The ways across stay inside the limits less margins; a start nearer to a limit is allowed for."""
-        for curves, start in ((cycle.out, cycle.start_joints), (cycle.back, None)):
-            extremes = np.array([curve.extremes()[:2] for curve in curves])
-            lower, upper = self.grasping.lower[TURNING], self.grasping.upper[TURNING]
-            if start is not None:
-                lower, upper = np.minimum(lower, start[TURNING]), np.maximum(upper, start[TURNING])
-            low, high = (np.insert(x, 2, 0.0) for x in (extremes[:, 0], extremes[:, 1]))
-            over = _over(low, high, np.insert(lower, 2, -1.0), np.insert(upper, 2, 1.0))
-            if over is not None:
-                return over
+    def _singular(self, joints: FloatArray) -> Refusal | None:
+        bend = np.abs(joints[:, 1])
+        if bend.min() < self.grasping.singular or bend.max() > np.pi - self.grasping.singular:
+            return Refusal("joint_limit", "comes too near the stretched or folded arm beside the part")
         return None
+
+    def _beside(self, cycle: Cycle, first_s: float, last_s: float) -> Refusal | None:
+        """The same for a while before the part is met, or after it is left."""
+        return self._singular(self.mover.joints(cycle, np.linspace(first_s, last_s, 9)))
+
+    def _inside(self, curves: tuple[Curve, ...], start: FloatArray | None) -> Refusal | None:
+        """A way across stays inside the limits less margins."""
+        extremes = np.array([curve.extremes()[:2] for curve in curves])
+        lower, upper = self.grasping.lower[TURNING], self.grasping.upper[TURNING]
+        if start is not None:
+            lower, upper = np.minimum(lower, start[TURNING]), np.maximum(upper, start[TURNING])
+        low, high = (np.insert(x, 2, 0.0) for x in (extremes[:, 0], extremes[:, 1]))
+        return _over(low, high, np.insert(lower, 2, -1.0), np.insert(upper, 2, 1.0))
 
     def _height(self, cycle: Cycle) -> Refusal | None:
         t = np.unique(np.concatenate([cycle.height.start_s, np.linspace(cycle.depart_s, cycle.release_end_s, 48)]))
@@ -91,14 +153,14 @@ class Permit:
         wrong, limit = (j3.min(), lower) if j3.min() < lower - 1e-6 else (j3.max(), upper)
         return Refusal("joint_limit", f"J3 would need {wrong:.1f} mm, limit less margin {limit:.1f}")
 
-    def _keepouts(self, cycle: Cycle) -> Refusal | None:
+    def _keepouts(self, cycle: Cycle, first_s: float, last_s: float) -> Refusal | None:
         if not self.grasping.cell.keepouts:
             return None
-        return self._near(self.mover.joints(cycle, _times(cycle.depart_s, cycle.release_end_s)))
+        return self._near(self.mover.joints(cycle, _times(first_s, last_s)))
 
-    def home_refused(self, home: Transfer) -> Refusal | None:
-        """Why the way home may not be taken, or None."""
-        return self._near(self.mover.transfer_joints(home, _times(home.depart_s, home.end_s)))
+    def transfer_refused(self, way: Transfer) -> Refusal | None:
+        """Why a way without a part may not be taken, or None."""
+        return self._near(self.mover.transfer_joints(way, _times(way.depart_s, way.end_s)))
 
     def _near(self, joints: FloatArray) -> Refusal | None:
         if not self.grasping.cell.keepouts:

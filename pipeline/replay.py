@@ -2,7 +2,7 @@
 
 import time
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -14,20 +14,20 @@ from pipeline.cell import Cell
 from pipeline.follow import Part
 from pipeline.grasp import Grasping, Refusal
 from pipeline.legs import Legs
-from pipeline.motion.across import APART_J1, APART_J2, TOGETHER
-from pipeline.motion.cycle import Cycle, Hold, Mover, Transfer
-from pipeline.motion.lift import MotionFault
+from pipeline.motion.across import SHAPES
+from pipeline.motion.cycle import Cycle, Mover, Transfer
 from pipeline.permit import Permit
 from pipeline.places import Filling, Place
 from pipeline.policy import Arrival, Picked, Policy
-from pipeline.scene import Candidate, SceneBuilder
+from pipeline.scene import SceneBuilder
 from pipeline.watch import Watch
 
 FloatArray = NDArray[np.float64]
 LEAST_SCORE = 0.5
 MOST_TRIES = 24  # grasps tried at one moment before the arm waits for news
 NEWS_S = 1e-6
-SHAPES = tuple((out, back) for back in (TOGETHER, APART_J2, APART_J1) for out in (TOGETHER, APART_J2, APART_J1))
+RETRY_S = 0.1
+NEAR_MM = 60.0  # so near a ready pose the arm stays where it is
 
 
 @dataclass(frozen=True)
@@ -59,6 +59,7 @@ class Run:
     home: Transfer | None
     decide_s: tuple[float, ...]
     notes: tuple[str, ...] = ()
+    waits: tuple[Transfer, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -116,8 +117,7 @@ def replay_ahead(setting: Setting, policy: Policy, name: str, horizon: int,
     if _worth(setting, plain) <= _worth(setting, ahead) + 1e-9 and len(plain.picks) <= len(ahead.picks):
         return ahead
     note = f"{name} picked {len(ahead.picks)}, arrival {len(plain.picks)}: this run is by arrival"
-    return Run(plain.parts, plain.picks, plain.fates, name, plain.mover, plain.start_s, plain.end_s, plain.home,
-               plain.decide_s, (note,))
+    return replace(plain, notes=(note,))
 
 
 def _worth(setting: Setting, run: Run) -> float:
@@ -134,10 +134,13 @@ class _Clock:
                                     setting.least_score)
         self.permit = Permit(setting.mover, setting.grasping)
         self.filling = Filling(tuple(setting.grasping.places.values()))
-        self.joints = np.array(setting.mover.arm.home)
+        self.arm = setting.mover.arm
+        self.joints = np.array(self.arm.home)
+        self.waits: list[Transfer] = []
         self.picks: list[Pick] = []
         self.tried: dict[int, Refusal] = {}
         self.decide_s: list[float] = []
+        self.turned_down = False
 
     def run(self) -> Run:
         """From the first frame until nothing is left to pick."""
@@ -147,19 +150,46 @@ class _Clock:
             self.tick(now)
             pick = self._decide(now)
             news = self.watch.next_news(now)
-            if pick is None:
-                now = self.watch.next_frame(now)
+            wait = self._get_ready(now) if pick is None and not self.turned_down else None
+            if wait is not None:
+                now = wait.end_s
+            elif pick is None:  # what can't be had now may be had a little farther on
+                later = self.watch.next_frame(now)
+                now = min(later, now + RETRY_S) if self.turned_down else later
             elif pick.cycle.depart_s > news + NEWS_S:  # nothing is under way yet: decide anew with what comes
-                now = news
+                now = min(news, now + RETRY_S) if self.turned_down else news
             else:
                 now = self._carry_out(pick)
         last = max(float(self.set.recording.times_s[-1]), self.picks[-1].cycle.release_end_s if self.picks else 0.0)
         return Run(self.set.parts, tuple(self.picks), self._fates(), self.name, self.set.mover, start, last, self._home(),
-                   tuple(self.decide_s))
+                   tuple(self.decide_s), waits=tuple(self.waits))
+
+    def _get_ready(self, now: float) -> Transfer | None:
+        """Go and wait near where the next part will be. (For a part that is known the arm waits where it is.)"""
+        ready = self._ready_pose()
+        if ready is None or np.hypot(*(self.arm.forward(self.joints)[:2] - self.arm.forward(ready)[:2])) < NEAR_MM:
+            return None
+        for shape in SHAPES:
+            way = self.set.mover.transfer(self.joints, now, ready, shape)
+            if self.permit.transfer_refused(way) is None:
+                self.waits.append(way)
+                self.joints = way.end_joints
+                return way
+        return None
+
+    def _ready_pose(self) -> FloatArray | None:
+        """Joints over the place where the next part is likely to be gripped; None where that can't be said."""
+        at = self.watch.expected_mm()
+        if not np.isfinite(at).all():
+            return None
+        motion = self.set.cell.motion
+        height = max(motion.travel_mm, motion.clear_height_mm)
+        return self.set.grasping.above(at, height, self.arm.home)
 
     def _decide(self, now: float) -> Pick | None:
         """The next pick as it would be carried out."""
         banned: set[tuple[int, int]] = set()
+        self.turned_down = False
         begun = time.perf_counter()
         for _ in range(MOST_TRIES):
             scene = self.builder.scene(now, self.joints, self.filling, self.horizon, banned)
@@ -168,31 +198,16 @@ class _Clock:
                 break
             one, hold, drop_joints, drop_pose = scene.grasp(picked.node)
             spent = time.perf_counter() - begun
-            cycle = self._cycle(now, one, hold, drop_joints, scene.met_from_mm(picked.node))
+            cycle = self.permit.cycle(self.joints, now, hold, drop_joints, scene.met_from_mm(picked.node),
+                                      float(self.watch.until_s[one.row]))
             if isinstance(cycle, Cycle):
                 self.decide_s.append(spent)
+                self.turned_down = bool(banned)
                 return Pick(one.part, now, cycle, one.place, one.slot, drop_pose, picked, len(scene.candidates), spent)
             self.tried[one.row] = cycle
-            banned.add((one.row, int(scene.node_of[picked.node][1])))
+            banned |= scene.alike(picked.node)
+        self.turned_down = bool(banned)
         return None
-
-    def _cycle(self, now: float, one: Candidate, hold: Hold, drop_joints: FloatArray, from_mm: float) -> Cycle | Refusal:
-        """The cycle of a grasp, or why it can't be carried out: the ways around keep-outs are tried in turn."""
-        met_from = self.set.mover.passes(hold, from_mm) if np.isfinite(from_mm) else -np.inf
-        refused: Refusal | None = None
-        for shapes in SHAPES:
-            try:
-                cycle = self.set.mover.pick(self.joints, now, hold, drop_joints, met_from, shapes)
-            except MotionFault as fault:
-                return Refusal("joint_limit", str(fault))
-            if cycle is None:
-                return Refusal("too_late", "the arm can't meet it inside the window")
-            refused = self.permit.refused(cycle, float(self.watch.until_s[one.row]))
-            if refused is None:
-                return cycle
-            if refused.reason != "keepout":
-                break
-        return refused or Refusal("too_late", "no way to it")
 
     def _carry_out(self, pick: Pick) -> float:
         """Let the pick happen; the time the arm is free again."""
@@ -224,5 +239,5 @@ class _Clock:
 
     def _home(self) -> Transfer | None:
         """The way home after the last pick; None where there is none past the keep-outs."""
-        ways = (self.set.mover.home(self.picks[-1].cycle, shape) for shape in (TOGETHER, APART_J2, APART_J1) if self.picks)
-        return next((way for way in ways if self.permit.home_refused(way) is None), None)
+        ways = (self.set.mover.home(self.picks[-1].cycle, shape) for shape in SHAPES if self.picks)
+        return next((way for way in ways if self.permit.transfer_refused(way) is None), None)

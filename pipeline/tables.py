@@ -82,6 +82,7 @@ def summary(run: Run, horizon: int, find_s: Sequence[float], more: dict[str, Any
     missed = Counter(fate.reason for fate in run.fates if fate)
     duration = run.end_s - run.start_s
     moving = sum(pick.cycle.release_end_s - pick.cycle.depart_s for pick in run.picks)
+    moving += sum(way.end_s - way.depart_s for way in run.waits)
     travel = joint_travel(run)
     return {
         "parts_seen": len(run.parts),
@@ -109,8 +110,8 @@ def joint_travel(run: Run) -> FloatArray:
         travel += [out.travel() + back.travel() for out, back in zip(cycle.out, cycle.back, strict=True)]
         t = np.linspace(cycle.met_s, cycle.left_s, 9)
         travel += np.abs(np.diff(run.mover.joints_on(cycle.hold, t)[:, TURNING], axis=0)).sum(axis=0)
-    if run.home:
-        travel += [curve.travel() for curve in run.home.across]
+    for way in (*run.waits, *([run.home] if run.home else [])):
+        travel += [curve.travel() for curve in way.across]
     return travel
 
 

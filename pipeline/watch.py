@@ -13,6 +13,7 @@ from pipeline.follow import Part
 FloatArray = NDArray[np.float64]
 BESIDE_MM = 150.0  # so far behind the window a part may still stand in the way of one inside it
 NOW_S = 1e-9
+RECENT = 20  # parts that say where the next one will come
 
 
 class Watch:
@@ -31,6 +32,8 @@ class Watch:
             self.until_s = np.array([gone[part.first_row] for part in parts])
         self.gripped = np.zeros(len(parts), bool)
         self.passed = np.zeros(len(parts), bool)
+        self._heading = belt.heading
+        self._first_mm = cell.belt.window_mm[0] if cell.belt and cell.belt.window_mm else np.nan
         self._last_mm = cell.belt.window_mm[1] if cell.belt and cell.belt.window_mm else np.inf
         self._coming = np.argsort(self.first_s, kind="stable")
         self._seen = 0
@@ -57,6 +60,16 @@ class Watch:
         """Rows of those that have not left the window, farthest downstream first."""
         rows = [k for k in self._lying if not self.passed[k]]
         return sorted(rows, key=lambda k: (-self.along_mm[k], k))
+
+    def expected_mm(self) -> FloatArray:
+        """Where the next part is likely to be gripped first (2,), from those known so far; NaN before the first."""
+        seen = self._coming[max(self._seen - RECENT, 0):self._seen]
+        if not len(seen):
+            return np.full(2, np.nan)
+        middle = np.mean([self.parts[k].xy_mm for k in seen], axis=0)
+        if np.isfinite(self._first_mm):
+            middle = middle + (self._first_mm - middle @ self._heading) * self._heading
+        return np.asarray(middle)
 
     def next_news(self, now: float) -> float:
         """When the next part will be known; inf where none is left."""

@@ -1,5 +1,6 @@
 """What is said of a run: phases, pace, loads, windows, choices; and the plots of them."""
 
+from dataclasses import replace
 from itertools import pairwise
 from pathlib import Path
 
@@ -90,3 +91,14 @@ def test_plots_are_written_and_the_same_again(one: Made, tmp_path: Path) -> None
     assert len(first) == 5
     assert first == again
     assert all(data.startswith(b"\x89PNG") for data in first)
+
+
+def test_a_way_to_where_the_arm_waits_counts_as_across(one: Made) -> None:
+    """Put into the longest wait."""
+    longest = max((phase for phase in phases_of(one.run) if phase.name == "waiting"), key=lambda p: p.end_s - p.start_s)
+    home, middle = one.run.home, 0.5 * (longest.start_s + longest.end_s)
+    assert home is not None
+    way = replace(home, depart_s=longest.start_s, end_s=middle)
+    phases = phases_of(replace(one.run, waits=(way,)))
+    assert all(before.end_s == after.start_s for before, after in pairwise(phases))
+    assert [p.name for p in phases if longest.start_s <= p.start_s < longest.end_s] == ["across", "waiting"]

@@ -15,7 +15,10 @@ SPLIT = ("up", "across to the part", "down", "dwell", "up with the part", "acros
 
 @dataclass(frozen=True)
 class Phase:
-    """A stretch of the run in which the arm does one thing. name: one of PHASES; pick: index of the pick it serves."""
+    """A stretch of the run in which the arm does one thing. name: one of PHASES; pick: index of the pick it serves.
+
+    A way to where the arm waits counts as across.
+    """
 
     name: str
     start_s: float
@@ -28,11 +31,21 @@ def phases_of(run: Run) -> list[Phase]:
     told, free = [], run.start_s
     for k, pick in enumerate(run.picks):
         edges = _edges(pick.cycle)
-        told.append(Phase("waiting", free, edges[0], k))
+        told += _waiting(run, free, edges[0], k)
         names = ("up", "across", "down", "dwell", "up", "across", "down", "release")
         told += [Phase(name, a, b, k) for name, a, b in zip(names, edges, edges[1:], strict=False)]
         free = edges[-1]
     return [phase for phase in told if phase.end_s > phase.start_s]
+
+
+def _waiting(run: Run, start_s: float, end_s: float, pick: int) -> list[Phase]:
+    """From one cycle's end to the next one's start."""
+    told = []
+    for way in run.waits:
+        if start_s <= way.depart_s < end_s:
+            told += [Phase("waiting", start_s, way.depart_s, pick), Phase("across", way.depart_s, way.end_s, pick)]
+            start_s = way.end_s
+    return [*told, Phase("waiting", start_s, end_s, pick)]
 
 
 def split_of(run: Run) -> NDArray[np.float64]:

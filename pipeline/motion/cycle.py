@@ -148,14 +148,17 @@ class Mover:
 
     def home(self, cycle: Cycle, shape: int = TOGETHER) -> Transfer:
         """From the end of a cycle to the arm's home, at home's height or, where that is below it, the clear height."""
-        start, end = cycle.end_joints, np.array(self.arm.home)
+        end = np.array(self.arm.home)
         height = max(float(self.arm.forward(end)[2]), self.motion.clear_height_mm)
         end[2] = quill(self.arm, height, end[3])
-        lift = self.lift_from(start, height)
+        return self.transfer(cycle.end_joints, cycle.release_end_s, end, shape)
+
+    def transfer(self, start: FloatArray, depart_s: float, end: FloatArray, shape: int = TOGETHER) -> Transfer:
+        """From rest at joints (4,) to rest at others, whose tip is at the clear height or above."""
+        lift = self.lift_from(start, float(self.arm.forward(end)[2]))
         move = self.across.between(at_rest(start), at_rest(end), shape=shape)
-        depart = cycle.release_end_s
-        across_s, up = depart + lift.rise_s(move.duration), lift.curve(move.duration).later(depart)
-        return Transfer(depart, max(across_s + move.duration, up.end_s),
+        across_s, up = depart_s + lift.rise_s(move.duration), lift.curve(move.duration).later(depart_s)
+        return Transfer(depart_s, max(across_s + move.duration, up.end_s),
                         tuple(curve.later(across_s) for curve in move.curves), up, end)
 
     def passes(self, hold: Hold, along_mm: float) -> float:

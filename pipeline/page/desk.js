@@ -70,7 +70,8 @@ class Desk {
   sentence() {
     const { pick, phase, step } = doing(this.t);
     let told;
-    if (pick < 0) told = this.t >= (scene.picks.at(-1)?.edges[8] ?? scene.start) && scene.picks.length ? "The last pick is done." : "The arm waits.";
+    if (phase === "waiting" && scene.waits.some(([a, b]) => a <= this.t && this.t < b)) told = "Goes where the next part is to come.";
+    else if (pick < 0) told = this.t >= (scene.picks.at(-1)?.edges[8] ?? scene.start) && scene.picks.length ? "The last pick is done." : "The arm waits.";
     else {
       const part = scene.parts[scene.picks[pick].part], name = `part ${part.no} (${kindOf(part)})`;
       const place = `${scene.places[scene.picks[pick].place].name} ${scene.picks[pick].slot + 1}`;

@@ -27,7 +27,9 @@ def scene(subject: Subject) -> str:
         "start": _t(subject, subject.run.start_s), "end": _t(subject, _end_s(subject)), "arm": _arm(subject),
         "belt": _belt(subject), "kinds": _kinds(subject), "places": _places(subject),
         "keepouts": [{"name": k.name, "at": _flat(k.polygon_mm)} for k in subject.setting.cell.keepouts],
-        "parts": _parts(subject), "picks": _picks(subject), "motion": _motion(subject), "view": _view(subject),
+        "parts": _parts(subject), "picks": _picks(subject), "motion": _motion(subject),
+        "waits": [[_t(subject, way.depart_s), _t(subject, way.end_s)] for way in subject.run.waits],
+        "view": _view(subject),
         "frames": frames(subject),
     }  # fmt: skip
     text = json.dumps(document, separators=(",", ":"), allow_nan=False)

@@ -46,7 +46,7 @@ class Timeline {
 
   phases(context, start, end) {
     const glyphs = { up: "↑", across: "→", down: "↓", dwell: "•", release: "▽" };
-    const box = (a, b, name, pick) => {
+    const box = (a, b, name) => {
       const x = this.x(a), wide = this.x(b) - x;
       if (name === "waiting") {
         context.strokeStyle = inks.soft;
@@ -71,12 +71,13 @@ class Timeline {
     scene.picks.forEach((pick, k) => {
       const e = pick.edges;
       if (e[8] > start && free < end) {
-        box(free, e[0], "waiting", k);
-        for (let i = 0; i < 8; i++) if (e[i + 1] > e[i]) box(e[i], e[i + 1], PHASES[i], k);
+        box(free, e[0], "waiting");
+        for (let i = 0; i < 8; i++) if (e[i + 1] > e[i]) box(e[i], e[i + 1], PHASES[i]);
       }
       free = e[8];
     });
-    if (free < end) box(free, scene.end, "waiting", -1);
+    if (free < end) box(free, scene.end, "waiting");
+    for (const [a, b] of scene.waits) if (b > start && a < end) box(a, b, "across");
   }
 
   part(context, k, y, tall, chosen, t) {
