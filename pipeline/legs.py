@@ -80,7 +80,7 @@ class Legs:
         """Leg times for an arm at rest at start (4,) from now on; without `later` only those that begin now, here."""
         span = self._span(nodes, belt.speed_mm_s)
         step = max(span / START_TIMES, LEAST_STEP_S)
-        start_s: FloatArray = np.asarray(now + (step * np.arange(START_TIMES + 1) if later else np.zeros(1)), np.float64)
+        start_s = np.linspace(now, now + step * START_TIMES, START_TIMES + 1) if later else np.full(1, now)
         places, start_of = np.unique(np.round(nodes.drop, 9), axis=0, return_inverse=True)
         starts = np.concatenate([start[None], places]) if later else start[None]
         heights = self.mover.arm.forward(starts)[:, 2]

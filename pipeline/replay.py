@@ -108,15 +108,13 @@ def replay(setting: Setting, policy: Policy, name: str, horizon: int,
 
 def replay_ahead(setting: Setting, policy: Policy, name: str, horizon: int,
                  tick: Callable[[float], None] = lambda now: None) -> Run:
-    """Replay under a policy that looks ahead; where picking by arrival would have picked more, that is the run.
-
-    A note in the run says so.
-    """
+    """Replay under a policy that looks ahead; where arrival picks more parts or more weight, its run, and a note in it."""
     ahead = replay(setting, policy, name, horizon, tick)
     plain = replay(setting, Arrival(), name, horizon)
     if _worth(setting, plain) <= _worth(setting, ahead) + 1e-9 and len(plain.picks) <= len(ahead.picks):
         return ahead
-    note = f"{name} picked {len(ahead.picks)}, arrival {len(plain.picks)}: this run is by arrival"
+    note = (f"by {name} {len(ahead.picks)} parts of weight {_worth(setting, ahead):g} would be picked, by arrival "
+            f"{len(plain.picks)} of {_worth(setting, plain):g}: this run is by arrival")
     return replace(plain, notes=(note,))
 
 
