@@ -222,7 +222,7 @@ class Grasping:
         return Drops(poses[rows[usable]], joints[usable])
 
     def above(self, xy_mm: FloatArray, z_mm: float, like: FloatArray) -> FloatArray | None:
-        """Joints (4,) with the tip over a point, on the elbow of `like` (4,) and J4 nearest to its; None out of reach."""
+        """Joints (4,) with the tip over a point, with the elbow of `like` (4,) and J4 near its; None out of reach."""
         poses = np.empty((FREE_YAWS, 4))
         poses[:, :2], poses[:, 2] = xy_mm, z_mm
         poses[:, 3] = np.arange(FREE_YAWS) * 2 * np.pi / FREE_YAWS
@@ -264,7 +264,7 @@ class Grasping:
 
 @dataclass(frozen=True)
 class Grasps:
-    """g whole grasps of one part: row of its hold (g,), joints (g, 4) and pose (g, 4) at the slot, time to carry (g,)."""
+    """g whole grasps of one part: row of its hold (g,), joints and pose (g, 4) at the slot, time to carry (g,)."""
 
     hold: NDArray[np.int64]
     drop_joints: FloatArray

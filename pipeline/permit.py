@@ -186,4 +186,5 @@ def _over(low: FloatArray, high: FloatArray, lower: FloatArray, upper: FloatArra
     j = int(over.argmax())
     wrong, limit = (high[j], upper[j]) if high[j] > upper[j] + ROUNDING else (low[j], lower[j])
     scale, unit = (1.0, "mm") if j == 2 else (180 / np.pi, "deg")
-    return Refusal("joint_limit", f"J{j + 1} would need {wrong * scale:.1f} {unit}, limit less margin {limit * scale:.1f}")
+    told = f"J{j + 1} would need {wrong * scale:.1f} {unit}, limit less margin {limit * scale:.1f}"
+    return Refusal("joint_limit", told)

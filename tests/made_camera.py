@@ -36,7 +36,8 @@ class MadeTouches:
 
 
 def made_touches(
-    camera: CameraMap, n: int = 24, off_plane: int = 0, pixel_noise: float = 0.1, touch_noise: float = 0.05, seed: int = 0
+    camera: CameraMap, n: int = 24, off_plane: int = 0, pixel_noise: float = 0.1, touch_noise: float = 0.05,
+    seed: int = 0,
 ) -> MadeTouches:
     """n marks on the camera's plane, spread over the image, then some 20 mm above it; noise in px and mm."""
     rng = np.random.default_rng(seed)

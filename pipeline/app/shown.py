@@ -46,7 +46,8 @@ def advancing(start: float, end: float, label: str) -> Callable[[float], None]:
     console = Console(stderr=True)
     if not console.is_terminal:
         return lambda value: None
-    bar = Progress(TextColumn("{task.description}"), BarColumn(), TimeRemainingColumn(), console=console, transient=True)
+    columns = (TextColumn("{task.description}"), BarColumn(), TimeRemainingColumn())
+    bar = Progress(*columns, console=console, transient=True)
     task = bar.add_task(label, total=end - start)
     bar.start()
 

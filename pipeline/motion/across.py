@@ -1,8 +1,8 @@
 """The way across: J1, J2 and J4 together, from rest or from following a part, to rest or to meeting a part.
 
-All joints end at the same time, that of the slowest. To meet a moving part exactly, the time of the meeting is searched:
-the shortest T for which a move that ends at time T, in the state that following the part asks for at time T, needs no
-longer than T. ruckig stretches the quicker joints to T; where a joint's profile can't be stretched so (a moving end
+All joints end at the same time, that of the slowest. To meet a moving part exactly, the time of the meeting is
+searched: the shortest T for which a move that ends at time T, in the state that following the part asks for at time T,
+needs no longer than T. ruckig stretches the quicker joints to T; where a joint's profile can't be stretched so (a moving end
 leaves gaps in the durations it can have) the joint waits at its resting end and moves in its own least time.
 """
 
@@ -25,7 +25,7 @@ SETTLED_S = 1e-7
 MOST_S = 60.0
 SEARCHES, PATIENCE = 60, 40  # after so many steps any meeting will do
 
-# all joints in time with each other, or one of them in its own least time: next to the resting end, or to the part's end
+# all joints in time with each other, or one of them in its own least time: next to the resting end, or to the part
 TOGETHER, J2_BY_REST, J2_BY_PART, J1_BY_REST, J1_BY_PART = range(5)
 SHAPES = (TOGETHER, J2_BY_REST, J2_BY_PART, J1_BY_REST, J1_BY_PART)
 _APART = {J2_BY_REST: 1, J2_BY_PART: 1, J1_BY_REST: 0, J1_BY_PART: 0}
@@ -122,7 +122,7 @@ class Across:
             if needed > MOST_S:
                 return None
             spare = wanted - needed
-            if 0 <= spare and (spare < SETTLED_S or attempt > PATIENCE):
+            if spare >= 0 and (spare < SETTLED_S or attempt > PATIENCE):
                 return self.between(start, end, wanted, shape)
             wanted = needed if needed == least_s else needed + 0.1 * SETTLED_S
         return None

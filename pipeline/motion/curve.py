@@ -2,6 +2,7 @@
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 import ruckig
@@ -62,11 +63,8 @@ class Curve:
         inside = [np.zeros_like(span), span]
         with np.errstate(divide="ignore", invalid="ignore"):
             root = np.sqrt(4 * a * a - 12 * j * v)
-            for x in ((-2 * a + root) / (6 * j), (-2 * a - root) / (6 * j), -v / (2 * a)):
-                inside.append(np.where(np.isfinite(x), np.clip(x, 0.0, span), 0.0))
-            turn = -a / (3 * j)
-        inside.append(np.where(np.isfinite(turn), np.clip(turn, 0.0, span), 0.0))
-        x = np.stack(inside)
+            turns = ((-2 * a + root) / (6 * j), (-2 * a - root) / (6 * j), -v / (2 * a), -a / (3 * j))
+        x = np.stack([*inside, *(np.where(np.isfinite(t), np.clip(t, 0.0, span), 0.0) for t in turns)])
         position = p + x * (v + x * (a + x * j))
         speed = v + x * (2 * a + 3 * x * j)
         accel = 2 * a + 6 * x * j
@@ -98,7 +96,7 @@ class Curve:
 
 def _cuts(curves: Sequence[Curve]) -> list[int]:
     """How many pieces of each curve start before the next curve does."""
-    cuts = [int(np.searchsorted(a.start_s, b.start_s[0], side="left")) for a, b in zip(curves, curves[1:], strict=False)]
+    cuts = [int(np.searchsorted(a.start_s, b.start_s[0], side="left")) for a, b in pairwise(curves)]
     return [*cuts, len(curves[-1].start_s)]
 
 

@@ -26,6 +26,7 @@ from pipeline.motion.lift import Lift, LiftLimits
 FloatArray = NDArray[np.float64]
 SETTLED_S = 1e-7
 SETTLING = 40
+LEAST_SPARE = 0.2
 
 
 @dataclass(frozen=True)
@@ -193,7 +194,7 @@ class Mover:
             if needed <= rise + SETTLED_S:
                 break
             rise = needed
-        return _Leg(free_s, rise, move)
+        return None if move is None else _Leg(free_s, rise, move)
 
     def _meet_at(self, start: FloatArray, met_s: float, hold: Hold, lift: Lift, shape: int) -> "_Leg | None":
         """The way that meets the part at met_s, begun as late as that allows."""
@@ -278,7 +279,7 @@ class _Leg:
 def turned(arm: Arm, joints: FloatArray, yaw: float, turn: int) -> FloatArray:
     """Joints (n, 4) with J4 unwrapped along J1 and J2 and shifted by whole turns, so that it never jumps on a lane."""
     q = joints.copy()
-    a, b, _ = arm.headings(q)
+    _, b, _ = arm.headings(q)
     q[:, 3] = arm.sense[3] * (yaw - arm.tool_yaw - b) + 2 * np.pi * turn
     q[:, 2] += quill(arm, 0.0, q[:, 3]) - quill(arm, 0.0, joints[:, 3])
     return q
@@ -293,8 +294,14 @@ def quill(arm: Arm, z_mm: FloatArray | float, j4: FloatArray) -> FloatArray:
 def lift_limits(cell: Cell, arm: Arm) -> LiftLimits:
     """Limits of the tip's height: J3's, less what J4 can take up where its turning lifts the quill."""
     limits, lead = arm.limits, abs(arm.lead)
-    speed, accel, jerk = (float(x[2] - lead * x[3]) if lead else float(x[2]) for x in (limits.speed, limits.accel, limits.jerk))
+    speed, accel, jerk = (_spare(float(x[2]), lead * float(x[3]) if lead else 0.0)
+                          for x in (limits.speed, limits.accel, limits.jerk))
     ends = np.array([limits.lower[2] + cell.motion.limit_margin_mm, limits.upper[2] - cell.motion.limit_margin_mm])
     heights = arm.flange_z_mm - arm.tool_length_mm + arm.sense[2] * ends
     swing = lead * float(np.abs([limits.lower[3], limits.upper[3]]).max())
     return LiftLimits(speed, accel, jerk, float(heights.max() - swing))
+
+
+def _spare(limit: float, taken: float) -> float:
+    """What J3 has left of a limit when J4's turning may take so much of it; a fifth at the least (permits check J3)."""
+    return limit if not np.isfinite(limit) else max(limit - taken, LEAST_SPARE * limit)

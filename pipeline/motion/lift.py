@@ -2,7 +2,7 @@
 
 The way across may begin when the tip passes the gate on its way up, and must have ended when it passes the gate on its
 way down; in between the tip need not stop. One number shapes such a move: the time at which the rise is broken off and
-the tip is sent down (both parts time-optimal and jerk-limited). The later that is, the longer the tip is above the gates.
+the tip is sent down (both parts time-optimal and jerk-limited). The later that is, the longer it is above the gates.
 """
 
 from collections.abc import Callable
@@ -119,7 +119,8 @@ class Lift:
     def total_s(self, across_s: float) -> float:
         """The whole move, from rest to rest, when the tip is to be above the gates for across_s."""
         table = self.table
-        return float(np.interp(across_s, table.across_s, table.total_s)) + max(across_s - float(table.across_s[-1]), 0.0)
+        late = max(across_s - float(table.across_s[-1]), 0.0)
+        return float(np.interp(across_s, table.across_s, table.total_s)) + late
 
     def curve(self, across_s: float) -> Curve:
         """The move that keeps the tip above the gates for across_s, from time 0."""
@@ -172,10 +173,10 @@ def _last_above(curve: Curve, height: float) -> float:
 def _crossing(curve: Curve, height: float, rising: bool) -> float:
     """The first rise through, or last fall through, a height; the time of the apex where it is only just reached."""
     t = np.linspace(curve.start_s[0], curve.end_s, 129)
-    z = curve.at(t)
-    above = np.flatnonzero(z >= height)
+    heights = curve.at(t)
+    above = np.flatnonzero(heights >= height)
     if not len(above):
-        return float(t[np.argmax(z)])
+        return float(t[np.argmax(heights)])
     k = int(above[0] if rising else above[-1])
     if (rising and k == 0) or (not rising and k == len(t) - 1):
         return float(t[k])
