@@ -108,7 +108,7 @@ def replay(setting: Setting, policy: Policy, name: str, horizon: int,
 
 def replay_ahead(setting: Setting, policy: Policy, name: str, horizon: int,
                  tick: Callable[[float], None] = lambda now: None) -> Run:
-    """Replay under a policy that looks ahead; where arrival picks more parts or more weight, its run, and a note in it."""
+    """Replay under a policy that looks ahead; where arrival picks more parts or weight, its run, and a note in it."""
     ahead = replay(setting, policy, name, horizon, tick)
     plain = replay(setting, Arrival(), name, horizon)
     if _worth(setting, plain) <= _worth(setting, ahead) + 1e-9 and len(plain.picks) <= len(ahead.picks):
