@@ -26,7 +26,7 @@ FloatArray = NDArray[np.float64]
 LEAST_SCORE = 0.5
 MOST_TRIES = 24  # grasps tried at one moment before the arm waits for news
 NEWS_S = 1e-6
-RETRY_S = 0.1
+RETRY_S, MOST_RETRIES = 0.1, 100
 NEAR_MM = 60.0  # so near a ready pose the arm stays where it is
 
 
@@ -125,7 +125,8 @@ def _worth(setting: Setting, run: Run) -> float:
 class _Clock:
     """The run of one replay."""
 
-    def __init__(self, setting: Setting, policy: Policy, name: str, horizon: int, tick: Callable[[float], None]) -> None:
+    def __init__(self, setting: Setting, policy: Policy, name: str, horizon: int,
+                 tick: Callable[[float], None]) -> None:
         self.set, self.policy, self.name, self.horizon, self.tick = setting, policy, name, horizon, tick
         self.watch = Watch(setting.cell, setting.recording, setting.belt, setting.parts)
         self.builder = SceneBuilder(setting.cell, self.watch, setting.grasping, setting.legs, setting.outlines,
@@ -144,23 +145,25 @@ class _Clock:
         """From the first frame until nothing is left to pick."""
         now = float(self.watch.known_s[0])
         start = float(self.set.recording.times_s[0])
-        while np.isfinite(now):
+        tries = 0  # since anything new was known or done
+        while np.isfinite(now) and tries < MOST_RETRIES:
             self.tick(now)
             pick = self._decide(now)
-            news = self.watch.next_news(now)
-            wait = self._get_ready(now) if pick is None and not self.turned_down else None
+            news, later = self.watch.next_news(now), self.watch.next_frame(now)
+            tries = 0 if pick or np.isfinite(later) else tries + 1
+            idle = pick is None and not self.turned_down and np.isfinite(later)
+            wait = self._get_ready(now) if idle else None
             if wait is not None:
                 now = wait.end_s
             elif pick is None:  # what can't be had now may be had a little farther on
-                later = self.watch.next_frame(now)
                 now = min(later, now + RETRY_S) if self.turned_down else later
             elif pick.cycle.depart_s > news + NEWS_S:  # nothing is under way yet: decide anew with what comes
                 now = min(news, now + RETRY_S) if self.turned_down else news
             else:
                 now = self._carry_out(pick)
         last = max(float(self.set.recording.times_s[-1]), self.picks[-1].cycle.release_end_s if self.picks else 0.0)
-        return Run(self.set.parts, tuple(self.picks), self._fates(), self.name, self.set.mover, start, last, self._home(),
-                   tuple(self.decide_s), waits=tuple(self.waits))
+        return Run(self.set.parts, tuple(self.picks), self._fates(), self.name, self.set.mover, start, last,
+                   self._home(), tuple(self.decide_s), waits=tuple(self.waits))
 
     def _get_ready(self, now: float) -> Transfer | None:
         """Go and wait near where the next part will be. (For a part that is known the arm waits where it is.)"""
@@ -237,5 +240,8 @@ class _Clock:
 
     def _home(self) -> Transfer | None:
         """The way home after the last pick; None where there is none past the keep-outs."""
-        ways = (self.set.mover.home(self.picks[-1].cycle, shape) for shape in SHAPES if self.picks)
+        if not self.picks:
+            return None
+        free = max([self.picks[-1].cycle.release_end_s, *(way.end_s for way in self.waits)])
+        ways = (self.set.mover.home(self.joints, free, shape) for shape in SHAPES)
         return next((way for way in ways if self.permit.transfer_refused(way) is None), None)

@@ -195,7 +195,7 @@ def test_a_cycle_begins_and_ends_at_rest_where_it_should(seed: int) -> None:
 def test_the_way_home_keeps_limits_and_clear_height(seed: int) -> None:
     one = case(seed)
     assume(one is not None)
-    home = one.mover.home(one.cycle)
+    home = one.mover.home(one.cycle.end_joints, one.cycle.release_end_s)
     t = np.arange(home.depart_s - 0.01, home.end_s + 0.01, DT)
     joints = one.mover.transfer_joints(home, t)
     assert joints[0] == pytest.approx(one.slot, abs=1e-6)

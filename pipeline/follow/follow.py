@@ -78,9 +78,10 @@ def follow(
     turns = np.array([0, *(cell.parts[name].turns for name in names[1:])], dtype=np.int64)
     thing = _numbered(_associated(seen, None if cell.belt is None else travel_mm[sightings.row]), seen, heading)
     by_thing = _sorted(thing, sightings.row)
-    views = _mere_views(by_thing, seen, _estimated(by_thing, seen, turns), names, outlines_mm or {})
-    thing = _numbered(np.where((thing >= 0) & views[thing], -1, thing), seen, heading)
-    by_thing = _sorted(thing, sightings.row)
+    if cell.belt is not None:  # what lay in one tray is no view of what lies in another
+        views = _mere_views(by_thing, seen, _estimated(by_thing, seen, turns), names, outlines_mm or {})
+        thing = _numbered(np.where((thing >= 0) & views[thing], -1, thing), seen, heading)
+        by_thing = _sorted(thing, sightings.row)
     known = _estimated(by_thing, seen, turns)
     drift = None if cell.belt is None else _drift(by_thing, known, seen, recording, travel_mm, heading,
                                                   cell.belt.mm_per_count, names)

@@ -129,14 +129,14 @@ class Mover:
             meeting = self._meet_soonest(start, free_s, soonest, hold, lift, shapes[0])
         if meeting is None:
             return None
-        down = lift.curve(meeting.move.duration)
+        down = lift.curve(meeting.above_s(lift))
         grasp_start = meeting.depart_s + down.end_s
         grasp_end = grasp_start + self.motion.grasp_s
         leaving = self._leave(hold, grasp_end, place_joints, shapes[1])
         if leaving is None:
             return None
-        up = self.lift(round(hold.z_mm, 6), round(float(self.arm.forward(place_joints)[2]), 6)).curve(
-            leaving.move.duration)
+        lift = self.lift(round(hold.z_mm, 6), round(float(self.arm.forward(place_joints)[2]), 6))
+        up = lift.curve(leaving.above_s(lift))
         left = grasp_end + leaving.rise_s
         release = grasp_end + up.end_s
         height = Curve.joined([down.later(meeting.depart_s), Curve.held(hold.z_mm, grasp_start, grasp_end),
@@ -147,12 +147,12 @@ class Mover:
                      tuple(curve.later(across_s) for curve in meeting.move.curves),
                      tuple(curve.later(left) for curve in leaving.move.curves), height)
 
-    def home(self, cycle: Cycle, shape: int = TOGETHER) -> Transfer:
-        """From the end of a cycle to the arm's home, at home's height or, where that is below it, the clear height."""
+    def home(self, start: FloatArray, depart_s: float, shape: int = TOGETHER) -> Transfer:
+        """From rest at joints (4,) to the arm's home, at home's height or, where that is below it, the clear height."""
         end = np.array(self.arm.home)
         height = max(float(self.arm.forward(end)[2]), self.motion.clear_height_mm)
         end[2] = quill(self.arm, height, end[3])
-        return self.transfer(cycle.end_joints, cycle.release_end_s, end, shape)
+        return self.transfer(start, depart_s, end, shape)
 
     def transfer(self, start: FloatArray, depart_s: float, end: FloatArray, shape: int = TOGETHER) -> Transfer:
         """From rest at joints (4,) to rest at others, whose tip is at the clear height or above."""
@@ -177,7 +177,7 @@ class Mover:
         if not np.isfinite(soonest) or soonest <= free_s:
             return None
         leg = self._meet_at(start, soonest, hold, lift, shape)
-        if leg is not None and leg.depart_s + lift.total_s(leg.move.duration) < enters:
+        if leg is not None and leg.depart_s + lift.total_s(leg.above_s(lift)) < enters:
             leg = self._contact_at(start, enters, hold, lift, shape)
         return leg if leg is not None and leg.depart_s >= free_s else None
 
@@ -215,7 +215,7 @@ class Mover:
             leg = self._meet_at(start, met, hold, lift, shape)
             if leg is None:
                 return None
-            late = contact_s - leg.depart_s - lift.total_s(leg.move.duration)
+            late = contact_s - leg.depart_s - lift.total_s(leg.above_s(lift))
             if abs(late) < SETTLED_S:
                 break
             met += late
@@ -274,6 +274,10 @@ class _Leg:
     def met_s(self) -> float:
         """When the way across ends."""
         return self.depart_s + self.rise_s + self.move.duration
+
+    def above_s(self, lift: Lift) -> float:
+        """How long the tip has to be above the gates: the way across, and what it began later than it could have."""
+        return self.move.duration + max(0.0, self.rise_s - lift.rise_s(self.move.duration))
 
 
 def turned(arm: Arm, joints: FloatArray, yaw: float, turn: int) -> FloatArray:
