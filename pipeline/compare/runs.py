@@ -43,7 +43,7 @@ def compare(
             for order in (orders or [one.cell.order.policy])]  # fmt: skip
     tried = []
     for name, one, order in ticking(work, len(work)):
-        chosen, ahead = setting(one, least_score), horizon or one.cell.order.horizon
+        chosen, ahead = setting(one, least_score), horizon or one.cell.horizon
         done = run(chosen, order, ahead)
         label = order if len(cells) == 1 else name if len(work) == len(cells) else f"{name}, {order}"
         tried.append(Tried(label, one.cell, one, chosen, done, figures_of(done, ahead, one)))
