@@ -83,7 +83,7 @@ def export(
     whole = load_cell(cell)
     seen = see(whole, recording, Source(detections, located), lambda rows: progress(rows, len(list(rows)), "find"))
     chosen = setting(seen, least_score)
-    done = run(chosen, order or whole.order.policy, horizon or whole.order.horizon)
+    done = run(chosen, order or whole.order.policy, horizon or whole.horizon)
     for path in write_export(out, chosen, done, period_s):
         print(path)
     print(f"{len(done.picks)} picks of {len(done.parts)} parts")
