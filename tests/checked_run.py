@@ -201,11 +201,11 @@ def poses(files: Files) -> Iterator[str]:
         return
     true = columns(files.truth, "x_mm", "y_mm")
     for pick in files.picks:
-        travel, _ = files.travel(np.array([float(pick["grasp_start_s"])]))
+        travel, unsure = files.travel(np.array([float(pick["grasp_start_s"])]))
         at = np.array([float(pick["x_mm"]), float(pick["y_mm"])]) - travel * files.heading
         near = np.hypot(*(true - at).T)
         row = files.truth[int(near.argmin())]
-        if near.min() > 3.0 or row["part"] != pick["part"] or row["side"] != "up":
+        if near.min() > 3.0 + unsure[0] or row["part"] != pick["part"] or row["side"] != "up":
             yield f"pick {pick['pick']}: a {row['part']} lying {row['side']} is {near.min():.1f} mm away"
 
 
