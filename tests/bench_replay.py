@@ -36,9 +36,9 @@ def main(recording: str, cell: str, located: str, parts: int = 6000) -> None:
             hour.mover.pick(cycle.start_joints, cycle.depart_s, cycle.hold, cycle.end_joints)
         floor = (time.perf_counter() - begun) / min(len(run.picks), 200) * len(run.picks)
         memory = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
-        print(f"{order:10} {len(run.parts)} parts, {len(run.picks)} picks: {seconds:.1f} s, {seconds / floor:.1f} times "
-              f"the floor; {memory:.0f} MB; decisions {1e3 * np.median(run.decide_s):.1f} ms median, "
-              f"{1e3 * max(run.decide_s):.0f} ms at most")
+        print(f"{order:10} {len(run.parts)} parts, {len(run.picks)} picks: {seconds:.1f} s, "
+              f"{seconds / floor:.1f} times the floor; {memory:.0f} MB; "
+              f"decisions {1e3 * np.median(run.decide_s):.1f} ms median, {1e3 * max(run.decide_s):.0f} ms at most")
 
 
 if __name__ == "__main__":

@@ -2,8 +2,8 @@
 
 All joints end at the same time, that of the slowest. To meet a moving part exactly, the time of the meeting is
 searched: the shortest T for which a move that ends at time T, in the state that following the part asks for at time T,
-needs no longer than T. ruckig stretches the quicker joints to T; where a joint's profile can't be stretched so (a moving end
-leaves gaps in the durations it can have) the joint waits at its resting end and moves in its own least time.
+needs no longer than T. ruckig stretches the quicker joints to T; where a joint's profile can't be stretched so (a
+moving end leaves gaps in the durations it can have) the joint waits at its resting end and moves in its own least time.
 """
 
 from collections.abc import Callable
