@@ -24,6 +24,7 @@ bench: .venv/ready
 .venv/ready: pyproject.toml
 	$(PYTHON) -m venv .venv
 	$(BIN)/python -m pip install --quiet --editable ".[test]"
+	$(BIN)/python -c "import pipeline.outputs, pipeline.order.lookahead"  # compiles the kernels once
 	touch $@
 
 .venv/ready-dev: .venv/ready
