@@ -35,6 +35,7 @@ def replay(
         bool, typer.Option("--trajectory", help="Also write the joints every 4 ms.")] = False,
     detections: Detections = None, located: Located = None, horizon: Horizon = 0, least_score: LeastScore = 0.5,
     overlays: Annotated[bool, typer.Option(help="Write each image with what was found drawn on it.")] = True,
+    plots: Annotated[bool, typer.Option("--plots", help="Also write the plots as pictures.")] = False,
     budget_ms: Budget = 0.0,
 ) -> None:
     """Replay a recording: find, follow, filter, order, time and simulate; write tables, pictures and a report.
@@ -52,6 +53,10 @@ def replay(
     done = run(chosen, order, horizon, _clock(seen), budget_ms)
     drawn = overlays and detections is None and located is None
     figures = write_run(out, seen, chosen, done, horizon, trajectory, drawn)
+    if plots:
+        from pipeline.plots.written import write_plots
+
+        write_plots(out / "plots", chosen, done)
     _tell(done, figures)
     print(f"-> {out}")
 

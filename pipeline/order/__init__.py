@@ -12,7 +12,7 @@ __all__ = ["Order", "best_order"]
 
 
 def __getattr__(name: str) -> Any:
-    """`best_order` and `Order` when they are asked for: a replay needs the look-ahead alone, and compiles that alone."""
+    """`best_order` and `Order` when they are asked for: a replay compiles the look-ahead alone."""
     if name not in __all__:
         raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
     from pipeline.order import best
