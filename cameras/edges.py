@@ -2,6 +2,7 @@
 
 The map keeps, for each cell of 4 x 4 pixels, the set of edge directions in it and around it (after Hinterstoisser et
 al., "Gradient response maps", IEEE PAMI 34(5), 2012, section 3), without regard to which side is the lighter.
+Only ridges count (non-maximum suppression, Canny 1986): a shaded or glittering face is no crowd of edges.
 """
 
 from dataclasses import dataclass
@@ -12,7 +13,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 CELL_PX = 4
-TAN_EIGHTH = np.tan(np.pi / 8)
+TAN_EIGHTH, TAN_STEEP = np.tan(np.pi / 8), np.tan(3 * np.pi / 8)
 NOISE_FACTOR = 4.0
 LEAST_GRADIENT = 16.0  # of a 3 x 3 Sobel filter at half size: a step of 4 grey levels
 
@@ -22,7 +23,8 @@ class EdgeMap:
     """Edges of one image, coarsely.
 
     strength (h, w) float32: strongest gradient in each cell of 4 x 4 pixels, Sobel units at half size.
-    own (h, w) uint8: bit k set where the cell holds an edge whose normal lies in the k-th of 8 sectors of half a turn.
+    own (h, w) uint8: bit k set where the cell holds an edge's ridge with its normal in the k-th of 8 sectors of half a
+    turn.
     near (h, w) uint8: the same for the cell and its eight neighbours.  least: gradient that counts as an edge.
     """
 
@@ -55,6 +57,21 @@ def _sector(x, y):  # type: ignore[no-untyped-def]
     return (4 if -x < TAN_EIGHTH * y else 5) if -x < y else (6 if y > TAN_EIGHTH * -x else 7)
 
 
+@njit("b1(i2[:,::1], i2[:,::1], i8, i8, i4, i4, i4)", cache=True, inline="always")
+def _on_ridge(dx, dy, j, i, gx, gy, square):  # type: ignore[no-untyped-def]
+    """Whether neither neighbour along the gradient has a steeper one."""
+    if j == 0 or i == 0 or j == dx.shape[0] - 1 or i == dx.shape[1] - 1:
+        return True
+    a, b = abs(gx), abs(gy)
+    di = 0 if b > TAN_STEEP * a else (1 if gx > 0 else -1)
+    dj = 0 if a > TAN_STEEP * b else (1 if gy > 0 else -1)
+    x, y = np.int32(dx[j + dj, i + di]), np.int32(dy[j + dj, i + di])
+    if x * x + y * y > square:
+        return False
+    x, y = np.int32(dx[j - dj, i - di]), np.int32(dy[j - dj, i - di])
+    return x * x + y * y <= square
+
+
 @njit("Tuple((f4[:,::1], u1[:,::1], u1[:,::1]))(i2[:,::1], i2[:,::1], f8)", cache=True)
 def _pooled(dx, dy, least):  # type: ignore[no-untyped-def]
     rows, columns = dx.shape[0] // 2, dx.shape[1] // 2
@@ -70,7 +87,7 @@ def _pooled(dx, dy, least):  # type: ignore[no-untyped-def]
                     gx, gy = np.int32(dx[2 * j + k, 2 * i + m]), np.int32(dy[2 * j + k, 2 * i + m])
                     square = gx * gx + gy * gy
                     most = max(most, square)
-                    if square > floor:
+                    if square > floor and _on_ridge(dx, dy, 2 * j + k, 2 * i + m, gx, gy, square):
                         bits |= np.uint8(1 << _sector(float(gx), float(gy)))
             own[j, i] = bits
             strength[j, i] = np.sqrt(np.float32(most))
@@ -103,8 +120,8 @@ def edge_along(image, u, v, nu, nv, reach, least, sign, fine, profile, found):  
     """Place of the edge that crosses the normal (nu, nv) near (u, v): found[0] pixels along it, found[1] its step.
 
     The profile is differenced over two pixels; the best peak is its strength less half for one at the end of the reach,
-    less 0.4 for one of the other sign; a parabola gives its top. A fine profile has two samples a pixel, each averaged
-    over three pixels across; one that is not has one sample a pixel.
+    less 0.4 for one of the other sign; a parabola gives its top. A fine profile has two samples a pixel, a
+    rough one has one.
     found[1] is 0 where no step of `least` grey levels is in reach; found[0] is OUTSIDE where the profile leaves the
     image.
     """
@@ -120,8 +137,6 @@ def edge_along(image, u, v, nu, nv, reach, least, sign, fine, profile, found):  
         s = (k - side) / d
         x, y = u + s * nu, v + s * nv
         profile[k] = _at(image, x, y)
-        if fine:
-            profile[k] = 0.25 * (_at(image, x - nv, y + nu) + _at(image, x + nv, y - nu)) + 0.5 * profile[k]
     best, at = 0.0, -1
     for k in range(d + 1, n - d - 1):
         here = profile[k + d] - profile[k - d]

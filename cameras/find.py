@@ -24,12 +24,12 @@ Grey = NDArray[np.uint8]
 
 DEFAULT_SCORE = 0.7
 MOST_PEAKS = 40
-DEPTH_SHARE = 0.5  # of the depth of a part, what the patch under its middle has at the least
+DEPTH_SHARE, DEPTH_SLACK = 0.7, 2.0  # of a part's depth, what the patch under its middle has at the least; cells less
 SLACK_CELLS, BEYOND_CELLS = 3, 24
 TRIED_ON_ONE, TRIED_ON_MORE = 6, 5
 LEAST_INNER = 0.4  # share of inner edges without which nothing says that a part lies the right side up
 ROUND_DOWN = 0.1  # more of a circle must be found where nothing but a circle is known
-LEAST_ROUGH = 0.64  # score of a rough placement worth fitting
+LEAST_ROUGH = 0.6  # score of a rough placement worth fitting
 PROMISING = 0.45
 SETTLED = 0.92
 STEP_SHARE = 0.12  # of the edge map's threshold: the least step of grey levels that the fit takes for an edge
@@ -120,8 +120,8 @@ class PartFinder:
         edges = edge_map(grey)
         blobs = blobs_of(edges)
         placed: list[_Placed] = []
-        for patch in range(len(blobs.box)):
-            placed += self._on_patch(grey, camera, views, edges, blobs, patch)
+        for patch, place in enumerate(_places(camera, views, blobs)):
+            placed += self._on_patch(grey, views, edges, blobs, patch, place)
         kept = _best(placed, grey.shape, OVERLAP)
         return _sightings([one for one in kept if not one.cut], self._unknown(kept, edges, blobs, camera))
 
@@ -132,28 +132,15 @@ class PartFinder:
         return self._views
 
     def _on_patch(
-        self, grey: Grey, camera: CameraMap, views: Views, edges: EdgeMap, blobs: Blobs, patch: int
+        self, grey: Grey, views: Views, edges: EdgeMap, blobs: Blobs, patch: int, place: int
     ) -> list[_Placed]:
         """Fits on one patch: from the best rough placement down, none where a good fit already stands."""
-        box, bounds = blobs.box[patch], self._bounds(blobs, patch)
-        centre_px = CELL_PX * 0.5 * (box[:2] + box[2:]) + 0.5 * (CELL_PX - 1)
-        place = int(views.nearest(camera.to_cell(centre_px[None], self.surface_mm))[0])
         affine = np.ascontiguousarray(views.coefficients[place][:, 1:3]) / CELL_PX
-        scale = float(np.sqrt(abs(np.linalg.det(affine))))
-        rough = []
-        for number, kind in enumerate(self.kinds):
-            room = room_for(bounds, kind.steps)
-            deep = DEPTH_SHARE * kind.depth_mm * scale
-            placements(edges.own, edges.near, blobs.label, blobs.depth, patch + 1, kind.coarse, affine, kind.anchor,
-                       deep, kind.first_rad, kind.steps, kind.step_rad, bounds, room)  # fmt: skip
-            found = peaks(room)[:MOST_PEAKS]
-            rough.append(np.column_stack([found, np.full(len(found), float(number))]))
-        every = np.concatenate(rough)
-        every = every[np.argsort(-every[:, 0], kind="stable")]
+        rough = self._rough(edges, blobs, patch, affine)
         most = TRIED_ON_ONE + TRIED_ON_MORE * int(blobs.cells[patch] / self.least_cells)
         placed: list[_Placed] = []
         tried = 0
-        for score, u, v, yaw, _, number in every:
+        for score, u, v, yaw, _, number in rough:
             if tried >= most or score < LEAST_ROUGH:
                 break
             kind = self.kinds[int(number)]
@@ -165,6 +152,20 @@ class PartFinder:
             if one is not None:
                 placed.append(one)
         return placed
+
+    def _rough(self, edges: EdgeMap, blobs: Blobs, patch: int, affine: FloatArray) -> FloatArray:
+        """Rough placements (n, 6), best first: score, column, row, yaw, how many alike, number of the kind."""
+        bounds, scale = self._bounds(blobs, patch), float(np.sqrt(abs(np.linalg.det(affine))))
+        every = []
+        for number, kind in enumerate(self.kinds):
+            room, depth = room_for(bounds, kind.steps), kind.depth_mm * scale
+            deep = min(DEPTH_SHARE * depth, depth - DEPTH_SLACK)
+            placements(edges.own, edges.near, blobs.label, blobs.depth, patch + 1, kind.coarse, affine, kind.anchor,
+                       deep, kind.first_rad, kind.steps, kind.step_rad, bounds, room)  # fmt: skip
+            found = peaks(room)[:MOST_PEAKS]
+            every.append(np.column_stack([found, np.full(len(found), float(number))]))
+        rough = np.concatenate(every)
+        return np.asarray(rough[np.argsort(-rough[:, 0], kind="stable")])
 
     def _fitted(
         self, grey: Grey, views: Views, kind: _Kind, at_px: FloatArray, yaw: float, place: int, least: float
@@ -229,12 +230,18 @@ def grey_of(image: NDArray[np.uint8]) -> NDArray[np.uint8]:
     return np.ascontiguousarray(grey, dtype=np.uint8)
 
 
+def _places(camera: CameraMap, views: Views, blobs: Blobs) -> list[int]:
+    """The place of the view nearest to each patch."""
+    middles = CELL_PX * 0.5 * (blobs.box[:, :2] + blobs.box[:, 2:]) + 0.5 * (CELL_PX - 1)
+    return [int(place) for place in views.nearest(camera.to_cell(middles, views.surface_mm))]
+
+
 def _kind(part: TaughtPart, down: bool) -> _Kind:
     template = template_of(part.model, down)
     period = 2.0 * np.pi / max(part.turns, 1)
     steps = 1 if part.turns == 0 else max(round(period / TURN_STEP_RAD), 1)
     return _Kind(part.name, down, template, coarse_points(template.points), *_deepest(template.outline), part.model,
-                 part.model.yaw_rad if part.turns == 0 else 0.0, steps,                 period / steps)  # fmt: skip
+                 part.model.yaw_rad if part.turns == 0 else 0.0, steps, period / steps)  # fmt: skip
 
 
 def _deepest(outline: FloatArray) -> tuple[FloatArray, float]:
