@@ -23,7 +23,7 @@ def write_run(out: Path, seen: Seen, setting: Setting, run: Run, horizon: int, t
               overlays: bool) -> dict[str, Any]:
     """Write everything about a run; its figures, as in summary.json."""
     run = with_remedies(setting, run)
-    figures = summary(run, horizon, seen.find_s.tolist(), _more(seen, run))
+    figures = summary(run, horizon, seen.find_s.tolist(), more_figures(seen, run))
     with written_whole(out / "parts.csv") as part:
         write_parts(part, run, seen.recording)
     with written_whole(out / "picks.csv") as part:
@@ -53,7 +53,7 @@ def write_decision(out: Path, decision: Decision) -> None:
     saved(plot_decision(decision), out / "order.png")
 
 
-def _more(seen: Seen, run: Run) -> dict[str, Any]:
+def more_figures(seen: Seen, run: Run) -> dict[str, Any]:
     """Further figures: how the cycle splits, how sightings drift."""
     cycles = [pick.cycle for pick in run.picks]
     split = {

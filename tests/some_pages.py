@@ -14,7 +14,7 @@ from cameras.plane import fit_plane
 from cameras.recording import read_recording
 from cameras.sightings import Sightings
 from pipeline.follow import follow
-from pipeline.outputs import _more
+from pipeline.outputs import more_figures
 from pipeline.page import write_page
 from pipeline.page.subject import Subject
 from pipeline.policy import Arrival, Policy
@@ -34,7 +34,7 @@ class Made:
     run: Run
 
     def figures(self) -> dict[str, object]:
-        return summary(self.run, 8, self.seen.find_s.tolist(), _more(self.seen, self.run))
+        return summary(self.run, 8, self.seen.find_s.tolist(), more_figures(self.seen, self.run))
 
     @property
     def subject(self) -> Subject:

@@ -88,7 +88,7 @@ def test_ticks_are_few_and_inside(low: float, wide: float) -> None:
 def test_plots_are_written_and_the_same_again(one: Made, tmp_path: Path) -> None:
     first = [path.read_bytes() for path in write_plots(tmp_path / "a", one.setting, one.run)]
     again = [path.read_bytes() for path in write_plots(tmp_path / "b", one.setting, one.run)]
-    assert len(first) == 5
+    assert len(first) == 6
     assert first == again
     assert all(data.startswith(b"\x89PNG") for data in first)
 

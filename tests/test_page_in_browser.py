@@ -4,6 +4,7 @@ import shutil
 import time
 from collections.abc import Iterator
 from pathlib import Path
+from typing import Any
 
 import pytest
 from some_pages import Made, made, plain
@@ -13,7 +14,7 @@ from webdriver import Browser, browser
 from pipeline.page import write_page
 from pipeline.page.head import words
 
-SPACE, RIGHT, LEFT = " ", "\ue014", "\ue012"  # WebDriver's code points for keys
+SPACE, RIGHT, LEFT, TAB = " ", "\ue014", "\ue012", "\ue004"  # WebDriver's code points for keys
 TIME = "return Number(document.getElementById('clock').value)"
 
 
@@ -171,14 +172,74 @@ def test_dark_and_light_and_paper(page: Browser) -> None:
     page.cdp("Emulation.setEmulatedMedia", features=[])
 
 
-def test_every_control_has_a_name(page: Browser) -> None:
-    """As the browser's accessibility tree gives it (WAI-ARIA)."""
+def read_out(page: Browser) -> list[dict[str, Any]]:
+    """The accessibility tree as the browser hands it to a screen reader: role, name and states of each."""
     nodes = page.cdp("Accessibility.getFullAXTree")["nodes"]
-    roles = {"button", "slider", "combobox", "searchbox", "link", "image", "region", "table"}
-    named = [(node["role"]["value"], node.get("name", {}).get("value", "")) for node in nodes
-             if not node.get("ignored") and node.get("role", {}).get("value") in roles]  # fmt: skip
-    assert len(named) > 20
-    assert [role for role, name in named if not name.strip()] == []
+    return [{"role": node["role"]["value"], "name": node.get("name", {}).get("value", "").strip(),
+             **{one["name"]: one["value"].get("value") for one in node.get("properties", [])}}
+            for node in nodes if not node.get("ignored") and "role" in node]  # fmt: skip
+
+
+def test_every_control_has_a_name_and_a_role(page: Browser) -> None:
+    """WAI-ARIA 1.2: what can be operated has a role that is operated, and a name."""
+    nodes = read_out(page)
+    operated = {"button", "slider", "combobox", "searchbox", "link", "DisclosureTriangle", "option"}
+    shown = {"RootWebArea", "image", "region", "table", "columnheader"}
+    named = [node for node in nodes if node["role"] in operated | shown]
+    assert len(named) > 40
+    assert [node for node in named if not node["name"]] == []
+    assert [node for node in nodes if node.get("focusable") and node["role"] not in operated | shown] == []
+
+
+def test_tables_tell_their_headers(page: Browser) -> None:
+    """Every table has a caption for a name, and a header over each column."""
+    tables = page.js("""return [...document.querySelectorAll('table')].map((t) => [t.caption?.textContent ?? '',
+        [...t.tHead.rows[0].cells].every((c) => c.tagName === 'TH' && c.scope === 'col' && c.textContent.trim()),
+        [...t.tBodies[0].rows].every((r) => r.cells.length === t.tHead.rows[0].cells.length)])""")
+    assert len(tables) >= 5
+    assert [told for told in tables if not all(told)] == []
+
+
+def test_the_slider_tells_the_time(page: Browser) -> None:
+    page.press(RIGHT)
+    slider, = (node for node in read_out(page) if node["role"] == "slider")
+    assert slider["name"] == "Time"
+    told = page.js("return document.getElementById('clock').getAttribute('aria-valuetext')")
+    assert told == f"{at(page):.1f} seconds"
+
+
+def test_screen_readers_hear_a_moment_once_and_nothing_while_it_plays(page: Browser) -> None:
+    page.js("""window.heard = []; for (const live of document.querySelectorAll('[aria-live], [role=status], output'))
+        if (live.ariaLive !== 'off') new MutationObserver(() => heard.push(live.textContent))
+            .observe(live, { childList: true, subtree: true, characterData: true })""")
+    page.press(SPACE)
+    time.sleep(0.8)
+    assert page.js("return window.heard") == []
+    page.press(SPACE)
+    page.press(*[RIGHT] * 5)
+    page.wait("return window.heard.length > 0")
+    time.sleep(0.7)
+    assert page.js("return window.heard") == [page.js("return document.getElementById('now').textContent")]
+
+
+def test_tab_reaches_every_control_in_the_order_of_the_page(page: Browser) -> None:
+    """Each with a ring around it that can be seen; the skip link first."""
+    page.js("""document.activeElement.blur(); window.scrollTo(0, 0);
+        window.wanted = [...document.querySelectorAll('a[href], button, select, input, summary, [tabindex="0"]')]
+            .filter((one) => one.checkVisibility())""")
+    many = page.js("return window.wanted.length")
+    assert many > 30
+    reached, ringed = [], []
+    for _ in range(many):
+        page.press(TAB)
+        found = page.js("""const on = document.activeElement, look = getComputedStyle(on);
+            return [wanted.indexOf(on), look.outlineStyle !== 'none' && parseFloat(look.outlineWidth) > 0,
+                    on.outerHTML]""")
+        reached.append(found[0])
+        ringed.append((found[1], found[2][:80]))
+    assert [k for k in reached if k >= 0] == list(range(len([k for k in reached if k >= 0])))
+    assert len([k for k in reached if k < 0]) <= 6, "the browser's own stops, at what scrolls"
+    assert [html for seen, html in ringed if not seen] == []
 
 
 def test_a_hostile_name_runs_nothing(chrome: Browser, tmp_path: Path) -> None:

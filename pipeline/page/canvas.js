@@ -18,13 +18,14 @@ const FONT = 'system-ui, "Segoe UI", "Noto Sans", "Liberation Sans", sans-serif'
 /** A canvas sized for the screen's pixels; draw in CSS pixels. Answers its context, width and height. */
 function fresh(canvas, height) {
   const width = canvas.clientWidth, tall = height ?? canvas.clientHeight, dense = window.devicePixelRatio || 1;
-  if (canvas.width !== Math.round(width * dense) || canvas.height !== Math.round(tall * dense)) {
+  const paper = document.documentElement.classList.contains("paper"); // on paper, what is cleared comes out white
+  if (paper || canvas.width !== Math.round(width * dense) || canvas.height !== Math.round(tall * dense)) {
     canvas.width = Math.round(width * dense);
     canvas.height = Math.round(tall * dense);
   }
   const context = canvas.getContext("2d");
   context.setTransform(dense, 0, 0, dense, 0, 0);
-  context.clearRect(0, 0, width, tall);
+  if (!paper) context.clearRect(0, 0, width, tall);
   context.font = `12px ${FONT}`;
   return { context, width, height: tall };
 }

@@ -29,4 +29,4 @@ def cell_file(subject: Subject) -> Markup:
     except (OSError, UnicodeDecodeError):
         text = cell.model_dump_json(indent=2)
     return joined(tag("p", cell.file.name, class_="note"), tag("pre", tag("code", text), tabindex=0,
-                                                               aria_label="The cell file"))  # fmt: skip
+                                                               role="region", aria_label="The cell file"))  # fmt: skip

@@ -9,7 +9,7 @@ from pipeline.page.markup import Markup, joined, tag
 
 FloatArray = NDArray[np.float64]
 WIDTH, HEIGHT = 440, 190
-LEFT, RIGHT, TOP, BOTTOM = 44, 10, 12, 34
+LEFT, RIGHT, TOP, BOTTOM = 44, 14, 12, 22
 STEPS = (1.0, 2.0, 2.5, 5.0)
 DASHES = (None, "6 3", "2 3")
 
@@ -42,16 +42,18 @@ class Frame:
         rise = (np.asarray(value) - low) / ((high - low) or 1.0)
         return np.asarray(self.height - BOTTOM - rise * (self.height - TOP - BOTTOM))
 
-    def axes(self, x_label: str, y_label: str) -> Markup:
-        """Grid lines with their numbers, and what the axes are."""
+    def axes(self, unit: str, y_label: str) -> Markup:
+        """Grid lines with their numbers, the last one along x with its unit; above them what y is."""
         drawn = []
         for value in ticks(*self.y_span, most=4):
             y = round(float(self.y(value)), 1)
             drawn.append(tag("line", x1=LEFT, x2=WIDTH - RIGHT, y1=y, y2=y, class_="grid"))
             drawn.append(tag("text", f"{value:g}", x=LEFT - 6, y=y + 4, class_="end"))
-        drawn += [tag("text", f"{value:g}", x=round(float(self.x(value)), 1), y=self.height - BOTTOM + 15,
-                      class_="middle") for value in ticks(*self.x_span)]  # fmt: skip
-        drawn.append(tag("text", x_label, x=WIDTH - RIGHT, y=self.height - 3, class_="end"))
+        along = ticks(*self.x_span)
+        for value in along:
+            last, x = value == along[-1], round(float(self.x(value)), 1)
+            drawn.append(tag("text", f"{value:g} {unit}" if last and unit else f"{value:g}", x=x,
+                             y=self.height - BOTTOM + 15, class_="end" if x > WIDTH - 30 else "middle"))
         drawn.append(tag("text", y_label, x=0, y=8))
         return joined(*drawn)
 

@@ -17,6 +17,7 @@ class Desk {
     this.fillJumps();
     this.listen();
     this.goTo(this.opening(), -1);
+    clearTimeout(this.telling);
   }
 
   /** A moment worth opening with: as the middle pick is gripped. */
@@ -55,9 +56,18 @@ class Desk {
     byId("clock").value = this.t;
     byId("clock").setAttribute("aria-valuetext", `${this.t.toFixed(1)} seconds`);
     byId("time").textContent = `${this.t.toFixed(2)} s`;
-    byId("now").textContent = this.sentence();
+    this.tell(this.sentence());
     byId("next").textContent = this.coming();
     this.numbers();
+  }
+
+  /** Shows a sentence, and says it to screen readers once the clock has come to rest: no torrent of words. */
+  tell(sentence) {
+    byId("now").textContent = sentence;
+    clearTimeout(this.telling);
+    if (!this.playing) this.telling = setTimeout(() => {
+      if (byId("told").textContent !== sentence) byId("told").textContent = sentence;
+    }, 600);
   }
 
   /** The picks after this one. */
@@ -98,8 +108,10 @@ class Desk {
     this.playing = on;
     byId("play").textContent = on ? "Pause" : "Play";
     byId("play").setAttribute("aria-label", on ? "Pause" : "Play");
-    byId("now").setAttribute("aria-live", on ? "off" : "polite"); // no torrent of words while it plays
-    if (!on) return;
+    if (!on) {
+      this.tell(this.sentence());
+      return;
+    }
     if (this.t >= scene.end) this.t = scene.start;
     let last = performance.now();
     const tick = (moment) => {

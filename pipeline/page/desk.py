@@ -29,7 +29,8 @@ def _views(subject: Subject) -> Markup:
                  tag("figcaption", id_="shot-told"), class_="camera", id_="camera")  # fmt: skip
     joints = tag("dl", *(tag("div", tag("dt", name), tag("dd", "-", id_=f"now-{key}"))
                          for key, name in NUMBERS), class_="joints")  # fmt: skip
-    now = tag("div", tag("p", id_="now", class_="now", aria_live="polite"), joints, tag("p", id_="next", class_="next"))
+    now = tag("div", tag("p", id_="now", class_="now"), tag("p", id_="told", class_="unseen", role="status"), joints,
+              tag("p", id_="next", class_="next"))
     return tag("div", above, tag("div", camera, now, class_="beside"), class_="views")
 
 
@@ -48,7 +49,7 @@ def _controls(subject: Subject) -> Markup:
                                        id_="speed"))  # fmt: skip
     jump = tag("label", "Go to ", tag("select", tag("option", "a pick or a miss", value=""), id_="goto"))
     slider = tag("input", type="range", id_="clock", min=0, max=1, step="any", value=0, aria_label="Time")
-    time = tag("output", id_="time", for_="clock")
+    time = tag("output", id_="time", for_="clock", aria_live="off")
     hints = (("space", " plays, "), ("←", " "), ("→", " step 0.1 s, with shift 1 s, "), ("p", " "),
              ("n", " previous and next pick or miss."))  # fmt: skip
     keys = tag("p", *(joined(tag("kbd", name), text) for name, text in hints), class_="note keys")

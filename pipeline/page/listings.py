@@ -12,13 +12,13 @@ from pipeline.tables import degrees
 ELBOW = ("right", "left")
 
 
-def table(caption: str, head: Sequence[tuple[str, bool]], rows: Sequence[Sequence[Child]], name: str) -> Markup:
+def table(caption: str, head: Sequence[tuple[str, bool]], rows: Sequence[Sequence[Child]], id_: str) -> Markup:
     """A table; head: names, and whether the column holds numbers."""
     heads = tag("tr", *(tag("th", tag("span", text), scope="col", class_="number" if number else None)
                         for text, number in head))
-    body = [tag("tr", *(tag("td", cell, class_="number" if number else None)
-                        for cell, (_, number) in zip(row, head, strict=True))) for row in rows]
-    whole = tag("table", tag("caption", caption), tag("thead", heads), tag("tbody", *body), class_="listing", id_=name)
+    body = [tag("tr", *(tag("td", cell, class_="number" if number else "words" if name == "why" else None)
+                        for cell, (name, number) in zip(row, head, strict=True))) for row in rows]
+    whole = tag("table", tag("caption", caption), tag("thead", heads), tag("tbody", *body), class_="listing", id_=id_)
     return tag("div", whole, class_="scroll", tabindex=0, role="region", aria_label=caption)
 
 

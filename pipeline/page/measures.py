@@ -93,7 +93,7 @@ def choices(subject: Subject) -> Markup:
     told += f"The others may fall short by {100 * np.mean(behind):.1f} %, {100 * max(behind):.1f} % at most. "
     frame = Frame((1.0, float(max(one.bounded, 2))), (0.0, max(100 * max(one.gaps), 1.0) * 1.1))
     numbers = np.arange(1, one.bounded + 1)
-    picture = chart("Gap of each decision to its bound, in percent", frame.axes("decision", "gap, %"),
+    picture = chart("Gap of each decision to its bound, in percent", frame.axes("", "gap, %, decision by decision"),
                     *(tag("circle", cx=round(float(frame.x(n)), 1), cy=round(float(frame.y(100 * gap)), 1), r=2.5,
                           class_="dot") for n, gap in zip(numbers.tolist(), one.gaps, strict=True)))
     return joined(tag("p", told, looked), tag("div", picture, class_="figure"),

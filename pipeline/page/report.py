@@ -6,7 +6,7 @@ from importlib.resources import files
 from pathlib import Path
 from typing import Any
 
-from pipeline.page import accuracy, cautions, desk, head, listings, measures, misses
+from pipeline.page import accuracy, cautions, desk, head, listings, measures, misses, reach
 from pipeline.page.markup import Markup, joined, tag
 from pipeline.page.subject import Subject
 from pipeline.replay import Run, Setting
@@ -28,6 +28,7 @@ def page_of(subject: Subject) -> str:
         ("misses", "Why parts were missed", misses.misses(subject)),
         ("pace", "Throughput over time", measures.pace(subject)),
         ("choices", "How good the decisions were", measures.choices(subject)),
+        ("reach", "Where the arm can grip, and did", reach.reach(subject)),
         ("cycle", "Where the time of a cycle goes", measures.cycle(subject)),
         ("joints", "Joints against their limits", measures.joints(subject)),
         ("accuracy", "How well places are known", accuracy.accuracy(subject)),

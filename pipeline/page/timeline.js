@@ -40,7 +40,8 @@ class Timeline {
       context.moveTo(this.x(at), 18);
       context.lineTo(this.x(at), height);
       context.stroke();
-      lettered(context, `${Number(at.toFixed(1))} s`, this.x(at), 9, inks.soft);
+      const x = this.x(at);
+      if (x > 12 && x < this.canvas.clientWidth - 14) lettered(context, `${Number(at.toFixed(1))} s`, x, 9, inks.soft);
     }
   }
 

@@ -3,6 +3,7 @@
 from collections.abc import Mapping
 
 from matplotlib.axes import Axes
+from matplotlib.ticker import MaxNLocator
 
 from pipeline.plots.axes import ORANGE, axes_of
 
@@ -14,5 +15,6 @@ def plot_misses(missed: Mapping[str, int], ax: Axes | None = None) -> Axes:
     names = [reason.replace("_", " ") for reason in reasons]
     bars = ax.barh(names, [missed[reason] for reason in reasons], color=ORANGE)
     ax.bar_label(bars, padding=3)
+    ax.xaxis.set_major_locator(MaxNLocator(integer=True))
     ax.set(xlabel="parts missed", xlim=(0, 1.1 * max(missed.values(), default=1)))
     return ax

@@ -8,11 +8,12 @@ from pipeline.plots.axes import COLOURS, GREY, MARKS, RED, axes_of
 from pipeline.replay import Run, Setting
 
 NUMBERED = 150  # picks that get their number; more would hide one another
+BESIDE_MM = 40.0  # of the window's edges drawn beside the outermost parts
 
 
 def plot_order(run: Run, setting: Setting, ax: Axes | None = None) -> Axes:
     """Grips by kind in the cell frame, numbered in their order; base, places, keep-outs and window beside them."""
-    ax = axes_of(ax, (7.0, 7.0))
+    ax = axes_of(ax, (8.0, 8.0))
     cycles = [pick.cycle for pick in run.picks]
     at = np.array([c.hold.at_mm + setting.belt.shift_mm(c.grasp_start_s) for c in cycles]).reshape(-1, 2)
     ax.plot(at[:, 0], at[:, 1], color=GREY, linewidth=0.6, alpha=0.6)
@@ -23,7 +24,7 @@ def plot_order(run: Run, setting: Setting, ax: Axes | None = None) -> Axes:
         ax.annotate(str(n), (x, y), xytext=(4, 4), textcoords="offset points", fontsize=7)
     surroundings(ax, setting)
     ax.set(xlabel="x, mm", ylabel="y, mm", aspect="equal")
-    for text in ax.legend(frameon=False).get_texts():
+    for text in ax.figure.legend(loc="outside lower center", ncols=4, frameon=False).get_texts():
         text.set_parse_math(False)
     return ax
 
@@ -31,18 +32,20 @@ def plot_order(run: Run, setting: Setting, ax: Axes | None = None) -> Axes:
 def surroundings(ax: Axes, setting: Setting) -> None:
     """Base, places, keep-outs and window of a cell."""
     base = setting.mover.arm.base_mm
-    ax.plot(base[0], base[1], marker="+", markersize=14, color="black")
+    ax.plot(base[0], base[1], marker="+", markersize=14, color="black", linestyle="none", label="base of the arm")
     for place in setting.grasping.places.values():
-        ax.scatter(place.slots_mm[:, 0], place.slots_mm[:, 1], marker="s", facecolors="none", edgecolors=GREY, s=30)
-        middle = place.slots_mm[:, :2].mean(axis=0)
-        ax.annotate(place.name, middle.tolist(), xytext=(0, 12), textcoords="offset points", ha="center",
-                    parse_math=False)
+        x, y = place.slots_mm[:, 0], place.slots_mm[:, 1]
+        ax.scatter(x, y, marker="s", facecolors="none", edgecolors=GREY, s=30)
+        ax.annotate(place.name, (float(x.mean()), float(y.max())), xytext=(0, 9), textcoords="offset points",
+                    ha="center", parse_math=False)
     for keepout in setting.cell.keepouts:
         ax.add_patch(Polygon(np.array(keepout.polygon_mm), fill=False, hatch="///", edgecolor=RED))
     belt = setting.cell.belt
     if belt is not None and belt.window_mm is not None:
         heading = setting.belt.heading
-        across = np.array([-heading[1], heading[0]]) * 1000
+        left = np.array([-heading[1], heading[0]])
+        lanes = [float(part.xy_mm @ left) for part in setting.parts] or [0.0]
         for along in belt.window_mm:
-            ends = np.array([along * heading - across, along * heading + across])
-            ax.axline(ends[0].tolist(), ends[1].tolist(), color=GREY, linestyle="--", linewidth=0.8)
+            ends = np.array([along * heading + across * left
+                             for across in (min(lanes) - BESIDE_MM, max(lanes) + BESIDE_MM)])
+            ax.plot(*ends.T, color=GREY, linestyle="--", linewidth=0.8)

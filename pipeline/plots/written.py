@@ -14,15 +14,18 @@ from pipeline.plots.cycle_split import plot_cycle_split
 from pipeline.plots.joint_loads import plot_joint_loads
 from pipeline.plots.misses import plot_misses
 from pipeline.plots.order import plot_order
+from pipeline.plots.reach import plot_reach_picks
 from pipeline.plots.throughput import plot_throughput
+from pipeline.reach_picks import picks_on_reach
 from pipeline.replay import Run, Setting
 
 PLAIN = {"Software": None}  # no version in the files: the same run makes the same bytes
 
 
 def write_plots(folder: Path, setting: Setting, run: Run) -> list[Path]:
-    """Write throughput, misses, cycle_split, order and joint_loads as PNG, those that have something to show."""
-    drawn = {"throughput": plot_throughput(pace_of(run, setting)), "order": plot_order(run, setting)}
+    """Write throughput, order, reach, misses, cycle_split and joint_loads as PNG, those that have something to show."""
+    drawn = {"throughput": plot_throughput(pace_of(run, setting)), "order": plot_order(run, setting),
+             "reach": plot_reach_picks(picks_on_reach(setting, run), setting)}
     missed = Counter(fate.reason for fate in run.fates if fate)
     loads = loads_of(run)
     if missed:
