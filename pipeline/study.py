@@ -25,6 +25,7 @@ from pipeline.replay import LEAST_SCORE, Run, Setting, replay, replay_ahead
 
 FloatArray = NDArray[np.float64]
 Rows = Callable[[Iterable[int]], Iterable[int]]
+Find = Callable[[Recording, Cell, Rows], tuple[Sightings, NDArray[np.float64]]]
 
 
 @dataclass(frozen=True)
@@ -51,10 +52,10 @@ class Seen:
     find_s: FloatArray
 
 
-def see(cell: Cell, folder: Path, source: Source, rows: Rows = iter) -> Seen:
-    """Read a recording and everything that lies in it. Raises InputFault."""
+def see(cell: Cell, folder: Path, source: Source, rows: Rows = iter, find: Find = found_in) -> Seen:
+    """Read a recording and everything that lies in it. find: what looks into the images. Raises InputFault."""
     recording = _read(cell, folder, source)
-    sightings, find_s = sightings_of(cell, recording, source, rows)
+    sightings, find_s = sightings_of(cell, recording, source, rows, find)
     return Seen(cell, recording, sightings, _followed(cell, recording, sightings, source), find_s)
 
 
@@ -70,14 +71,15 @@ def one_frame(cell: Cell, folder: Path, source: Source, frame: int) -> Seen:
     return Seen(cell, recording, sightings, _followed(cell, recording, sightings, source), find_s[find_s > 0])
 
 
-def sightings_of(cell: Cell, recording: Recording, source: Source, rows: Rows = iter) -> tuple[Sightings, FloatArray]:
+def sightings_of(cell: Cell, recording: Recording, source: Source, rows: Rows = iter,
+                 find: Find = found_in) -> tuple[Sightings, FloatArray]:
     """What is seen in each frame, and the seconds it took to find."""
     if source.located is not None:
         return read_located(source.located, recording, list(cell.parts)), np.zeros(0)
     if source.detections is not None:
         heights = {name: cell.surface_mm + part.height_mm for name, part in cell.parts.items()}
         return read_detections(source.detections, recording, maps_of(cell, recording), heights), np.zeros(0)
-    return found_in(recording, cell, rows)
+    return find(recording, cell, rows)
 
 
 def maps_of(cell: Cell, recording: Recording) -> dict[str, CameraMap]:

@@ -57,6 +57,7 @@ def sweep(
     Example: sanderling sweep demo_images/bells --cell demo_images/bells/cell.toml --find belt-speed --missed-below 1%
     --out out/sweep
     """
+    from pipeline.sweep.find import most_together
     from pipeline.sweep.plots import draw_sweep
     from pipeline.sweep.points import points_of
     from pipeline.sweep.run import run_points
@@ -66,7 +67,7 @@ def sweep(
     shares = _share("--missed-below", missed_below), _share("--within", within)
     if not rows and not find:
         raise InputFault("sweep", "", "nothing to change", "give --set, --settings or --find")
-    cases = _cases(recordings, cell, detections, located, least_score)
+    cases = _cases(recordings, cell, detections, located, least_score, out / "found")
     names = [case.name for case in cases]
     lasts = length_s or max(case.lasts_s for case in cases)
     draws = range(1, (seeds or (SEEDS if find else 0)) + 1)
@@ -77,7 +78,7 @@ def sweep(
                           lambda outcomes, total: progress(outcomes, total, "replay"))
 
     try:
-        answers = [(row, _answer(find, shares, points_of([row], len(cases), draws, lasts), run))
+        answers = [(row, _answer(find, shares, points_of([row], len(cases), draws, lasts), run, most_together(cases)))
                    for row in rows or [()] if find]  # fmt: skip
         outcomes = _points_of(answers) if find else run(points_of(rows, len(cases), draws, lasts))
     except KeyboardInterrupt:
@@ -120,17 +121,18 @@ def _share(option: str, text: str) -> float:
 
 
 def _cases(recordings: list[Path], cell: Path, detections: Path | None, located: Path | None,
-           least_score: float) -> list["Case"]:
-    """Each recording, its parts found once."""
+           least_score: float, found: Path) -> list["Case"]:
+    """Each recording, its parts found once and kept in a folder."""
     from pipeline.cell import load_cell
     from pipeline.study import Source, see
     from pipeline.sweep.case import case_of
+    from pipeline.sweep.found import Found
 
     whole = load_cell(cell)
     cases = []
     for one in recordings:
         source = Source(_beside(one, detections, recordings), _beside(one, located, recordings))
-        seen = see(whole, one, source, lambda rows: progress(rows, len(list(rows)), "find"))
+        seen = see(whole, one, source, lambda rows: progress(rows, len(list(rows)), "find"), Found(found))
         cases.append(case_of(seen, str(one), least_score))
     return cases
 
@@ -144,10 +146,12 @@ def _beside(recording: Path, table: Path | None, recordings: list[Path]) -> Path
     return recording / table if len(table.parts) == 1 else table
 
 
-def _answer(find: str, shares: tuple[float, float], base: "Sequence[Point]", run: "Runner") -> "Answer":
+def _answer(find: str, shares: tuple[float, float], base: "Sequence[Point]", run: "Runner", most: int) -> "Answer":
     from pipeline.sweep.find import greatest_factor, shortest_horizon
 
-    return shortest_horizon(shares[1], base, run) if find == "horizon" else greatest_factor(find, shares[0], base, run)
+    if find == "horizon":
+        return shortest_horizon(shares[1], base, run, most)
+    return greatest_factor(find, shares[0], base, run)
 
 
 def _points_of(answers: list[tuple["Row", "Answer"]]) -> list["Outcome"]:

@@ -59,7 +59,7 @@ class Case:
         """A hash of everything in it but the recording's name and file names, and of the code that replays it."""
         recording = self.recording
         return digest(self.cell, recording.frame, recording.times_s, recording.counts, recording.cameras, self.parts,
-                      self.outlines, self.least_score, _code())
+                      self.outlines, self.least_score, self.cell.horizon, code_digest())
 
 
 def case_of(seen: Seen, name: str, least_score: float = LEAST_SCORE) -> Case:
@@ -96,7 +96,7 @@ def _feed(sha: "hashlib._Hash", thing: object) -> None:
 
 
 @cache
-def _code() -> str:
+def code_digest() -> str:
     """A hash of the modules that a replay may use: results of another version are never taken for its own."""
     sha = hashlib.sha256()
     for package in ("cameras", "pipeline"):

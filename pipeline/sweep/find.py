@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cameras.faults import InputFault, printable
+from pipeline.cell import MOST_ON_TRAY
 from pipeline.policy import MOST_LOOKED_AT
 from pipeline.sweep.case import Case
 from pipeline.sweep.kept import Outcome
@@ -93,14 +94,15 @@ def greatest_factor(setting: str, lost_below: float, base: Sequence[Point], run:
     return Answer(setting, *mean_interval(each), each, float(np.mean(lost)), tuple(outcomes))
 
 
-def shortest_horizon(within: float, base: Sequence[Point], run: Runner) -> Answer:
+def shortest_horizon(within: float, base: Sequence[Point], run: Runner, most: int = MOST_LOOKED_AT) -> Answer:
     """The fewest parts to look at together that pick 1 - within of what the best horizon does, or more, over all seeds.
 
-    base: a point for each seed. The interval is where the answer lies when seeds are drawn anew (percentile bootstrap:
-    Efron, Ann. Statist. 7, 1979), each with all its horizons. Raises InputFault for a share that will not do.
+    base: a point for each seed. most: the longest horizon tried. The interval is where the answer lies when seeds are
+    drawn anew (percentile bootstrap: Efron, Ann. Statist. 7, 1979), each with all its horizons. Raises InputFault for a
+    share that will not do.
     """
     _check_share("--within", within)
-    horizons = range(1, MOST_LOOKED_AT + 1)
+    horizons = range(1, most + 1)
     outcomes = run([_with(point, "horizon", horizon) for point in base for horizon in horizons])
     picked = np.array([_figures(outcome)["picked"] for outcome in outcomes], float).reshape(len(base), len(horizons))
     if not picked.any():
@@ -111,6 +113,14 @@ def shortest_horizon(within: float, base: Sequence[Point], run: Runner) -> Answe
     value, total = _shortest(picked.sum(axis=0, keepdims=True), within)[0], picked.sum(axis=0)
     return Answer("horizon", float(value), float(low), float(high), tuple(_shortest(picked, within).tolist()),
                   float(1 - total[int(value) - 1] / total.max()), tuple(outcomes))
+
+
+def most_together(cases: Sequence[Case]) -> int:
+    """The longest horizon that makes a difference: as long as can be looked at; on trays, as many as lie on one."""
+    if any(case.cell.belt is not None for case in cases):
+        return MOST_LOOKED_AT
+    on_tray = [np.bincount([part.first_row for part in case.parts], minlength=1).max() for case in cases]
+    return min(max(int(max(on_tray)), 1), MOST_ON_TRAY)
 
 
 def mean_interval(values: Sequence[float]) -> tuple[float, float, float]:

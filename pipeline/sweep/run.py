@@ -66,8 +66,8 @@ def changed(case: Case, point: Point) -> Case:
 def replayed(case: Case, point: Point) -> dict[str, Any]:
     """The figures of one point. Raises InputFault or CellError for settings that will not do."""
     case = changed(case, point)
-    order = case.cell.order
-    return figures_of(run(case.setting(), order.policy, order.horizon), order.horizon)
+    horizon = case.cell.horizon
+    return figures_of(run(case.setting(), case.cell.order.policy, horizon), horizon)
 
 
 def figures_of(done: Run, horizon: int) -> dict[str, Any]:

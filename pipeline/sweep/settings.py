@@ -105,6 +105,8 @@ def changed_cell(cell: Cell, settings: Mapping[str, Value]) -> Cell:
     if not ours:
         return cell
     raw = _as_raw(cell.model_dump())
+    if "horizon" not in cell.order.model_fields_set:
+        del raw["order"]["horizon"]  # on a tray the cell's own choice differs from the default value
     for name, value in ours.items():
         check_name(name)
         if name in CELL:
