@@ -232,7 +232,7 @@ def grey_of(image: NDArray[np.uint8]) -> NDArray[np.uint8]:
 
 def _places(camera: CameraMap, views: Views, blobs: Blobs) -> list[int]:
     """The place of the view nearest to each patch."""
-    middles = CELL_PX * 0.5 * (blobs.box[:, :2] + blobs.box[:, 2:]) + 0.5 * (CELL_PX - 1)
+    middles = 0.5 * CELL_PX * np.asarray(blobs.box[:, :2] + blobs.box[:, 2:], float) + 0.5 * (CELL_PX - 1)
     return [int(place) for place in views.nearest(camera.to_cell(middles, views.surface_mm))]
 
 
@@ -288,4 +288,5 @@ def _sightings(kept: list[_Placed], unknown: list[tuple[FloatArray, FloatArray]]
         sigma_mm=np.array([one.fit.sigma_mm for one in kept] + [1.0] * m),
         sigma_rad=np.array([one.fit.sigma_rad for one in kept] + [np.pi] * m),
         outline_mm=tuple([none] * n + [outline for _, outline in unknown]),
+        lean_mm=np.array([one.fit.lean_mm for one in kept] + [np.zeros(2)] * m).reshape(-1, 2),
     )  # fmt: skip

@@ -208,6 +208,7 @@ def outline_pixels(view, outline, pose, height, out):  # type: ignore[no-untyped
 class Fit:
     """A template laid on an image. pose (3,): x, y mm from the place, yaw rad.
 
+    lean_mm (2,): how far x, y would move, were the part's edges one standard deviation higher than its template says.
     outline_share, inner_share: of the points, how many met an edge (inner_share 1 without inner edges).
     worth: by which rivals are ranked.  polygon_px (k, 2): the outline in the image.
     """
@@ -216,6 +217,7 @@ class Fit:
     heights: FloatArray
     sigma_mm: float
     sigma_rad: float
+    lean_mm: FloatArray
     outline_share: float
     inner_share: float
     worth: float
@@ -247,9 +249,13 @@ def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, sta
     worth = outline_share + (0.0 if outline.all() else INNER_WORTH * (min(inner_share, INNER_MOST) - INNER_SHARE))
     polygon = np.empty_like(template.outline)
     outline_pixels(view, template.outline, pose, 0.5 * (heights[0] + heights[1]), polygon)
-    sigma_mm, sigma_rad = np.sqrt(unit * 0.5 * (cov[0, 0] + cov[1, 1])), np.sqrt(unit * cov[2, 2])
+    lean = template.sigmas[1] * (cov[:2, 4:] @ (unit / template.sigmas[1:] ** 2))
+    held = cov[:2, :2] - cov[:2, 3:] @ np.linalg.solve(cov[3:, 3:], cov[3:, :2])  # were the heights known
+    sigma_mm = np.sqrt(0.5 * max(unit * np.trace(cov[:2, :2]), unit * np.trace(held) + lean @ lean))
+    sigma_rad = np.sqrt(unit * cov[2, 2])
     turn_sigma = np.pi if template.round else float(min(sigma_rad, np.pi))
-    return Fit(pose, heights, float(sigma_mm), turn_sigma, outline_share, inner_share, worth, polygon)
+    lean = cov[:2, 4:] @ (unit / template.sigmas[1:] ** 2)
+    return Fit(pose, heights, float(sigma_mm), turn_sigma, lean, outline_share, inner_share, worth, polygon)
 
 
 def _scatter(out: FloatArray) -> float:

@@ -1,7 +1,7 @@
 """Sightings: what a finder hands on, in millimetres and radians of the cell frame."""
 
 from collections.abc import Iterable
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, field, fields
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,6 +18,8 @@ class Sightings:
     score (n,): share of the expected edge found, 0 to 1.
     sigma_mm (n,), sigma_rad (n,): standard deviations of one coordinate and of yaw.
     outline_mm: n polygons (k, 2) about xy along the cell's axes where a thing has no outline of its kind; else (0, 2).
+    lean_mm (n, 2): how far xy would move, were the kind's edges one standard deviation higher than was assumed; 0 where
+    left out.
     """
 
     row: NDArray[np.int64]
@@ -29,11 +31,14 @@ class Sightings:
     sigma_mm: FloatArray
     sigma_rad: FloatArray
     outline_mm: tuple[FloatArray, ...]
+    lean_mm: FloatArray = field(default_factory=lambda: np.zeros((0, 2)))
 
     def __post_init__(self) -> None:
         """Make the arrays read-only."""
-        for field in fields(self):
-            value = getattr(self, field.name)
+        if len(self.lean_mm) != len(self.row):
+            object.__setattr__(self, "lean_mm", np.zeros((len(self.row), 2)))
+        for one in fields(self):
+            value = getattr(self, one.name)
             if isinstance(value, np.ndarray):
                 value.flags.writeable = False
 

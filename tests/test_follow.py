@@ -109,8 +109,7 @@ def test_the_order_of_sightings_does_not_matter(random):
     seen = scene(recording, parts=8)[3]
     order = list(range(len(seen)))
     random.shuffle(order)
-    shuffled = Sightings(*(getattr(seen, name)[order] for name in list(vars(seen))[:-1]),
-                         tuple(seen.outline_mm[k] for k in order))
+    shuffled = Sightings.joined(seen.where(np.arange(len(seen)) == k) for k in order)
     one, other = follow(seen, recording, CELL), follow(shuffled, recording, CELL)
     assert np.array_equal(places(one), places(other))
     assert [part.yaw_rad for part in one.parts] == [part.yaw_rad for part in other.parts]
@@ -180,8 +179,7 @@ def test_what_is_known_rests_on_the_sightings_until_then():
     followed = follow(seen, recording, CELL)
     cut = 60
     early = seen.row <= cut
-    before = follow(Sightings(*(getattr(seen, name)[early] for name in list(vars(seen))[:-1]),
-                              tuple(np.zeros((0, 2)) for _ in range(early.sum()))), recording, CELL)
+    before = follow(seen.where(early), recording, CELL)
     for part, same in zip(followed.parts, before.parts, strict=False):
         k = part.known.by(cut)
         assert np.array_equal(part.known.xy_mm[k], same.xy_mm)

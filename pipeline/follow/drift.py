@@ -82,8 +82,8 @@ def fit_drift(group: IntArray, thing: IntArray, at_mm: FloatArray, sigma_mm: Flo
     keep = np.ones(len(thing), dtype=bool)
     for _ in range(3):
         weight = np.where(keep, 1 / sigma_mm**2, 0.0)
-        places = _less_mean(at_mm @ axes, group, weight)
-        cause = _less_mean(np.stack([travel_mm / 100, speed_mm_s], axis=1), group, weight)
+        places = less_mean(at_mm @ axes, group, weight)
+        cause = less_mean(np.stack([travel_mm / 100, speed_mm_s], axis=1), group, weight)
         parts = _moved(cause[:, 0], thing, keep)
         if parts < FEWEST_PARTS:
             return None
@@ -99,7 +99,7 @@ def fit_drift(group: IntArray, thing: IntArray, at_mm: FloatArray, sigma_mm: Flo
                  float(np.hypot(along_errors[1], whole_counts)), parts, mm_per_count)
 
 
-def _less_mean(values: FloatArray, group: IntArray, weight: FloatArray) -> FloatArray:
+def less_mean(values: FloatArray, group: IntArray, weight: FloatArray) -> FloatArray:
     """Values (n, k) less the weighted mean of their group."""
     total = np.maximum(np.bincount(group, weight), 1e-300)
     means = np.stack([np.bincount(group, weight * column) / total for column in values.T], axis=1)

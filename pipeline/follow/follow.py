@@ -13,6 +13,7 @@ from pipeline.cell import Cell
 from pipeline.follow.associate import associate
 from pipeline.follow.drift import Drift, fit_drift
 from pipeline.follow.estimate import Estimates, estimate, merged_sigma
+from pipeline.follow.level import level
 from pipeline.follow.overlap import mere_views
 from pipeline.follow.part import Known, Part
 
@@ -77,14 +78,15 @@ def follow(
     seen = _Seen(sightings, at_mm, _codes(sightings.kind, names), _codes(sightings.side, SIDES), areas)
     turns = np.array([0, *(cell.parts[name].turns for name in names[1:])], dtype=np.int64)
     thing = _numbered(_associated(seen, None if cell.belt is None else travel_mm[sightings.row]), seen, heading)
-    by_thing = _sorted(thing, sightings.row)
+    by_thing, drift = _sorted(thing, sightings.row), None
     if cell.belt is not None:  # what lay in one tray is no view of what lies in another
         views = _mere_views(by_thing, seen, _estimated(by_thing, seen, turns), names, outlines_mm or {})
         thing = _numbered(np.where((thing >= 0) & views[thing], -1, thing), seen, heading)
         by_thing = _sorted(thing, sightings.row)
+        again = _again(by_thing, _estimated(by_thing, seen, turns), seen, recording)
+        seen = _levelled(again, seen, travel_mm, heading, len(names))
+        drift = _drift(again, seen, recording, travel_mm, heading, cell.belt.mm_per_count, names)
     known = _estimated(by_thing, seen, turns)
-    drift = None if cell.belt is None else _drift(by_thing, known, seen, recording, travel_mm, heading,
-                                                  cell.belt.mm_per_count, names)
     return Followed(_parts(by_thing, known, seen, turns, names), drift, thing)
 
 
@@ -155,15 +157,39 @@ def _sorted(thing: IntArray, row: IntArray) -> _Sorted:
     return _Sorted(order, np.append(edges, len(order)).astype(np.int64))
 
 
-def _drift(by_thing: _Sorted, known: Estimates, seen: _Seen, recording: Recording, travel_mm: FloatArray,
-           heading: FloatArray, mm_per_count: float, names: list[str]) -> Drift | None:
+@dataclass(frozen=True)
+class _Again:
+    """Sightings of a thing as what it is: their indices, things, and groups of one thing seen by one camera (n,)."""
+
+    order: IntArray
+    thing: IntArray
+    group: IntArray
+
+
+def _again(by_thing: _Sorted, known: Estimates, seen: _Seen, recording: Recording) -> _Again:
     kind_of = known.kind[by_thing.start[1:] - 1]
     same = (kind_of[by_thing.thing] > 0) & (seen.kind[by_thing.order] == kind_of[by_thing.thing])
     order, thing = by_thing.order[same], by_thing.thing[same]
+    camera = np.unique(recording.cameras, return_inverse=True)[1][seen.sightings.row[order]]
+    return _Again(order, thing, np.unique(thing * (len(recording) + 1) + camera, return_inverse=True)[1])
+
+
+def _levelled(again: _Again, seen: _Seen, travel_mm: FloatArray, heading: FloatArray, kinds: int) -> _Seen:
+    """The sightings with their kinds' edges as high as the sightings themselves tell."""
+    sightings, look, o = seen.sightings, seen.kind + kinds * (seen.side == SIDES.index("down")), again.order
+    levels = level(look[o], 2 * kinds, again.group, seen.at_mm[o], sightings.sigma_mm[o], sightings.lean_mm[o],
+                   travel_mm[sightings.row[o]], heading)
+    told = 0.5 * np.sum(sightings.lean_mm**2, axis=1) * (1 - levels.sigma[look] ** 2)
+    sigma_mm = np.sqrt(np.maximum(sightings.sigma_mm**2 - told, 0.1 * sightings.sigma_mm**2))
+    return replace(seen, at_mm=seen.at_mm - sightings.lean_mm * levels.raised[look, None],
+                   sightings=replace(sightings, sigma_mm=sigma_mm))
+
+
+def _drift(again: _Again, seen: _Seen, recording: Recording, travel_mm: FloatArray, heading: FloatArray,
+           mm_per_count: float, names: list[str]) -> Drift | None:
+    order, thing, group = again.order, again.thing, again.group
     if not len(order) or len(recording) < 2:
         return None
-    camera = np.unique(recording.cameras, return_inverse=True)[1][seen.sightings.row[order]]
-    group = np.unique(thing * (len(recording) + 1) + camera, return_inverse=True)[1]
     speed = np.gradient(travel_mm, recording.times_s)
 
     def fitted(which: NDArray[np.bool_]) -> Drift | None:
