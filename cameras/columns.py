@@ -24,6 +24,9 @@ def read_columns(
     """
     header, rows, lines = _read_rows(path)
     missing = [name for name in required if name not in header]
+    if missing and any(";" in name or "\t" in name for name in header):
+        raise InputFault(path, "line 1", "columns are not parted by commas",
+                         "save it with commas between columns and points in numbers")
     if missing:
         raise InputFault(path, "line 1", f"no column {', '.join(missing)}",
                          f"the header must name {', '.join(required)}")
@@ -33,7 +36,7 @@ def read_columns(
     for row, line in zip(rows, lines, strict=True):
         if len(row) != len(header):
             raise InputFault(path, f"line {line}", f"{len(row)} values for {len(header)} columns",
-                             "give every row one value a column")
+                             "give every row one value a column, with points in numbers")
     table: dict[str, Column] = {"line": np.array(lines, dtype=np.int64)}
     for name, kind in {**required, **(optional or {})}.items():
         if name in header:

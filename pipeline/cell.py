@@ -13,6 +13,7 @@ from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_valida
 
 from cameras.faults import InputFault, InputFaults, printable
 
+RADIANS = 6.3  # limits of J1 and J2 within a turn in radians are taken for such
 MOST_ON_TRAY = 200  # parts ordered at once where nothing moves
 MOST_BYTES = 4 * 1024 * 1024
 
@@ -68,6 +69,14 @@ class ArmCell(Record):
     j2: Joint
     j3: Joint
     j4: Joint
+
+    @model_validator(mode="after")
+    def _degrees(self) -> "ArmCell":
+        """No arm turns J1 and J2 by so few degrees: such limits are radians."""
+        if all(max(abs(joint.min), abs(joint.max)) <= RADIANS for joint in (self.j1, self.j2)):
+            turns = " and ".join(f"{joint.max - joint.min:g}" for joint in (self.j1, self.j2))
+            raise ValueError(f"J1 and J2 turn by {turns} degrees only: write joints in degrees, not in radians")
+        return self
 
     @property
     def joints(self) -> tuple[Joint, Joint, Joint, Joint]:
@@ -293,7 +302,8 @@ def load_cell(path: str | Path) -> Cell:
     except FileNotFoundError:
         raise CellError([InputFault(path, "", "no such file", "check the path")]) from None
     except (OSError, UnicodeDecodeError, tomllib.TOMLDecodeError, RecursionError) as error:
-        raise CellError([InputFault(path, "", f"not a TOML file ({printable(error)})", "correct the line")]) from None
+        remedy = "give the cell file in it" if path.is_dir() else "correct the line: points in numbers, text in quotes"
+        raise CellError([InputFault(path, "", f"not a TOML file ({printable(error)})", remedy)]) from None
     return cell_from(raw, path)
 
 

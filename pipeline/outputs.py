@@ -13,7 +13,6 @@ from pipeline.decision import Decision, told
 from pipeline.finding import write_overlays
 from pipeline.page import write_page
 from pipeline.plan_graph import write_graph
-from pipeline.remedy import with_remedies
 from pipeline.replay import Run, Setting
 from pipeline.study import Seen
 from pipeline.tables import summary, write_parts, write_picks, write_summary, write_trajectory
@@ -21,8 +20,7 @@ from pipeline.tables import summary, write_parts, write_picks, write_summary, wr
 
 def write_run(out: Path, seen: Seen, setting: Setting, run: Run, horizon: int, trajectory: bool,
               overlays: bool) -> dict[str, Any]:
-    """Write everything about a run; its figures, as in summary.json."""
-    run = with_remedies(setting, run)
+    """Write everything about a run, its misses with their remedies; its figures, as in summary.json."""
     figures = summary(run, horizon, seen.find_s.tolist(), more_figures(seen, run))
     with written_whole(out / "parts.csv") as part:
         write_parts(part, run, seen.recording)
@@ -66,8 +64,17 @@ def more_figures(seen: Seen, run: Run) -> dict[str, Any]:
         "cell": seen.cell.name,
         "cycle_s": {name: round(float(np.mean(times)), 4) if times else 0.0 for name, times in split.items()},
         "error_budget": _error_budget(seen),
-        "drift": list(drift.findings) if drift is not None else [],
+        "drift": [*_standing(seen), *(drift.findings if drift is not None else [])],
     }
+
+
+def _standing(seen: Seen) -> list[str]:
+    """A doubt about counts that never change."""
+    counts = seen.recording.counts
+    if seen.cell.belt is None or len(counts) < 2 or np.ptp(counts) > 0:
+        return []
+    return [f"the counts stay at {counts[0]:g} over all {len(counts)} frames: the belt is taken to stand still. If it "
+            "moved, write its encoder's counts into frames.csv"]
 
 
 def _error_budget(seen: Seen) -> dict[str, Any]:

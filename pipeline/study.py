@@ -133,6 +133,8 @@ def run(setting: Setting, order: str, horizon: int, tick: Callable[[float], None
 
 def _read(cell: Cell, folder: Path, source: Source) -> Recording:
     """The recording, once cell and source have all that a replay needs."""
+    if folder.is_file():
+        raise InputFault(folder, "", "is a file", "give the folder that holds frames.csv")
     if source.detections is not None and source.located is not None:
         raise InputFault(source.located, "", "given together with detections", "give one of the two")
     for what, given in (("parts", cell.parts), ("places", cell.places)):

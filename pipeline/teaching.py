@@ -55,7 +55,7 @@ def remarks(cell: Cell, model: Model) -> list[str]:
     """What the teacher should know: symmetry seen, whether sides can be told, kinds that look alike."""
     seen = {0: "round", 1: "1"}.get(model.proposed_turns, str(model.proposed_turns))
     given = "round" if model.turns == 0 else str(model.turns)
-    lines = [f"symmetry of the outline: {seen}" + ("" if seen == given else f" (the cell file says {given})")]
+    lines = [f"symmetry: {given}" + ("" if seen == given else f", by the cell file; the outline alone shows {seen}")]
     if model.side_told:
         by = "inner edges" if model.mirrored_alike else "outline"
         lines.append(f"the wrong side can be told from the right one by its {by}")

@@ -21,7 +21,10 @@ app = typer.Typer(
 
 @app.callback()
 def _root() -> None:
-    """Replay a recording of a conveyor pick cell offline: what can be gripped, in which order, how many a minute."""
+    """Replay a recording of a conveyor pick cell offline: what can be gripped, in which order, how many a minute.
+
+    Start with `sanderling new FOLDER`; every command's --help has an example.
+    """
 
 
 for module in (cell, calibrate, find, arm, replay, score, desk, sweep):

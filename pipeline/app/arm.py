@@ -31,7 +31,10 @@ def reach(
         tuple[float, float] | None, typer.Option(help="Where parts come: from, to; mm to the left of the heading.")
     ] = None,
 ) -> None:
-    """Where over the belt and the places the arm can grip, at which part angles, how fast a belt it can follow."""
+    """Where over the belt and the places the arm can grip, at which part angles, how fast a belt it can follow.
+
+    Example: sanderling reach --cell demo_images/bells/cell.toml --suggest --out out/reach
+    """
     import numpy as np
 
     from pipeline import reach_suggest
@@ -62,7 +65,10 @@ def fit(
     moves: Annotated[Path, typer.Argument(help="CSV: j1_from ... j4_from, j1_to ... j4_to (deg, mm), time_s.")],
     cell: Annotated[Path, typer.Option(help="The cell file.")],
 ) -> None:
-    """Speed, acceleration and jerk of each joint from measured moves."""
+    """Speed, acceleration and jerk of each joint from measured moves.
+
+    Example: sanderling fit moves.csv --cell cell.toml
+    """
     from pipeline.arm import Arm
     from pipeline.cell import load_cell
     from pipeline.fit import JOINTS, LIMITS, cell_with, fit_moves, read_moves

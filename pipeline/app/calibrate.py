@@ -17,6 +17,9 @@ if TYPE_CHECKING:
     from pipeline.cell import Cell
 
 
+IMAGES = (".png", ".jpg", ".jpeg", ".bmp", ".tif", ".tiff")
+
+
 def register(app: typer.Typer) -> None:
     """Add this module's commands."""
     group = typer.Typer(no_args_is_help=True, help="Lens, plane map and belt from measurements.")
@@ -27,24 +30,40 @@ def register(app: typer.Typer) -> None:
 
 
 def lens(
-    images: Annotated[list[Path], typer.Argument(help="Images of the board, each tilted another way.")],
+    images: Annotated[list[Path], typer.Argument(help="Images of the board, tilted each another way; or folders.")],
     out: Annotated[Path, typer.Option(help="The lens file to write; a picture goes beside it.")],
-    board: Annotated[str, typer.Option(help="Inner corners, COLUMNSxROWS.")] = "9x6",
+    board: Annotated[str, typer.Option(help="Inner corners, COLUMNSxROWS: 10 x 7 squares have 9x6.")] = "9x6",
     square_mm: Annotated[float, typer.Option(help="Side of a square.")] = 25.0,
     charuco: Annotated[str, typer.Option(help="Marker dictionary of a ChArUco board, like DICT_4X4_50.")] = "",
     marker_mm: Annotated[float, typer.Option(help="Side of a ChArUco marker.")] = 0.0,
 ) -> None:
-    """Find a lens's focal lengths and distortion from images of a flat board."""
+    """Find a lens's focal lengths and distortion from images of a flat board.
+
+    Example: sanderling calibrate lens calibration/lens --board 9x6 --square-mm 20 --out calibration/lens.json
+    """
     from cameras.boards import checked_board, view_of
     from cameras.coverage import draw_coverage
     from cameras.lens_fit import fit_lens
     from pipeline.app.calibrated import tell_lens
 
     pattern = checked_board(board, square_mm, charuco, marker_mm)
-    views = [view_of(path, pattern) for path in progress(images, len(images), "boards")]
+    files = [file for one in images for file in _images(one)]
+    views = [view_of(path, pattern) for path in progress(files, len(files), "boards")]
     fit = fit_lens([view for view in views if view is not None])
     _write(out, fit.document(), draw_coverage(fit.views, fit.view_rms_px, fit.spoilers), "coverage")
-    tell_lens(fit, [path for path, view in zip(images, views, strict=True) if view is None])
+    tell_lens(fit, [path for path, view in zip(files, views, strict=True) if view is None])
+
+
+def _images(given: Path) -> list[Path]:
+    """An image's own path; of a folder, those of the images in it."""
+    from cameras.faults import InputFault
+
+    if not given.is_dir():
+        return [given]
+    found = sorted(path for path in given.iterdir() if path.suffix.lower() in IMAGES)
+    if not found:
+        raise InputFault(given, "", "no images in this folder", f"put board images there ({', '.join(IMAGES)})")
+    return found
 
 
 def plane(
@@ -55,7 +74,11 @@ def plane(
     camera: Annotated[str, typer.Option(help="Whose touches to take, where the file has a camera column.")] = "",
     image: Annotated[Path | None, typer.Option(help="An image of the camera: its size, without a lens file.")] = None,
 ) -> None:
-    """Find the map from pixels to the cell frame, at any height, from marks seen and touched."""
+    """Find the map from pixels to the cell frame, at any height, from marks seen and touched.
+
+    Example: sanderling calibrate plane calibration/touches.csv --cell cell.toml --lens calibration/lens.json --out
+    calibration/overhead.json
+    """
     from cameras.field import field_of
     from cameras.image import read_image_size
     from cameras.lens import load_lens
@@ -90,7 +113,10 @@ def belt(
     cell: Annotated[Path | None, typer.Option(help="A cell file, to compare with and for the carry.")] = None,
     carry_mm: Annotated[float | None, typer.Option(min=0.0, help="Longest way from image to gripper.")] = None,
 ) -> None:
-    """Find the belt's heading and its millimetres per count from marks touched along the belt."""
+    """Find the belt's heading and its millimetres per count from marks touched along the belt.
+
+    Example: sanderling calibrate belt calibration/belt_touches.csv --cell cell.toml
+    """
     from pipeline.app.calibrated import tell_belt
     from pipeline.belt_scale import fit_belt, read_marks
     from pipeline.cell import load_cell

@@ -151,6 +151,9 @@ def tell_belt(scale: BeltScale, lines_of_file: Sequence[int], cell: Cell | None,
                [(lines_of_file[k], f"{scale.along_mm[k]:+.3f}", f"{scale.across_mm[k]:+.3f}",
                  "" if scale.kept[k] else "LEFT OUT")
                 for k in order[: _WORST + int((~scale.kept).sum())]])  # fmt: skip
+    print("for [belt] in the cell file:\n"
+          f"heading_deg = {scale.heading_deg:.4f}\nheading_error_deg = {np.degrees(scale.heading_error_rad):.2g}\n"
+          f"mm_per_count = {scale.mm_per_count:.7g}\nmm_per_count_error = {scale.mm_per_count_error:.2g}")
     warn(_belt_warnings(scale, cell, carry))
 
 

@@ -20,7 +20,10 @@ def check(
     cell: Annotated[Path, typer.Argument(help="The cell file.")],
     moves: Annotated[Path | None, typer.Option(help="Measured moves: show the cycle with fitted limits too.")] = None,
 ) -> None:
-    """Read everything a cell names, say what is wrong and where, and sum the cell up."""
+    """Read everything a cell names, say what is wrong and where, and sum the cell up.
+
+    Example: sanderling check demo_images/bells/cell.toml
+    """
     from pipeline.cell import load_cell
     from pipeline.check import budgets, check_cell
 
@@ -52,7 +55,8 @@ def _sum_up(cell: "Cell") -> None:
          + ("not set" if belt.window_mm is None else "{:g} to {:g} mm".format(*belt.window_mm))),
         *((f"part {kind}", f"{part.height_mm:g} mm high, gripped at {part.grasp_mm:g} mm, symmetry {part.symmetry}, to "
                            + ", ".join(part.places)) for kind, part in cell.parts.items()),
-        *((f"place {place.name}", f"{place.rows} x {place.columns} slots") for place in cell.places),
+        *((f"place {place.name}", f"{place.rows} x {place.columns} slots, "
+           + ("exchanged when full" if place.endless else "filled once: endless is false")) for place in cell.places),
         ("keep-outs", ", ".join(keepout.name or "unnamed" for keepout in cell.keepouts) or "none"),
     ]  # fmt: skip
     show_table(cell.name or "Cell", ("what", ""), rows)

@@ -25,7 +25,11 @@ def teach(
     touch_counts: Annotated[float | None, typer.Option(help="Belt counts when the part was gripped.")] = None,
     camera: Annotated[str, typer.Option(help="Which camera took it, where there are several.")] = "",
 ) -> None:
-    """Teach a part: its outline, its inner edges and its grip frame, from one image and the tool pose that grips it."""
+    """Teach a part: its outline, its inner edges and its grip frame, from one image and the tool pose that grips it.
+
+    Example: sanderling teach teach/lever.png --cell cell.toml --part lever --tool=321.6,-58.6,-26.1 --counts 21475
+    --touch-counts 30868 --out parts/lever.json
+    """
     from cameras.camera import load_camera
     from cameras.find import grey_of
     from cameras.image import read_image
@@ -52,11 +56,14 @@ def teach(
 
 
 def find(
-    recording: Annotated[Path, typer.Argument(help="The recording.")],
+    recording: Annotated[Path, typer.Argument(help="Folder with frames.csv and its images.")],
     cell: Annotated[Path, typer.Option(help="The cell file.")],
     out: Annotated[Path, typer.Option(help="The folder to write to.")],
 ) -> None:
-    """Find the taught parts in every image of a recording; write detections.csv and the images with what was found."""
+    """Find the taught parts in every image of a recording; write detections.csv and the images with what was found.
+
+    Example: sanderling find demo_images/bells --cell demo_images/bells/cell.toml --out out/found
+    """
     import numpy as np
 
     from cameras.recording import read_recording

@@ -5,11 +5,12 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
+from cameras.faults import printable
 from pipeline.app.shown import progress, show_table
 
 if TYPE_CHECKING:
     from pipeline.decision import Decision
-    from pipeline.replay import Run
+    from pipeline.replay import Pick, Run, Setting
     from pipeline.study import Seen
 
 
@@ -44,13 +45,14 @@ def replay(
     """
     from pipeline.cell import load_cell
     from pipeline.outputs import write_run
+    from pipeline.remedy import with_remedies
     from pipeline.study import run, setting
 
     whole = load_cell(cell)
     seen = _seen(whole, recording, detections, located)
     chosen = setting(seen, least_score)
     order, horizon = order or whole.order.policy, horizon or whole.horizon
-    done = run(chosen, order, horizon, _clock(seen), budget_ms)
+    done = with_remedies(chosen, run(chosen, order, horizon, _clock(seen), budget_ms))
     drawn = overlays and detections is None and located is None
     figures = write_run(out, seen, chosen, done, horizon, trajectory, drawn)
     if plots:
@@ -74,24 +76,32 @@ def plan(
     from pipeline.cell import load_cell
     from pipeline.decision import first_decision
     from pipeline.outputs import write_decision, write_run
+    from pipeline.remedy import with_remedies
     from pipeline.study import one_frame, policy_of, run, setting
 
     whole = load_cell(cell)
     seen = one_frame(whole, recording, _source(detections, located), frame)
     chosen = setting(seen, least_score)
     order, horizon = order or whole.order.policy, horizon or whole.horizon
-    done = run(chosen, order, horizon, budget_ms=budget_ms)
+    done = with_remedies(chosen, run(chosen, order, horizon, budget_ms=budget_ms))
     decision = first_decision(chosen, policy_of(chosen, order, budget_ms), horizon, done)
     figures = write_run(out, seen, chosen, done, horizon, True, detections is None and located is None)
-    show_table("Plan", ("pick", "part", "at", "decided s", "gripped s", "released s", "to", "elbow"),
-               [(n, pick.part.kind, f"{pick.part.xy_mm[0]:.1f}, {pick.part.xy_mm[1]:.1f}", f"{pick.decided_s:.2f}",
-                 f"{pick.cycle.grasp_start_s:.2f}", f"{pick.cycle.release_end_s:.2f}", f"{pick.place} {pick.slot + 1}",
+    show_table("Plan", ("pick", "part", "kind", "x mm", "y mm", "grip s", "release s", "to", "elbow"),
+               [(n, pick.part.number, pick.part.kind, *(f"{v:.0f}" for v in _gripped_mm(chosen, pick)),
+                 f"{pick.cycle.grasp_start_s:.2f}", f"{pick.cycle.release_start_s:.2f}",
+                 f"{pick.place} {pick.slot + 1}",
                  ("right", "left")[pick.cycle.hold.elbow]) for n, pick in enumerate(done.picks, 1)])  # fmt: skip
     if decision is not None:
         write_decision(out, decision)
         _explain(decision, done.picks[0].decide_s)
     _tell(done, figures)
     print(f"-> {out}")
+
+
+def _gripped_mm(setting: "Setting", pick: "Pick") -> list[float]:
+    """Where the part is gripped: x, y."""
+    cycle = pick.cycle
+    return (cycle.hold.at_mm + setting.belt.shift_mm(cycle.grasp_start_s)).tolist()  # type: ignore[no-any-return]
 
 
 def _explain(decision: "Decision", took_s: float) -> None:
@@ -143,11 +153,12 @@ def _tell(done: "Run", figures: dict[str, object]) -> None:
         reasons: dict[str, list[str]] = {}
         for part, fate in zip(done.parts, done.fates, strict=True):
             if fate:
-                reasons.setdefault(fate.reason, []).append(f"part {part.number}: {fate.detail}")
+                reasons.setdefault(fate.reason, []).append(f"part {part.number}: {fate.told}")
+        most = sorted(reasons.items(), key=lambda one: (-len(one[1]), one[0]))
         show_table("Missed", ("reason", "parts", "for instance"),
-                   [(reason, len(lines), lines[0]) for reason, lines in sorted(reasons.items())])
-    for note in done.notes:
-        print(note)
+                   [(reason, len(lines), lines[0]) for reason, lines in most])
+    for note in (*done.notes, *figures["drift"]):  # type: ignore[misc]
+        print(printable(note, 400))
 
 
 def _clock(seen: "Seen"):  # type: ignore[no-untyped-def]

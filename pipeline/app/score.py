@@ -43,7 +43,10 @@ def score(
     min_position_coverage: Annotated[float | None, typer.Option(
         help="Fail below: share of errors inside the predicted 95 %.")] = None,
 ) -> None:  # fmt: skip
-    """Compare what was found with the truth. With a limit it is a check: exit status 1 where one is not kept."""
+    """Compare what was found with the truth. With a limit it is a check: exit status 1 where one is not kept.
+
+    Example: sanderling score out/bells --truth demo_images/bells/truth.csv --max-position-p95-mm 0.5
+    """
     from pipeline.cell import load_cell
     from pipeline.score import over_limits, read_parts, read_truth
     from pipeline.score import score as compared

@@ -1,11 +1,13 @@
 """What the commands share: progress on the terminal, tables a person can read."""
 
+import re
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from typing import TypeVar
 
 from cameras.faults import printable
 
 T = TypeVar("T")
+NUMBER = re.compile(r"(- ?$|[+-]?\d)")  # how a cell begins that holds a figure
 
 
 def progress(items: Iterable[T], total: int, label: str) -> Iterator[T]:
@@ -23,7 +25,7 @@ def progress(items: Iterable[T], total: int, label: str) -> Iterator[T]:
 
 
 def show_table(title: str, header: Sequence[str], rows: Iterable[Sequence[object]]) -> None:
-    """Print a table; text from files is cleaned for the terminal and is never read as markup."""
+    """Print a table, columns of numbers to the right; text from files is cleaned and never read as markup."""
     from rich import box
     from rich.console import Console
     from rich.table import Table
@@ -31,10 +33,12 @@ def show_table(title: str, header: Sequence[str], rows: Iterable[Sequence[object
 
     table = Table(title=Text(title), title_justify="left", header_style="bold", box=box.SIMPLE_HEAD,
                   show_header=any(header))
+    texts = [[printable(value) for value in row] for row in rows]
     for k, name in enumerate(header):
-        table.add_column(name, justify="left" if k == 0 else "right")
-    for row in rows:
-        table.add_row(*(Text(printable(value)) for value in row))
+        numbers = k > 0 and all(not row[k] or NUMBER.match(row[k]) for row in texts)
+        table.add_column(name, justify="right" if numbers else "left")
+    for row in texts:
+        table.add_row(*map(Text, row))
     Console(highlight=False).print(table)
 
 

@@ -188,6 +188,8 @@ def _show(outcomes: list["Outcome"], names: list[str]) -> None:
     rows = [(*(column[k] for _, column in shown), f"{one.figures['picks_per_min']:.1f}",
              f"{one.figures['picked']} of {one.figures['parts_seen']}", f"{100 * one.figures['lost_share']:.1f} %",
              f"{100 * one.figures['waiting']:.0f} %") for k, one in enumerate(outcomes) if not one.failed]  # fmt: skip
+    if not rows:
+        return
     show_table("Sweep", (*(name for name, _ in shown), "picks/min", "picked", "lost", "waiting"), rows[:SHOWN])
     if len(rows) > SHOWN:
         print(f"and {len(rows) - SHOWN} more in sweep.csv")
@@ -199,10 +201,15 @@ def _sum_up(outcomes: list["Outcome"], took_s: float, jobs: int, dask: str) -> N
 
     ran = [one for one in outcomes if not one.again]
     again, failed = len(outcomes) - len(ran), [one for one in outcomes if one.failed]
-    told = f"{len(outcomes)} points: {len(ran)} run" + (f", {again} done before" if again else "")
+    told = f"{len(outcomes)} point{'s' * (len(outcomes) != 1)}: {len(ran)} run"
+    told += f", {again} done before" if again else ""
     workers = min(joblib.cpu_count() if jobs < 0 else max(jobs, 1), max(len(ran), 1))
     if ran and not dask:
         told += f", {workers} at a time, each busy {100 * sum(one.ran_s for one in ran) / workers / took_s:.0f} %"
     print(told + f", {took_s:.0f} s")
-    for one in failed[:SHOWN]:
-        print(f"failed: {one.point.told()}: {one.failed}", file=sys.stderr)
+    alike: dict[str, list[Outcome]] = {}
+    for one in failed:
+        alike.setdefault(one.failed, []).append(one)
+    for why, several in list(alike.items())[:SHOWN]:
+        more = f" and {len(several) - 1} more" if len(several) > 1 else ""
+        print(f"failed: {several[0].point.told()}{more}: {why}", file=sys.stderr)

@@ -18,6 +18,7 @@ from pipeline.finding import Rows, calibration_of, found_in
 from pipeline.sweep.case import code_digest, digest
 
 FloatArray = NDArray[np.float64]
+PAIRS = ("xy_mm", "lean_mm")
 COLUMNS = tuple(field.name for field in fields(Sightings) if field.name != "outline_mm")
 
 
@@ -82,6 +83,6 @@ def _read(path: Path, frames: int) -> tuple[Sightings, FloatArray] | None:
 
 def _alike(held: dict[str, NDArray[np.generic]], n: int, frames: int) -> bool:
     """Whether every column has n entries and every row is one of the frames."""
-    shapes: Iterable[bool] = (held[name].shape == ((n, 2) if name == "xy_mm" else (n,)) for name in COLUMNS)
+    shapes: Iterable[bool] = (held[name].shape == ((n, 2) if name in PAIRS else (n,)) for name in COLUMNS)
     rows = held["row"]
     return all(shapes) and (n == 0 or bool(0 <= rows.min() <= rows.max() < frames))

@@ -10,7 +10,7 @@ from typing import Any
 
 from cameras.faults import InputFault, printable
 from pipeline.sweep.case import digest
-from pipeline.sweep.settings import COMMAND_LINE, Value, check_name
+from pipeline.sweep.settings import COMMAND_LINE, Value, check_name, check_values
 
 Row = tuple[tuple[str, Value], ...]  # settings by name
 MOST_POINTS = 1_000_000
@@ -67,6 +67,7 @@ def parsed(text: str) -> tuple[str, list[Value]]:
     values = [_value(part.strip()) for part in given.split(",")]
     if any(value == "" or (isinstance(value, float) and not math.isfinite(value)) for value in values):
         raise InputFault(COMMAND_LINE, printable(text), "a value is empty or not finite", "write NAME=v1,v2")
+    check_values(name, values)
     return name, values
 
 
@@ -125,6 +126,7 @@ def _axis(path: Path, name: str, given: Any) -> list[Value]:
     if not values or not all(isinstance(v, (int, float, str)) and not isinstance(v, bool) for v in values) \
             or not all(math.isfinite(v) for v in values if not isinstance(v, str)):
         raise InputFault(path, printable(name), "no list of numbers or words", "write [v1, v2]")
+    check_values(name, values, str(path))
     return list(values)
 
 

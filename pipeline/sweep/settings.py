@@ -1,6 +1,6 @@
 """The settings a sweep can change, and how each changes a cell or a recording."""
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, replace
 from difflib import get_close_matches
 from pathlib import Path
@@ -97,6 +97,14 @@ def check_name(name: str, place: str = COMMAND_LINE) -> None:
     raise InputFault(place, printable(name), "no such setting",
                      f"did you mean {near[0]}?" if near else f"there are {', '.join(known)}, and keys of the cell file "
                      "such as motion.grasp_s")
+
+
+def check_values(name: str, values: Iterable[Value], place: str = COMMAND_LINE) -> None:
+    """Raise InputFault for words where a setting takes numbers."""
+    words = [value for value in values if isinstance(value, str)]
+    if words and (name in RECORDING or (name in CELL and name != "order")):
+        raise InputFault(place, printable(name), f"{printable(words[0])!r} is not a number",
+                         "write NAME=v1,v2 or NAME=from:to:steps, with points in numbers")
 
 
 def changed_cell(cell: Cell, settings: Mapping[str, Value]) -> Cell:
