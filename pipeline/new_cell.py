@@ -13,7 +13,7 @@ TABLES = {
     "moves.csv": "j1_from,j2_from,j3_from,j4_from,j1_to,j2_to,j3_to,j4_to,time_s",
     "recording/frames.csv": "frame,file,time_s,counts",
 }
-FOLDERS = ("calibration/lens", "parts", "recording")
+FOLDERS = ("calibration/lens", "teach", "parts", "recording")
 
 
 def new_cell(folder: Path) -> list[Path]:

@@ -12,10 +12,11 @@ HEAVY = ("numpy", "cv2", "scipy", "numba", "matplotlib", "networkx", "ruckig", "
 
 
 @pytest.mark.parametrize("command", COMMANDS)
-def test_every_command_tells_what_it_does(command: str) -> None:
+def test_every_command_tells_what_it_does_with_an_example(command: str) -> None:
     told = sanderling(*command.split(), "--help")
     assert told.status == 0
     assert "Usage" in told.out
+    assert f"Example: sanderling {command} " in " ".join(told.out.split())
 
 
 def test_help_loads_nothing_heavy() -> None:
