@@ -23,6 +23,7 @@ INNER_SHARE, INNER_MOST, INNER_WORTH = 0.55, 0.85, 0.6  # more of the inner edge
 PIXEL_SIGMA = 0.25
 DOWN_LIGHTER, DOWN_DARKER, DOWN_SIGMA = 0.92, 0.75, 0.12  # of the height: of the outline of a part turned over
 DROP_SIGMA = 0.2  # of the height: how far down a wall is seen where it faces the camera
+OWN_SHARE = 0.5  # of what is not known of a height: that in which it differs from the part's other heights
 STILL_MM, STILL_RAD = 3e-3, 1e-4  # a step this small ends the fit
 LEAST_SCATTER_PX = 0.12
 CORRELATED = 9.0  # neighbouring edge points err together
@@ -33,15 +34,18 @@ class Template:
     """A model ready to be laid on images, for one side.
 
     points (n, 6): x, y, nx, ny in the grip frame (mirrored for the side down), grey step, group (0 outline, k inner).
-    heights (g,), sigmas (g,): of the outline where it faces the camera and where away, then of each inner contour; the
-    first sigma is that of the difference between the first two.
+    heights (g,): of the outline where it faces the camera and where away, then of each inner contour.  sigmas (g,): by
+    how much each may differ from the others; the first of them is that of the difference between the first two.
+    sigma_mm: by how much all of them may be higher than they say, of which one view tells nothing.
     away (2,): how far the taught points would lie towards the camera's foot for each millimetre that they are higher
-    than `heights` says; zero where what is seen is not what was taught.  outline (k, 2): polygon.
+    than `heights` says; zero where what is seen is not what was taught. They would lie closer together as well: how
+    large a part looks tells nothing of its height.  outline (k, 2): polygon.
     """
 
     points: FloatArray
     heights: FloatArray
     sigmas: FloatArray
+    sigma_mm: float
     away: FloatArray
     outline: FloatArray
     round: bool
@@ -63,7 +67,8 @@ def template_of(model: Model, down: bool) -> Template:
         sigmas = [drop, model.outline.height_sigma_mm] + [one.height_sigma_mm for one in model.inner]
     outline = model.outline_mm[::-1] * np.array([1.0, -1.0]) if down else model.outline_mm.copy()
     away = np.zeros(2) if down else model.away.copy()
-    return Template(np.ascontiguousarray(points), np.array(heights), np.maximum(np.array(sigmas), 0.02), away,
+    own = np.maximum(OWN_SHARE * np.array(sigmas), 0.02)
+    return Template(np.ascontiguousarray(points), np.array(heights), own, sigmas[1], away,
                     np.ascontiguousarray(outline), model.turns == 0)  # fmt: skip
 
 
@@ -86,7 +91,8 @@ def _step(  # type: ignore[no-untyped-def]
     det = local[0, 0] * local[1, 1] - local[0, 1] * local[1, 0]
     away_x = (local[1, 1] * local[0, 2] - local[0, 1] * local[1, 2]) / det
     away_y = (-local[1, 0] * local[0, 2] + local[0, 0] * local[1, 2]) / det
-    back_x, back_y = cosine * taught[0] - sine * taught[1], sine * taught[0] + cosine * taught[1]
+    larger = 0.5 * (view[0, 11] * local[1, 1] + local[0, 0] * view[1, 12] - view[0, 12] * local[1, 0]
+                    - local[0, 1] * view[1, 11]) / det  # fmt: skip
     usual = np.median(np.abs(points[:, 4])) + 1e-6
     hits, inside = 0, 0
     for k in range(0, points.shape[0], stride):
@@ -96,7 +102,8 @@ def _step(  # type: ignore[no-untyped-def]
         if group == 0:
             at = 1 if nx * away_x + ny * away_y > 0.0 else 0
         higher = heights[at] - prior[at]
-        px, py = points[k, 0] - higher * taught[0], points[k, 1] - higher * taught[1]
+        tx, ty = taught[0] + larger * points[k, 0], taught[1] + larger * points[k, 1]
+        px, py = points[k, 0] - higher * tx, points[k, 1] - higher * ty
         rx, ry = cosine * px - sine * py, sine * px + cosine * py
         x, y, z = pose[0] + rx, pose[1] + ry, heights[at]
         u, v = project(view, x, y, z)
@@ -124,7 +131,7 @@ def _step(  # type: ignore[no-untyped-def]
             hits += 1
         jx, jy = nu * local[0, 0] + nv * local[1, 0], nu * local[0, 1] + nv * local[1, 1]
         row[0], row[1], row[2] = jx, jy, -jx * ry + jy * rx
-        jz = nu * local[0, 2] + nv * local[1, 2] - jx * back_x - jy * back_y
+        jz = nu * local[0, 2] + nv * local[1, 2] - jx * (cosine * tx - sine * ty) - jy * (sine * tx + cosine * ty)
         for a in range(4):
             ia = a if a < 3 else 3 + at
             ja = row[a] if a < 3 else jz
@@ -249,9 +256,8 @@ def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, sta
     worth = outline_share + (0.0 if outline.all() else INNER_WORTH * (min(inner_share, INNER_MOST) - INNER_SHARE))
     polygon = np.empty_like(template.outline)
     outline_pixels(view, template.outline, pose, 0.5 * (heights[0] + heights[1]), polygon)
-    lean = template.sigmas[1] * (cov[:2, 4:] @ (unit / template.sigmas[1:] ** 2))
-    held = cov[:2, :2] - cov[:2, 3:] @ np.linalg.solve(cov[3:, 3:], cov[3:, :2])  # were the heights known
-    sigma_mm = np.sqrt(0.5 * max(unit * np.trace(cov[:2, :2]), unit * np.trace(held) + lean @ lean))
+    lean = template.sigma_mm * (cov[:2, 4:] @ (unit / template.sigmas[1:] ** 2))
+    sigma_mm = np.sqrt(0.5 * (unit * np.trace(cov[:2, :2]) + lean @ lean))
     sigma_rad = np.sqrt(unit * cov[2, 2])
     turn_sigma = np.pi if template.round else float(min(sigma_rad, np.pi))
     lean = cov[:2, 4:] @ (unit / template.sigmas[1:] ** 2)
