@@ -1,7 +1,6 @@
 """Slips of a first day: each ends in one line that says what to do, or is told as a doubt."""
 
 import json
-import re
 from collections.abc import Callable
 from pathlib import Path
 
@@ -28,7 +27,7 @@ def rewritten(name: str, change: Callable[[str], str]) -> Callable[[Path], None]
 SLIPS = {
     "semicolons": (rewritten("frames.csv", lambda text: text.replace(",", ";")), "save it with commas between columns"),
     "decimal commas": (rewritten("frames.csv", lambda text: text.replace(".1", ",1")), "with points in numbers"),
-    "decimal comma in the cell": (rewritten("cell.toml", lambda text: re.sub(r"(link1_mm = \d+)\S*", r"\1,5", text)),
+    "decimal comma in the cell": (rewritten("cell.toml", lambda text: text + "[tray]\nsurface_mm = 1,5\n"),
                                   "correct the line: points in numbers"),
     "no counts": (rewritten("frames.csv", lambda text: text.replace(",counts", "")), "no column counts"),
 }  # fmt: skip
