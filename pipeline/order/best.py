@@ -7,16 +7,16 @@ from time import perf_counter
 import numpy as np
 from numpy.typing import ArrayLike
 
-from pipeline.order.bound import part_bound, round_bound, whole_bound
+from pipeline.order.bound import part_bound, whole_bound
 from pipeline.order.exact import MOST_ITEMS, search
+from pipeline.order.rounds import best_round
 from pipeline.order.ruin import improve_order
-from pipeline.order.task import FloatArray, IntArray, Task, checked_task
-from pipeline.order.tour import improve_round
+from pipeline.order.task import Task, checked_task
 
 QUICK = 1000  # labels of each size a first search may keep
 SMALL = 14  # items for which the exact search needs no limit
 LABELS, MADE = 300_000, 2_000_000  # of larger ones: what the exact search may keep and make, over all sizes
-KICKS, ROUNDS = 250_000, 3_000_000  # over the number of items: how long is improved
+ROUNDS = 3_000_000  # over the number of items: how long is improved
 BEATS = 8  # between which the clock is looked at
 SAME = 1e-9
 
@@ -123,30 +123,9 @@ def _solved(task: Task, seed: int, until: float) -> _Best:
 
 def _round(task: Task, seed: int, until: float) -> _Best:
     """Nothing is ever late: a round through all, its way back free where the order is open."""
-    n = len(task.go)
-    cost = np.where(np.eye(n, dtype=bool), np.inf, task.cost)
-    near = np.ascontiguousarray(np.argsort(cost, axis=1, kind="stable")[:, : min(12, n - 1)])
-    warmth = 2.0 * float(np.median(cost.min(axis=1)))
-    tour = _nearest_next(cost)
-    value = improve_round(task.cost, near, tour, 0.0, 0, seed, 0.0)
-    bound = round_bound(task.cost, value, task.unit)
-    for beat in range(BEATS if n > SMALL + 1 else 1):
-        if value <= bound + SAME * abs(value) or (beat and perf_counter() > until):
-            break
-        value = improve_round(task.cost, near, tour, bound, KICKS // BEATS // n, seed + beat, warmth)
-    nodes = tuple(int(node) for node in np.roll(tour, -int(np.argmax(tour == 0)))[1:])
-    value = task.value(nodes)
-    return _Best(nodes, 0.0, value).judged(max(bound, round_bound(task.cost, value, task.unit)), searched=False)
-
-
-def _nearest_next(cost: FloatArray) -> IntArray:
-    """A round to start from: always on to the nearest node not yet in it."""
-    left = cost.copy()
-    tour = np.zeros(len(cost), np.int64)
-    for i in range(1, len(cost)):
-        left[:, tour[i - 1]] = np.inf
-        tour[i] = np.argmin(left[tour[i - 1]])
-    return tour
+    tour, bound = best_round(task.cost, task.unit, len(task.go) - 1 > SMALL, seed, until)
+    nodes = tuple(int(node) for node in tour[1:])
+    return _Best(nodes, 0.0, task.value(nodes)).judged(bound, searched=False)
 
 
 def _improved(task: Task, best: _Best, target: float, beats: int, seed: int, until: float) -> _Best:

@@ -9,14 +9,17 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pipeline.order.compiled import compiled
+from pipeline.order.cuts import price_sets
 from pipeline.order.task import Task
 
 FloatArray = NDArray[np.float64]
+SET_TURNS = 6
 
 
-@compiled("Tuple((f8, f8[::1], f8[::1]))(f8[:,::1])")
-def assignment(cost: FloatArray) -> tuple[float, FloatArray, FloatArray]:
-    """Least sum with every node left and entered once, and prices u, v with u_i + v_j <= cost_ij that add up to it.
+@compiled("Tuple((f8, f8[::1], f8[::1], i8[::1]))(f8[:,::1])")
+def assignment(cost: FloatArray) -> tuple[float, FloatArray, FloatArray, NDArray[np.int64]]:
+    """Least sum with every node left and entered once, prices u, v with u_i + v_j <= cost_ij that add up to it, and
+    the node that follows each.
 
     Shortest augmenting paths (Kuhn 1955; Jonker & Volgenant 1987), O(N^3). The diagonal must hold what forbids it.
     """
@@ -48,7 +51,10 @@ def assignment(cost: FloatArray) -> tuple[float, FloatArray, FloatArray]:
         while column:
             row_of[column] = row_of[came[column]]
             column = came[column]
-    return u[1:].sum() + v[1:].sum(), u[1:].copy(), v[1:].copy()
+    then = np.empty(size, np.int64)
+    for j in range(1, size + 1):
+        then[row_of[j] - 1] = j - 1
+    return u[1:].sum() + v[1:].sum(), u[1:].copy(), v[1:].copy(), then
 
 
 @compiled("f8(f8[:,::1], f8[::1], f8[::1], b1, i8[::1], i8[::1])")
@@ -131,25 +137,50 @@ def ascent(
     return best
 
 
-def round_bound(cost: FloatArray, upper: float, unit: float = 0.0, rounds: int = 3000) -> float:
-    """No round through all N nodes costs less (diagonal not used, inf where there is no leg); `upper`: a known one.
+def priced_round(
+    cost: FloatArray, upper: float, unit: float = 0.0, rounds: int = 3000,
+) -> tuple[float, FloatArray, FloatArray]:
+    """No round through all N nodes costs less (diagonal not used, inf where there is no leg), `upper`: a known one; and
+    prices (N,) to leave and to enter each node, under which the legs of good rounds stand out.
 
     Where costs are whole numbers of a unit so is the least, and the bound is rounded up.
     """
     size = len(cost)
     if size < 3:
-        return float(sum(cost[i, (i + 1) % size] for i in range(size))) if size > 1 else 0.0
+        least = float(sum(cost[i, (i + 1) % size] for i in range(size))) if size > 1 else 0.0
+        return least, np.zeros(size), np.zeros(size)
     off = ~np.eye(size, dtype=bool)
     finite = cost[off & np.isfinite(cost)]
     forbidden = 2.0 * (float(finite.max(initial=0.0)) * size + abs(upper) + 1.0)
     filled = np.where(off & np.isfinite(cost), cost, forbidden)
     symmetric = bool(np.array_equal(filled, filled.T))
-    assigned, u, v = assignment(filled)
+    bound, u, v, _ = assignment(filled)
     leave, enter = (np.zeros(size), np.zeros(size)) if symmetric else (-u, -v)
-    bound = max(assigned, ascent(filled, symmetric, leave, enter, upper, rounds))
+    bound = max(bound, ascent(filled, symmetric, leave, enter, upper, rounds))
+    if not symmetric and bound < upper * (1.0 - 1e-9):
+        bound = max(bound, _set_bound(filled, upper, rounds))
     if unit:
         bound = np.ceil(bound / unit - 1e-6) * unit
-    return float(min(bound, upper))
+    return float(min(bound, upper)), leave, enter
+
+
+def _set_bound(cost: FloatArray, upper: float, rounds: int) -> float:
+    """Assignment and prices on sets by turns, each on what the one before left of the costs, then the ascent."""
+    left, bound, size = cost.copy(), 0.0, len(cost)
+    hair = 1e-12 * float(cost.max())
+    for _ in range(SET_TURNS):
+        more, u, v, _ = assignment(left)
+        left = np.maximum(left - u[:, None] - v, 0.0)
+        more += price_sets(left, False, hair) + price_sets(left, True, hair)
+        bound += more
+        if more <= 1e-6 * bound:
+            break
+    return float(bound + max(ascent(left, False, np.zeros(size), np.zeros(size), upper - bound, rounds), 0.0))
+
+
+def round_bound(cost: FloatArray, upper: float, unit: float = 0.0, rounds: int = 3000) -> float:
+    """The bound of `priced_round`."""
+    return priced_round(cost, upper, unit, rounds)[0]
 
 
 def shortest(go: FloatArray) -> FloatArray:

@@ -67,7 +67,7 @@ def _nodes(task: Task, strict: bool) -> NDArray[np.void]:
     if strict and len(task.go) > 1:
         may = allowed(task) & np.isfinite(task.cost)
         large = 2.0 * (task.cost[may].max(initial=0.0) * len(task.go) + 1.0)
-        _, leave, enter = assignment(np.where(may, task.cost, large))
+        _, leave, enter, _ = assignment(np.where(may, task.cost, large))
         nodes["leave"], nodes["enter"] = leave, enter
     return nodes
 

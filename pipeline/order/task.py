@@ -60,7 +60,7 @@ def checked_task(
     after: Iterable[tuple[int, int]] | None, objective: str, close: bool,
 ) -> Task:
     """The task, or a ValueError that says which argument is wrong and how."""
-    leg = np.array(legs, dtype=np.float64)
+    leg = np.array(legs, dtype=np.float64, order="C")
     if leg.ndim != 2 or leg.shape[0] != leg.shape[1] or not len(leg):
         raise ValueError(f"legs must be square, row and column 0 the start; got shape {leg.shape}")
     n = len(leg) - 1
