@@ -1,6 +1,7 @@
 """The best sequence, and how good it is at most.
 
-task -> bound (cuts), exact (labels) -> rounds (patch, tour), ruin -> best; lookahead (subsets) stands by itself, for parts that move.
+task -> bound (cuts), exact (labels) -> rounds (patch, tour), ruin -> best; lookahead (subsets) stands by itself, for
+parts that move.
 """
 
 from typing import TYPE_CHECKING, Any
