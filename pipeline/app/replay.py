@@ -60,7 +60,7 @@ def replay(
 
         write_plots(out / "plots", chosen, done)
     _tell(done, figures)
-    print(f"-> {out}")
+    print(f"-> {out / 'report.html'}")
 
 
 def plan(
@@ -95,7 +95,7 @@ def plan(
         write_decision(out, decision)
         _explain(decision, done.picks[0].decide_s)
     _tell(done, figures)
-    print(f"-> {out}")
+    print(f"-> {out / 'report.html'}")
 
 
 def _gripped_mm(setting: "Setting", pick: "Pick") -> list[float]:

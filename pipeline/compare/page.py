@@ -41,7 +41,7 @@ def compare_page(tried: Sequence[Tried]) -> str:
                tag("link", rel="icon", href="data:,"), tag("style", style))  # fmt: skip
     sections = (("Figures", _figures(tried)), ("Side by side", _side_by_side(tried)),
                 ("Parts on which the runs differ", _differing(tried)))
-    body = tag("body", tag("header", tag("h1", name), tag("p", _sentence(tried), class_="lead")),
+    body = tag("body", tag("header", tag("h1", f"{name}: runs compared"), tag("p", _sentence(tried), class_="lead")),
                tag("main", *(tag("section", tag("h2", title), content) for title, content in sections)))  # fmt: skip
     return joined(Markup("<!doctype html>\n"), tag("html", head, "\n", body, lang="en"), "\n")
 

@@ -13,6 +13,7 @@ from pipeline.account.phases import SPLIT, split_of
 from pipeline.compare.runs import Tried
 from pipeline.compare.tables import reasons_of
 from pipeline.plots.axes import COLOURS, axes_of
+from pipeline.plots.cycle_split import COLOURS as STEP_COLOURS
 from pipeline.plots.written import PLAIN
 
 FloatArray = NDArray[np.float64]
@@ -42,21 +43,22 @@ def _picks(figure: Figure, tried: Sequence[Tried]) -> None:
 def _missed(figure: Figure, tried: Sequence[Tried]) -> None:
     rows = {reason: [one.figures["missed"].get(reason, 0) for one in tried] for reason in reasons_of(tried)}
     _bars(figure, tried, {reason.replace("_", " "): np.array(many, float) for reason, many in rows.items()},
-          "parts missed")
+          "parts missed", [(COLOURS[k % 6], HATCHES[k % 9]) for k in range(len(rows))])
 
 
 def _cycle(figure: Figure, tried: Sequence[Tried]) -> None:
     split = [split_of(one.run) for one in tried]
     means = np.array([one.mean(axis=0) if len(one) else np.zeros(len(SPLIT)) for one in split])
-    _bars(figure, tried, {name: means[:, k] for k, name in enumerate(SPLIT)}, "mean cycle, s")
+    looks = [(colour, HATCHES[k > 3]) for k, colour in enumerate(STEP_COLOURS)]
+    _bars(figure, tried, {name: means[:, k] for k, name in enumerate(SPLIT)}, "mean cycle, s", looks)
 
 
-def _bars(figure: Figure, tried: Sequence[Tried], amounts: dict[str, FloatArray], label: str) -> None:
-    """A stacked bar a run."""
+def _bars(figure: Figure, tried: Sequence[Tried], amounts: dict[str, FloatArray], label: str,
+          looks: Sequence[tuple[str, str]]) -> None:
+    """A stacked bar a run; looks: colour and hatch of each amount."""
     ax, at = axes_of(figure.subplots()), np.zeros(len(tried))
-    for k, (name, many) in enumerate(amounts.items()):
-        ax.barh(np.arange(len(tried)), many, left=at, label=name, color=COLOURS[k % 6], hatch=HATCHES[k % 9],
-                edgecolor="white", lw=0.5)
+    for (name, many), (colour, hatch) in zip(amounts.items(), looks, strict=True):
+        ax.barh(np.arange(len(tried)), many, left=at, label=name, color=colour, hatch=hatch, edgecolor="white", lw=0.5)
         at += many
     ax.set_yticks(np.arange(len(tried)), [_shown(one.label) for one in tried])
     ax.invert_yaxis()

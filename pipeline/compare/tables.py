@@ -40,6 +40,9 @@ def figure_rows(tried: Sequence[Tried]) -> list[list[str]]:
                for reason in reasons_of(tried)]  # fmt: skip
     decide = [["to decide, median and most, ms",
                *("{median:.1f}, {max:.1f}".format(**one.figures["decide_ms"]) for one in tried)]]  # fmt: skip
-    told = [[name, *("-" if one.figures[key] is None else format(one.figures[key], form) for one in tried)]
-            for key, name, form in SHOWN]  # fmt: skip
+    told = [[name, *(_shown(one.figures[key], form) for one in tried)] for key, name, form in SHOWN]
     return [*told[:3], *reasons, *told[3:], *decide]
+
+
+def _shown(figure: float | None, form: str) -> str:
+    return "-" if figure is None else format(figure, form).replace("%", " %")

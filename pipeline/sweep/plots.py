@@ -14,7 +14,7 @@ from pipeline.plots.written import PLAIN
 from pipeline.sweep.find import Answer
 from pipeline.sweep.kept import Outcome
 from pipeline.sweep.points import Row
-from pipeline.sweep.settings import Value
+from pipeline.sweep.settings import Value, with_unit
 from pipeline.sweep.tables import setting_names
 
 PANELS = (("picks_per_min", "picks a minute"), ("lost_share", "lost, % of those that can be had"))
@@ -58,7 +58,7 @@ def _answers(figure: Figure, answers: Sequence[tuple[Row, Answer]]) -> None:
             ax.axvline(answer.value, color=colour, lw=1.5)
             if np.isfinite([answer.low, answer.high]).all():
                 ax.axvspan(answer.low, answer.high, color=colour, alpha=0.15, lw=0)
-    ax.set(xlabel=setting + (", times what was recorded" if setting != "horizon" else ""), ylabel=label, ylim=(0, None))
+    ax.set(xlabel=with_unit(setting), ylabel=label, ylim=(0, None))
     ax.grid(alpha=0.25)
     ax.legend(frameon=False, fontsize="small", title="lines: answers, bands: 95 % intervals", title_fontsize="small")
 
@@ -92,7 +92,7 @@ def _curves(figure: Figure, done: Sequence[Outcome], name: str, by: str | None) 
             mean, least, most = np.array([_spread(_where(line, name, value), key) for value in values]).T
             ax.plot(values, mean, marker=MARKS[k % 6], color=COLOURS[k % 6], ms=4, lw=1.5, label=word)
             ax.fill_between(values, least, most, color=COLOURS[k % 6], alpha=0.15, lw=0)
-        ax.set(xlabel=_shown(name), ylabel=label)
+        ax.set(xlabel=_shown(with_unit(name)), ylabel=label)
         ax.set_ylim(bottom=0)
         ax.grid(alpha=0.25)
     if by:
@@ -118,10 +118,10 @@ def _misses(figure: Figure, done: Sequence[Outcome], name: str) -> None:
                hatch=hatches[k % 9], edgecolor="white", linewidth=0.5)
         bottom += share
     ax.set_xticks(np.arange(len(values)), [_shown(value) for value in values], rotation=45 if len(values) > 8 else 0)
-    ax.set(xlabel=_shown(name), ylabel="missed, % of the parts seen")
+    ax.set(xlabel=_shown(with_unit(name)), ylabel="missed, % of the parts seen")
     ax.grid(axis="y", alpha=0.25)
     if reasons:
-        ax.legend(frameon=False, fontsize="small")
+        figure.legend(loc="outside lower center", ncols=4, frameon=False, fontsize="small")
 
 
 def _share(outcomes: Sequence[Outcome], reason: str) -> float:
@@ -141,7 +141,7 @@ def _heat(figure: Figure, done: Sequence[Outcome], across: str, up: str) -> None
         turned = 45 if len(columns) > 8 else 0
         ax.set_xticks(range(len(columns)), [_shown(column) for column in columns], rotation=turned)
         ax.set_yticks(range(len(rows)), [_shown(row) for row in rows])
-        ax.set(xlabel=_shown(across), ylabel=_shown(up))
+        ax.set(xlabel=_shown(with_unit(across)), ylabel=_shown(with_unit(up)))
         if table.size <= 150:
             middle = (np.nanmin(table) + np.nanmax(table)) / 2
             for (i, j), value in np.ndenumerate(table):

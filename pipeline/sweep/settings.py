@@ -88,6 +88,14 @@ SEEN_BY = (".mm_per_count", ".heading_deg", ".counts_modulus", ".surface_mm", ".
            ".outline_mm", ".outline_radius_mm", ".calibration")  # what finding and following use
 
 
+def with_unit(name: str) -> str:
+    """A setting's name and what its values count."""
+    if name in RECORDING:
+        return f"{name}, times what was recorded"
+    first = CELL[name].means.replace(",", " ").split()[0] if name in CELL else ""
+    return f"{name}, {first}" if first in ("mm", "deg", "s", "factor", "parts") else name
+
+
 def check_name(name: str, place: str = COMMAND_LINE) -> None:
     """Raise InputFault for a name that is neither a setting nor a key of the cell file."""
     if name in CELL or name in RECORDING or "." in name:
