@@ -131,6 +131,29 @@ def test_settings_are_read_from_a_file(tmp_path: Path) -> None:
     assert rows[-1] == (("order", "arrival"), ("horizon", 3))
 
 
+def test_a_list_of_points_that_share_few_settings_is_drawn(tmp_path: Path) -> None:
+    """Settings that never meet leave gaps in curves and heat map; a point that fails stands in the table."""
+    folder, out = tmp_path / "small", tmp_path / "out"
+    stream(4, 80.0, 13.0).written(folder)
+    (tmp_path / "set.toml").write_text("""[set]
+belt-speed = [0.9, 1.2]
+motion.grasp_s = { from = 0.05, to = 0.09, steps = 2 }
+[[points]]
+order = "arrival"
+window-length = 300.0
+[[points]]
+order = "nearest"
+[[points]]
+motion.nothing_s = 1.0
+""")
+    told = sanderling("sweep", folder, "--cell", folder / "cell.toml", "--located", "located.csv", "--settings",
+                      tmp_path / "set.toml", "--jobs", 1, "--out", out)  # fmt: skip
+    assert told.status == 1
+    assert "failed: motion.nothing_s 1.0: " in told.err
+    assert len((out / "sweep.csv").read_text().splitlines()) == 8
+    assert {path.name for path in out.glob("*.png")} >= {"curve_belt-speed.png", "heat.png"}
+
+
 @pytest.mark.parametrize("text", ["", "[set]\nwrong = 1", "[set]\nhorizon = []", "[set]\nhorizon = [true]",
                                   "nonsense = 1", "[set]\nbelt-speed = [nan]", "[set]\nhorizon = {from = 1}",
                                   "not toml", "set = 3", "[[points]]\nhorizon = [[1]]", "points = [1]"])

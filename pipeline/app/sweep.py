@@ -19,6 +19,7 @@ if TYPE_CHECKING:
     from pipeline.sweep.points import Point, Row
 
 SHOWN = 40  # rows of a table on the terminal
+MOST_COLUMNS = 4  # for what differs from point to point
 SEEDS = 5  # draws of arrivals that a question is asked of, unless told otherwise
 
 
@@ -185,12 +186,14 @@ def _show(outcomes: list["Outcome"], names: list[str]) -> None:
                for name in setting_names(outcomes)),
              ("seed", [str(one.point.seed or "") for one in outcomes])]  # fmt: skip
     shown = [(name, column) for name, column in asked if len(set(column)) > 1]
-    rows = [(*(column[k] for _, column in shown), f"{one.figures['picks_per_min']:.1f}",
-             f"{one.figures['picked']} of {one.figures['parts_seen']}", f"{100 * one.figures['lost_share']:.1f} %",
+    if len(shown) > MOST_COLUMNS:
+        shown = [*(one for one in shown if one[0] == "recording"), ("with", [one.point.told() for one in outcomes])]
+    rows = [(*(column[k] for _, column in shown), f"{one.figures['picks_per_min']:.1f}", one.figures["picked"],
+             one.figures["parts_seen"], f"{100 * one.figures['lost_share']:.1f} %",
              f"{100 * one.figures['waiting']:.0f} %") for k, one in enumerate(outcomes) if not one.failed]  # fmt: skip
     if not rows:
         return
-    show_table("Sweep", (*(name for name, _ in shown), "picks/min", "picked", "lost", "waiting"), rows[:SHOWN])
+    show_table("Sweep", (*(name for name, _ in shown), "picks/min", "picked", "of", "lost", "waiting"), rows[:SHOWN])
     if len(rows) > SHOWN:
         print(f"and {len(rows) - SHOWN} more in sweep.csv")
 

@@ -89,6 +89,8 @@ def _curves(figure: Figure, done: Sequence[Outcome], name: str, by: str | None) 
     for ax, (key, label) in zip(figure.subplots(1, 2), PANELS, strict=True):
         for k, (word, line) in enumerate(_lines(done, by)):
             values = [value for value in _values(done, name) if _where(line, name, value)]
+            if not values:  # a list of points need not have every setting with every other
+                continue
             mean, least, most = np.array([_spread(_where(line, name, value), key) for value in values]).T
             ax.plot(values, mean, marker=MARKS[k % 6], color=COLOURS[k % 6], ms=4, lw=1.5, label=word)
             ax.fill_between(values, least, most, color=COLOURS[k % 6], alpha=0.15, lw=0)
