@@ -5,6 +5,7 @@ from pathlib import Path
 
 import numpy as np
 from matplotlib.figure import Figure
+from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 
 from cameras.faults import printable
@@ -63,6 +64,7 @@ def _bars(figure: Figure, tried: Sequence[Tried], amounts: dict[str, FloatArray]
     ax.set_yticks(np.arange(len(tried)), [_shown(one.label) for one in tried])
     ax.invert_yaxis()
     ax.set(xlabel=label)
+    ax.xaxis.set_major_locator(MaxNLocator(6, integer=label == "parts missed"))
     ax.grid(axis="x", alpha=0.25)
     if amounts:
         figure.legend(loc="outside lower center", ncols=4, frameon=False, fontsize="small")
