@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pipeline.legs import LegTimes, Nodes
-from pipeline.tray_order import Tray, TrayOrder, to_go, tray_order
+from pipeline.tray_order import Tray, TrayOrder, judged, time_left, to_go, tray_order
 
 if TYPE_CHECKING:
     from pipeline.order.lookahead import PickSequence
@@ -112,15 +112,15 @@ class Lookahead:
 
     Each leg's joint travel counts as TRAVEL_SHARE of its time when ends are compared: where the arm has to wait for a
     part anyway, or two sequences end together, the one that moves less is taken. A tray of more than
-    MOST_LOOKED_AT parts is ordered whole, for the earliest finish whatever the objective and the budget.
+    MOST_LOOKED_AT parts is ordered whole, once, within one budget.
     """
 
     def __init__(self, objective: str = "picks", budget_ms: float | None = None) -> None:
         from pipeline.order.lookahead import best_pick_sequence  # loaded before the clock starts, not for other rules
 
         self._best_sequence = best_pick_sequence
-        self._kept: tuple[Tray, TrayOrder] | None = None
-        self.by_travel = objective == "travel"
+        self._kept: tuple[Tray, TrayOrder, Tray] | None = None  # as it is, its order, and with what that counts as cost
+        self.by_travel, self.budget_ms = objective == "travel", budget_ms
         self.budget_states = MOST_STATES if budget_ms is None else max(int(budget_ms * STATES_PER_MS), 1)
 
     def choose(self, choice: Choice) -> Picked | None:
@@ -148,21 +148,29 @@ class Lookahead:
     def _on_tray(self, choice: Choice, tray: Tray, used: NDArray[np.int64]) -> Picked | None:
         """The next of the whole tray's order, which is kept as long as the tray is the same."""
         if self._kept is None or self._kept[0] is not tray:
-            self._kept = tray, tray_order(tray)
-        order, row_of = self._kept[1].order, {int(number): k for k, number in enumerate(choice.numbers)}
-        _, finish = choice.next_ones()
-        left = [part for part in order if int(tray.numbers[part]) in row_of]
+            found = tray_order(tray, self.by_travel, self.budget_ms)
+            self._kept = tray, found, judged(tray, found.time_share)
+        _, whole, cost = self._kept
+        row_of, (_, finish) = {int(number): k for k, number in enumerate(choice.numbers)}, choice.next_ones()
+        spent = np.where(np.isfinite(finish), finish - choice.now_s, np.inf)
+        if whole.time_share < 1.0:
+            spent = np.where(np.isfinite(finish), whole.time_share * np.nan_to_num(spent, posinf=0.0)
+                             + (1.0 - whole.time_share) * choice.travel()[0], np.inf)
+        left = [part for part in whole.order if int(tray.numbers[part]) in row_of]
         for k, part in enumerate(left):
             nodes = np.flatnonzero((choice.nodes.part == row_of[int(tray.numbers[part])]) & np.isfinite(finish))
             if len(nodes):
-                queue, filled = tray.queue[part], used.copy()
+                queue, filled, rest = tray.queue[part], used.copy(), np.array(left[:k] + left[k + 1 :], np.int64)
                 filled[queue] += 1
-                after = to_go(tray, np.array(left[:k] + left[k + 1 :], np.int64), filled)
+                after = to_go(cost, rest, filled)
                 ways = slice(*tray.slots[queue, filled[queue] - 1 : filled[queue] + 1])
                 same = (choice.nodes.drop[nodes][:, None] == tray.rests[ways][None]).all(axis=2)
-                ends = finish[nodes] + np.where(same, after[ways], np.inf).min(axis=1, initial=np.inf)
-                node = int(nodes[np.argmin(np.where(np.isfinite(ends), ends, FAR_S + finish[nodes]))])
-                return _of_tray(choice, node, float(ends.min()), tray, self._kept[1], row_of)
+                ends = spent[nodes, None] + np.where(same, after[ways], np.inf)
+                ends = np.where(np.isfinite(ends), ends, FAR_S + spent[nodes, None])
+                best, way = np.unravel_index(int(np.argmin(ends)), ends.shape)
+                rest = rest[np.isin(rest, whole.order[: whole.picked])]
+                ends_s = finish[nodes[best]] + time_left(tray, cost, rest, filled, int(way) + ways.start)
+                return _of_tray(choice, int(nodes[best]), float(ends_s), tray, whole, row_of)
         return None
 
 
@@ -170,7 +178,7 @@ def _of_tray(choice: Choice, node: int, ends_s: float, tray: Tray, order: TrayOr
     weight = sum(float(tray.weights[part]) for part in order.order[: order.picked] if int(tray.numbers[part]) in row_of)
     begun = len(row_of) == len(order.order)
     return Picked(node, (node,), weight, ends_s, float(choice.weights.sum()),
-                  choice.now_s + order.bound_s if begun and order.bound_s else -np.inf)
+                  choice.now_s + order.bound_s if begun and order.bound_s else -np.inf, order.steps)
 
 
 POLICIES = ("arrival", "nearest", "lookahead")

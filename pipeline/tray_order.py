@@ -6,12 +6,13 @@ the order: Viterbi 1967). The order starts from an assignment of parts to turns 
 and from the rule "nearest next", and is improved by moving and swapping parts until nothing gains.
 """
 
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from pipeline.tray_steps import HAIR, forward, improve, least_to_go, step
+from pipeline.tray_steps import HAIR, forward, improve, least_to_go, nearest_next
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -20,6 +21,9 @@ MOVED = 24  # turns that a part is moved by, at most
 PASSES = 12
 AGAIN = 400  # over the number of parts: how often the best order is shaken and improved anew
 SHAKEN = 8  # parts in a row
+STEPS_PER_MS = 4000  # turns gone through, so a budget in ms gives the same answer on any machine
+MOST_STEPS = 10**12
+TIME_SHARES = (0.0, 0.25, 0.5, 0.75)
 
 
 @dataclass(frozen=True)
@@ -30,7 +34,8 @@ class Tray:
     first way to stand at each queue's slots in turn, the last column the end. out (r+1, h): s from leaving a slot to
     contact, the last row from where the arm is. carry (h, r): s from contact to being free again; inf: not so.
     weights (n,). after (n, n): the column's part must go before the row's. left_s: until the tray is taken away.
-    grasp_s: dwell. rests (r, 4): joints at the slots.
+    grasp_s: dwell. rests (r, 4): joints at the slots. out_travel (r+1, h), carry_travel (h, r): joint travel of the
+    legs, each joint's in s at its full speed.
     """
 
     numbers: IntArray
@@ -44,42 +49,157 @@ class Tray:
     left_s: float
     grasp_s: float
     rests: FloatArray
+    out_travel: FloatArray
+    carry_travel: FloatArray
 
 
 @dataclass(frozen=True)
 class TrayOrder:
-    """order: parts in turn, first those that are picked. weight, finish_s: what they weigh, and how long they take.
-    bound_s: no order that picks all of them takes less (0 where some are left out)."""
+    """order: parts in turn, first those that are picked. weight: of these. ways (picked, 2): hold and way to stand at
+    the slot of each. finish_s, travel_s: how long they take, and their joint travel, s at full speed. bound_s,
+    travel_bound_s: no order that picks all of them takes, or travels, less (0 where some are left out, and where the
+    objective is the other). time_share: of the cost that the order was judged by, the rest is travel. steps: turns
+    gone through. cut: the budget ran out."""
 
     order: tuple[int, ...]
     picked: int
     weight: float
+    ways: tuple[tuple[int, int], ...]
     finish_s: float
+    travel_s: float
     bound_s: float
+    travel_bound_s: float
+    time_share: float
+    steps: int
+    cut: bool
+
+    @property
+    def gap(self) -> float:
+        """Share of the time (the travel, where that is the objective) by which the order may be too long, at most."""
+        value, bound = (self.travel_s, self.travel_bound_s) if self.travel_bound_s else (self.finish_s, self.bound_s)
+        return max(0.0, 1.0 - bound / value) if value > 0 else 0.0
 
 
-def tray_order(tray: Tray) -> TrayOrder:
-    """The best order found. Same input, same answer."""
-    orders = [_nearest_next(tray)]
+@dataclass(frozen=True)
+class _Found:
+    """An order (n,), the weight it picks and what it costs, and turns gone through to find it."""
+
+    order: IntArray
+    weight: float
+    cost: float
+    steps: int
+
+
+def tray_order(tray: Tray, by_travel: bool = False, budget_ms: float | None = None) -> TrayOrder:
+    """The best order found: most weight, then the earliest finish, or the least joint travel. Same input, same answer.
+
+    Where the tray is taken away before all is picked, travel counts as much as it can without a part being lost.
+    budget_ms bounds the turns gone through, STEPS_PER_MS of them in a ms, not the clock.
+    """
+    budget = MOST_STEPS if budget_ms is None else int(budget_ms * STEPS_PER_MS)
+    if not by_travel:
+        return _told(tray, _sought(tray, budget), 1.0, budget)
+    if np.isinf(tray.left_s):
+        return _told(tray, _sought(judged(tray, 0.0), budget), 0.0, budget)
+    soonest, steps = _sought(tray, budget // 2), 0
+    for share in TIME_SHARES:
+        found = _sought(judged(tray, share), budget // (2 * len(TIME_SHARES)))
+        steps += found.steps
+        told = _told(tray, replace(found, steps=soonest.steps + steps), share, budget)
+        if told.weight >= soonest.weight - HAIR:
+            return told
+    return _told(tray, replace(soonest, steps=soonest.steps + steps), 1.0, budget)
+
+
+def judged(tray: Tray, time_share: float) -> Tray:
+    """The tray with costs instead of times: time by its share, the rest travel; and never taken away, unless time is
+    all that counts."""
+    if time_share == 1.0:
+        return tray
+    out, carry = (np.where(np.isfinite(time), time_share * np.where(np.isfinite(time), time, 0.0)
+                           + (1.0 - time_share) * travel, np.inf)
+                  for time, travel in ((tray.out, tray.out_travel), (tray.carry, tray.carry_travel)))
+    return replace(tray, out=out, carry=carry, left_s=np.inf)
+
+
+def _sought(tray: Tray, budget: int) -> _Found:
+    """The order that costs least, of those found with about so many turns gone through."""
+    orders = [nearest_next(*_arrays(tray))]
     orders.append(_assigned(tray, orders[0]))
-    best, worth = orders[0], (-1.0, np.inf)
+    best, worth, spent = orders[0], (-1.0, np.inf), 0
     random = np.random.default_rng(0)
     for k in range(len(orders) + AGAIN // max(len(orders[0]), 1)):
         order = orders[k] if k < len(orders) else _shaken(best, random)
-        found = improve(*_arrays(tray), order, PASSES, MOVED)
-        if _better(found, worth):
-            best, worth = order.copy(), found
-    done = _follow(tray, best)
-    picked = [int(part) for part in best if done[part]]
-    late = [int(part) for part in best if not done[part]]
-    whole = not late
-    return TrayOrder((*picked, *late), len(picked), worth[0], worth[1], _bound(tray, best) if whole else 0.0)
+        weight, cost, steps = improve(*_arrays(tray), order, PASSES, MOVED, budget - spent)
+        spent += steps
+        if _better((weight, cost), worth):
+            best, worth = order.copy(), (weight, cost)
+        if spent >= budget:
+            break
+    return _Found(best, *worth, spent)
 
 
-def to_go(tray: Tray, order: IntArray, used: IntArray) -> FloatArray:
-    """(r+1,) s that an order takes from each way to stand on, when `used` (q,) slots of each queue are filled."""
-    rest: FloatArray = least_to_go(tray.begins, tray.queue, tray.slots, tray.out, tray.carry, order, used)[0]
-    return rest
+def _told(tray: Tray, found: _Found, time_share: float, budget: int) -> TrayOrder:
+    """What is known of an order: which parts it picks in time, how, and how long that takes."""
+    cost = judged(tray, time_share)
+    done = _follow(cost, found.order)
+    picked = found.order[done[found.order]]
+    ways = walked(cost, picked, np.zeros(len(tray.slots), np.int64), len(tray.out) - 1)
+    contact_s, free_s = along(tray.out, tray.carry, ways)
+    if len(picked) and (contact_s > tray.left_s - tray.grasp_s + HAIR).any():  # judged by travel, some come too late
+        return TrayOrder((), 0, -1.0, (), 0.0, 0.0, 0.0, 0.0, time_share, found.steps, cut=True)
+    late = found.order[~done[found.order]]
+    bound = _bound(cost, found.order) if not len(late) and len(picked) else 0.0
+    return TrayOrder(
+        (*picked.tolist(), *late.tolist()), len(picked), float(tray.weights[picked].sum()), ways,
+        float(free_s[-1]) if len(ways) else 0.0, travel_of(tray, ways),
+        _bound(tray, found.order) if bound and time_share > 0 else 0.0, bound if time_share == 0 else 0.0, time_share,
+        found.steps, found.steps >= budget)
+
+
+def walked(cost: Tray, order: IntArray, used: IntArray, at: int) -> tuple[tuple[int, int], ...]:
+    """Hold and way to stand at the slot of each part of an order whose parts can all be had, from a way to stand `at`
+    on, when `used` (q,) slots of each queue are filled: those that cost least."""
+    rest, counts, ways = to_go(cost, order, used, all_turns=True), used.copy(), []
+    for k, part in enumerate(order):
+        q = cost.queue[part]
+        to = np.arange(cost.slots[q, counts[q]], cost.slots[q, counts[q] + 1])
+        hold = np.arange(cost.begins[part], cost.begins[part + 1])
+        total = cost.out[at, hold][:, None] + cost.carry[np.ix_(hold, to)] + rest[k + 1, to]
+        h, r = np.unravel_index(int(np.argmin(total)), total.shape)
+        at, counts[q] = int(to[r]), counts[q] + 1
+        ways.append((int(hold[h]), at))
+    return tuple(ways)
+
+
+def along(out: FloatArray, carry: FloatArray, ways: Sequence[tuple[int, int]], start: int = -1) -> tuple[
+        FloatArray, FloatArray]:
+    """When each part is gripped, and when the arm is free again, from leaving a way to stand on."""
+    holds, rests = np.array(ways, np.int64).reshape(-1, 2).T
+    before = np.concatenate([[start], rests])[: len(holds)]
+    legs = np.stack([out[before, holds], carry[holds, rests]], axis=1)
+    times = np.cumsum(legs.ravel()).reshape(-1, 2)
+    return times[:, 0], times[:, 1]
+
+
+def time_left(tray: Tray, cost: Tray, order: IntArray, used: IntArray, at: int) -> float:
+    """S that an order of parts which can all be had takes from a way to stand `at` on, by the ways that cost least."""
+    if cost is tray:
+        return float(to_go(cost, order, used)[at])
+    ways = walked(cost, order, used, at)
+    return float(along(tray.out, tray.carry, ways, at)[1][-1]) if ways else 0.0
+
+
+def travel_of(tray: Tray, ways: Sequence[tuple[int, int]]) -> float:
+    """Joint travel along an order from where the arm is."""
+    return float(along(tray.out_travel, tray.carry_travel, ways)[1][-1]) if len(ways) else 0.0
+
+
+def to_go(tray: Tray, order: IntArray, used: IntArray, all_turns: bool = False) -> FloatArray:
+    """(r+1,) s that an order takes from each way to stand on, when `used` (q,) slots of each queue are filled; with
+    `all_turns` (n+1, r+1), from before each turn."""
+    rest: FloatArray = least_to_go(tray.begins, tray.queue, tray.slots, tray.out, tray.carry, order, used)
+    return rest if all_turns else rest[0]
 
 
 def _arrays(
@@ -118,25 +238,6 @@ def _states(tray: Tray) -> tuple[FloatArray, IntArray, NDArray[np.bool_], IntArr
     reach, at = np.full((n + 1, rests), np.inf), np.zeros((n + 1, 2), np.int64)
     reach[0, -1], at[0] = 0.0, (rests - 1, rests)
     return reach, at, np.zeros((n + 1, n), np.bool_), np.zeros((n + 1, len(tray.slots)), np.int64), np.zeros(n + 1)
-
-
-def _nearest_next(tray: Tray) -> IntArray:
-    """Always the part that is set down soonest; what can't be had last."""
-    n = len(tray.queue)
-    reach, at, done, used, _ = _states(tray)
-    now, here, flags, counts = reach[0], at[0], done[0], used[0]
-    arrays, order = _arrays(tray), list[int]()
-    for _ in range(n):
-        steps = []
-        for part in range(n):
-            ahead, to, flag, count = now.copy(), here.copy(), flags.copy(), counts.copy()
-            if step(*arrays, part, now, here, flag, count, ahead, to):
-                steps.append((float(ahead[to[0] : to[1]].min()), part, (ahead, to, flag, count)))
-        if not steps:
-            break
-        _, part, (now, here, flags, counts) = min(steps, key=lambda step: step[:2])
-        order.append(part)
-    return np.array([*order, *(part for part in range(n) if part not in order)], np.int64)
 
 
 def _turn_costs(tray: Tray, order: IntArray) -> tuple[FloatArray, FloatArray, IntArray]:

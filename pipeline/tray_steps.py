@@ -10,6 +10,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
 HAIR = 1e-9
 SAME_S = 1e-9
 SCENE = "int64[::1], int64[::1], int64[:, ::1], float64[:, ::1], float64[:, ::1], float64[::1], int64[:, ::1], float64"
@@ -95,11 +96,39 @@ def least_to_go(begins, queue, slots, out, carry, order, used) -> FloatArray:  #
     return togo
 
 
-@njit(f"UniTuple(float64, 2)({SCENE}, int64[::1], int64, int64)", cache=True, nogil=True)
+@njit(f"int64[::1]({SCENE})", cache=True, nogil=True)
+def nearest_next(begins, queue, slots, out, carry, weights, after, due) -> IntArray:  # type: ignore[no-untyped-def]
+    """An order (n,): always the part that is set down soonest; what can't be had last."""
+    n, rests = len(queue), out.shape[0]
+    order, chosen = np.empty(n, np.int64), np.zeros(n, np.bool_)
+    done, used, at = np.zeros(n, np.bool_), np.zeros(len(slots), np.int64), np.array([rests - 1, rests])
+    reach, ahead, to = np.full(rests, np.inf), np.empty(rests), np.empty(2, np.int64)
+    reach[rests - 1] = 0.0
+    for k in range(n):
+        least, next_part = np.inf, -1
+        for part in range(n):
+            if not chosen[part] and step(begins, queue, slots, out, carry, weights, after, due, part, reach, at, done,
+                                         used, ahead, to):
+                done[part] = False
+                used[queue[part]] -= 1
+                if ahead[to[0] : to[1]].min() < least:
+                    least, next_part = ahead[to[0] : to[1]].min(), part
+        if next_part < 0:
+            order[k:] = np.flatnonzero(~chosen)
+            break
+        step(begins, queue, slots, out, carry, weights, after, due, next_part, reach, at, done, used, ahead, to)
+        reach[to[0] : to[1]] = ahead[to[0] : to[1]]
+        at[:] = to
+        order[k], chosen[next_part] = next_part, True
+    return order
+
+
+@njit(f"Tuple((float64, float64, int64))({SCENE}, int64[::1], int64, int64, int64)", cache=True, nogil=True)
 def improve(  # type: ignore[no-untyped-def]
-    begins, queue, slots, out, carry, weights, after, due, order, passes, moved,
-) -> tuple[float, float]:
-    """Move parts up to `moved` turns, and swap any two, as long as that gains, in order (n,) itself. Weight, finish."""
+    begins, queue, slots, out, carry, weights, after, due, order, passes, moved, most,
+) -> tuple[float, float, int]:
+    """Move parts up to `moved` turns, and swap any two, as long as that gains and no more than about `most` turns have
+    been gone through, in order (n,) itself. Weight, finish, turns gone through."""
     n, rests = len(order), out.shape[0]
     reach, at = np.full((n + 1, rests), np.inf), np.zeros((n + 1, 2), np.int64)
     done, used, weight = np.zeros((n + 1, n), np.bool_), np.zeros((n + 1, len(slots)), np.int64), np.zeros(n + 1)
@@ -108,9 +137,12 @@ def improve(  # type: ignore[no-untyped-def]
     here, there = np.empty(2, np.int64), np.empty(2, np.int64)
     best = forward(begins, queue, slots, out, carry, weights, after, due, order, 0, reach, at, done, used, weight)
     togo, whole = least_to_go(begins, queue, slots, out, carry, order, used[0]), done[n].all()
+    spent = 2 * n
     for _ in range(passes):
         before = best
         for i in range(n):
+            if spent >= most:
+                break
             for way in range(2):  # 0: swap i and j; 1: move one of the two beyond the other
                 for j in range(i + 1, n if way == 0 else min(n, i + moved)):
                     for back in range(1 + way):
@@ -127,6 +159,7 @@ def improve(  # type: ignore[no-untyped-def]
                             able = True
                             k = i
                             while k <= j:
+                                spent += 1
                                 if not step(begins, queue, slots, out, carry, weights, after, due, trial[k], one, here,
                                              flags, counts, other, there):
                                     able = False
@@ -152,6 +185,7 @@ def improve(  # type: ignore[no-untyped-def]
                         order[i : j + 1] = trial[i : j + 1]
                         found = forward(begins, queue, slots, out, carry, weights, after, due, order, i, reach, at,
                                         done, used, weight)
+                        spent += 2 * (n - i)
                         if found[0] > best[0] + HAIR or (found[0] > best[0] - HAIR and found[1] < best[1] - HAIR):
                             best = found
                             togo, whole = least_to_go(begins, queue, slots, out, carry, order, used[0]), done[n].all()
@@ -159,6 +193,6 @@ def improve(  # type: ignore[no-untyped-def]
                             order[i : j + 1] = kept
                             forward(begins, queue, slots, out, carry, weights, after, due, order, i, reach, at, done,
                                     used, weight)
-        if best == before:
+        if best == before or spent >= most:
             break
-    return best
+    return best[0], best[1], spent

@@ -8,6 +8,7 @@ from numpy.typing import NDArray
 from pipeline.candidate import Candidate
 from pipeline.grasp import Grasping
 from pipeline.legs import Legs
+from pipeline.motion.across import TURNING
 from pipeline.places import Filling
 from pipeline.policy import MOST_LOOKED_AT
 from pipeline.tray_order import Tray
@@ -49,14 +50,22 @@ class Trays:
         joints = np.array([candidates[k].holds.joints[h, 0] for k, h in holds])
         heights = np.array([candidates[k].holds.holds[h].z_mm for k, h in holds])
         rests, slots, suits = self._rests(candidates, holds, joints, filling, len(able))
-        out, carry = self.legs.still(np.concatenate([rests, start[None]]), joints, heights)
+        ends = np.concatenate([rests, start[None]])
+        out, carry = self.legs.still(ends, joints, heights)
+        travel = self._travel(ends, joints)
         behind = np.array([[int(blocked[k]) >> min(int(other), 63) & 1 for other in able] for k in able], bool)
         return Tray(
             np.array([candidates[k].part.number for k in able]),
             np.searchsorted(owner, np.append(able, len(candidates))),
             np.array([self._places.index(candidates[k].place) for k in able]), slots, out,
             np.ascontiguousarray(np.where(suits, carry[:, :-1], np.inf)), weights[able], behind,
-            float(self.until_s[candidates[able[0]].row] - now), self.legs.mover.motion.grasp_s, rests)  # fmt: skip
+            float(self.until_s[candidates[able[0]].row] - now), self.legs.mover.motion.grasp_s, rests,
+            travel, np.ascontiguousarray(travel[:-1].T))  # fmt: skip
+
+    def _travel(self, ends: FloatArray, joints: FloatArray) -> FloatArray:
+        """(r + 1, h) joint travel between ways to stand and holds, each joint's in s at its full speed."""
+        turned = np.abs(ends[:, None, TURNING] - joints[None][:, :, TURNING]) / self.grasping.arm.limits.speed[TURNING]
+        return np.ascontiguousarray(turned.sum(axis=2))
 
     def _rests(self, candidates: Sequence[Candidate], holds: Sequence[tuple[int, int]], joints: FloatArray,
                filling: Filling, number: int) -> tuple[FloatArray, IntArray, NDArray[np.bool_]]:
