@@ -67,18 +67,21 @@ class Above {
   }
 
   grounds() {
-    const { context, to, scale } = this;
+    const { context, to, scale } = this, named = [];
     for (const place of scene.places) {
       context.strokeStyle = inks.soft;
       context.lineWidth = 1;
-      let [sumX, least] = [0, Infinity];
+      let [sumX, least, most] = [0, Infinity, -Infinity];
       for (let i = 0; i < place.slots.length; i += 2) {
         const [x, y] = to([place.slots[i], place.slots[i + 1]]);
         context.strokeRect(x - 5.5 * Math.max(scale, 0.6), y - 5.5 * Math.max(scale, 0.6), 11 * Math.max(scale, 0.6), 11 * Math.max(scale, 0.6));
         sumX += x;
-        least = Math.min(least, y);
+        [least, most] = [Math.min(least, y), Math.max(most, y)];
       }
-      lettered(context, place.name, (2 * sumX) / place.slots.length, least - 22, inks.soft);
+      const x = (2 * sumX) / place.slots.length, half = context.measureText(place.name).width / 2;
+      const taken = named.some(([at, y, wide]) => Math.abs(at - x) < wide + half && Math.abs(y - least + 22) < 14);
+      named.push([x, taken ? most + 22 : least - 22, half]);
+      lettered(context, place.name, ...named.at(-1).slice(0, 2), inks.soft);
     }
     const hatch = hatching(context, inks.alarm);
     for (const keepout of scene.keepouts) {

@@ -86,7 +86,7 @@ class Desk {
       const part = scene.parts[scene.picks[pick].part], name = `part ${part.no} (${kindOf(part)})`;
       const place = `${scene.places[scene.picks[pick].place].name} ${scene.picks[pick].slot + 1}`;
       if (phase === "waiting") told = this.t >= scene.picks[pick].decided ? `Waits for ${name}.` : "Waits.";
-      else told = [`Lifts off, ${name} is next.`, `Goes across to ${name}.`, `Goes down on ${name}.`, `Grips ${name}, moving with it.`,
+      else told = [`Lifts off, ${name} is next.`, `Goes across to ${name}.`, `Goes down on ${name}.`, `Grips ${name}${travel ? ", moving with it" : ""}.`,
         `Lifts ${name}.`, `Carries ${name} across to ${place}.`, `Sets ${name} down in ${place}.`, `Lets go of ${name}.`][step];
       told = `Pick ${pick + 1} of ${scene.picks.length}. ${told}`;
     }

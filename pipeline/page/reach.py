@@ -17,6 +17,7 @@ ARROWS = ("M6 0L-4.5 -5.5V5.5Z", "M-6 0L4.5 -5.5V5.5Z")
 GRIPPED = ("not at all", "right", "left", "either")  # by elbow: 1 right, 2 left, 3 both
 MARGIN_MM = 25.0
 TALLEST = 620.0
+LETTER = 6.0  # about as wide as one is
 SHADES = 4  # of the share of angles
 
 
@@ -91,12 +92,16 @@ class Sheet:
         x, y = self.at(setting.mover.arm.base_mm[:2]).tolist()
         drawn = [tag("path", tag("title", "base of the arm"), d=f"M{x - 8:.1f} {y:.1f}h16M{x:.1f} {y - 8:.1f}v16",
                      class_="base")]
+        named: list[tuple[float, float, float]] = []
         for place in setting.grasping.places.values():
             slots = self.at(place.slots_mm[:400, :2])
             drawn.append(tag("path", d="".join(f"M{a - 3:.1f} {b - 3:.1f}h6v6h-6z" for a, b in slots.tolist()),
                              class_="slot"))  # fmt: skip
-            drawn.append(tag("text", place.name, x=round(float(slots[:, 0].mean()), 1),
-                             y=round(float(slots[:, 1].min()) - 8, 1), class_="middle"))
+            x, y, half = float(slots[:, 0].mean()), float(slots[:, 1].min()) - 8, LETTER * len(place.name) / 2
+            if any(abs(at - x) < wide + half and abs(height - y) < 12 for at, height, wide in named):
+                y = float(slots[:, 1].max()) + 16
+            named.append((x, y, half))
+            drawn.append(tag("text", place.name, x=round(x, 1), y=round(y, 1), class_="middle"))
         drawn += [tag("path", tag("title", keepout.name or "keep-out"), d=self.path(np.array(keepout.polygon_mm)),
                       class_="keepout") for keepout in setting.cell.keepouts]  # fmt: skip
         return joined(*drawn)

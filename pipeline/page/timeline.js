@@ -32,7 +32,7 @@ class Timeline {
   }
 
   scaleMarks(context, start, end, height) {
-    const step = [0.5, 1, 2, 5, 10, 20, 30, 60, 120, 300, 600, 1800, 3600].find((s) => (end - start) / s <= 12) ?? 7200;
+    const step = [0.5, 1, 2, 5, 10, 20, 30, 60, 120, 300, 600, 1800, 3600].find((s) => (end - start) / s <= Math.min(this.canvas.clientWidth / 56, 12)) ?? 7200;
     context.strokeStyle = inks.line;
     context.lineWidth = 1;
     for (let at = Math.ceil(start / step) * step; at <= end; at += step) {
@@ -57,7 +57,8 @@ class Timeline {
         context.lineTo(x + wide, 36.5);
         context.stroke();
         context.setLineDash([]);
-        if (wide > 60) lettered(context, "waiting", x + wide / 2, 36, inks.soft);
+        const [left, right] = [Math.max(x, 0), Math.min(x + wide, this.canvas.clientWidth)];
+        if (right - left > 60) lettered(context, "waiting", (left + right) / 2, 36, inks.soft);
         return;
       }
       context.fillStyle = inks[`phase-${name}`];
