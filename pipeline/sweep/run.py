@@ -116,7 +116,8 @@ def _cluster(address: str):  # type: ignore[no-untyped-def]
     try:
         from distributed import Client  # type: ignore[import-not-found,unused-ignore]
     except ImportError:
-        raise InputFault("--dask", "", "needs dask.distributed", "run `python -m pip install "dask[distributed]"`") from None
+        raise InputFault("--dask", "", "needs dask.distributed",
+                         "run `python -m pip install dask[distributed]`") from None
     try:
         return Client(address, timeout=10, set_as_default=True)
     except (OSError, ValueError, TimeoutError) as error:
