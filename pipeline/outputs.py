@@ -10,9 +10,10 @@ from cameras.written import written_whole
 from pipeline.belt import Belt
 from pipeline.budget import budgets_of, maps_at_hand
 from pipeline.decision import Decision, told
+from pipeline.doubts import doubts_of
 from pipeline.finding import write_overlays
 from pipeline.page import write_page
-from pipeline.plan_graph import write_graph
+from pipeline.plan_graph import decision_graph, write_graph
 from pipeline.replay import Run, Setting
 from pipeline.study import Seen
 from pipeline.tables import summary, write_parts, write_picks, write_summary, write_trajectory
@@ -42,12 +43,16 @@ def write_decision(out: Path, decision: Decision) -> None:
     """Write a decision: order.json, the graph behind it as order.graphml, and order.png, drawn over the belt."""
     from pipeline.plots.decision import plot_decision
     from pipeline.plots.written import saved
+    from pipeline.whole_tray import WholeTray, told_tray, tray_graph
 
+    if isinstance(decision, WholeTray):
+        plain, graph = told_tray(decision), tray_graph(decision)
+    else:
+        plain, graph = told(decision), decision_graph(decision)
     with written_whole(out / "order.json") as part:
-        text = json.dumps(told(decision), indent=1, ensure_ascii=False, allow_nan=False)
-        part.write_text(text + "\n", encoding="utf-8")
+        part.write_text(json.dumps(plain, indent=1, ensure_ascii=False, allow_nan=False) + "\n", encoding="utf-8")
     with written_whole(out / "order.graphml") as part:
-        write_graph(part, decision)
+        write_graph(part, graph)
     saved(plot_decision(decision), out / "order.png")
 
 
@@ -64,17 +69,8 @@ def more_figures(seen: Seen, run: Run) -> dict[str, Any]:
         "cell": seen.cell.name,
         "cycle_s": {name: round(float(np.mean(times)), 4) if times else 0.0 for name, times in split.items()},
         "error_budget": _error_budget(seen),
-        "drift": [*_standing(seen), *(drift.findings if drift is not None else [])],
+        "drift": [*doubts_of(seen), *(drift.findings if drift is not None else [])],
     }
-
-
-def _standing(seen: Seen) -> list[str]:
-    """A doubt about counts that never change."""
-    counts = seen.recording.counts
-    if seen.cell.belt is None or len(counts) < 2 or np.ptp(counts) > 0:
-        return []
-    return [f"the counts stay at {counts[0]:g} over all {len(counts)} frames: the belt is taken to stand still. If it "
-            "moved, write its encoder's counts into frames.csv"]
 
 
 def _error_budget(seen: Seen) -> dict[str, Any]:

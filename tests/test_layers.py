@@ -39,9 +39,9 @@ pipeline.scene
 pipeline.replay
 pipeline.trajectory pipeline.study pipeline.remedy
 pipeline.fit pipeline.trade_cycle pipeline.reach pipeline.score pipeline.budget
-pipeline.sighted pipeline.reach_plot pipeline.reach_suggest pipeline.reach_picks pipeline.error_plot
+pipeline.sighted pipeline.doubts pipeline.reach_plot pipeline.reach_suggest pipeline.reach_picks pipeline.error_plot
 pipeline.account pipeline.check pipeline.tables pipeline.decision
-pipeline.plan_graph pipeline.page pipeline.plots
+pipeline.plan_graph pipeline.page pipeline.plots pipeline.whole_tray
 pipeline.outputs pipeline.compare pipeline.sweep pipeline.export pipeline.new_cell
 pipeline.app
 """

@@ -8,7 +8,7 @@ import cv2
 import numpy as np
 import pytest
 from some_arms import written_cell
-from some_streams import Laid, belt, sanderling
+from some_streams import Laid, belt, sanderling, scattered
 
 
 @pytest.fixture
@@ -76,6 +76,19 @@ def test_counts_that_never_change_are_doubted(stream: Path) -> None:
     assert told in ended.out
     assert told in json.loads((stream / "out/summary.json").read_text())["drift"][0]
     assert told in (stream / "out/report.html").read_text()
+
+
+@pytest.mark.parametrize(("heading", "doubted"), [(90.0, False), (270.0, True), (0.0, True)])
+def test_a_belt_said_to_run_another_way_is_doubted(tmp_path: Path, heading: float, doubted: bool) -> None:
+    """Parts are then not seen again where they should be; as it runs, nothing is doubted."""
+    folder = belt(scattered(2, 12, 60.0), 16.0).written(tmp_path / "stream")
+    text = (folder / "cell.toml").read_text()
+    (folder / "cell.toml").write_text(text.replace('"heading_deg" = 90.0', f'"heading_deg" = {heading}'))
+    assert f'"heading_deg" = {heading}' in (folder / "cell.toml").read_text()
+    ended = sanderling("replay", folder, "--cell", folder / "cell.toml", "--located", folder / "located.csv", "--out",
+                       folder / "out")  # fmt: skip
+    assert ended.status == 0, ended.err
+    assert ("recheck" in ended.out) == doubted
 
 
 def test_board_images_may_be_given_by_their_folder(tmp_path: Path) -> None:
