@@ -52,6 +52,11 @@ class Decision:
         bound = self.picked.weight_bound
         return 1 - self.chosen.weight / bound if np.isfinite(bound) and bound > 0 else 0.0
 
+    @property
+    def gap_of(self) -> str:
+        """What the gap is a share of."""
+        return "weight"
+
     def part_no(self, node: int) -> int:
         """Number of the part that a node grasps."""
         return self.scene.grasp(node)[0].part.number
@@ -67,13 +72,11 @@ class Decision:
 
 
 def first_decision(setting: Setting, policy: Policy, horizon: int, run: Run) -> Decision | None:
-    """The decision behind a run's first pick; None where nothing was picked, and for a whole tray of many parts."""
+    """The decision behind a run's first pick; None where nothing was picked, and for a whole tray of many parts
+    (see `whole_tray`)."""
     if not run.picks or run.picks[0].looked_at > MOST_LOOKED_AT:
         return None
-    first = run.picks[0]
-    watch = Watch(setting.cell, setting.recording, setting.belt, setting.parts)
-    builder = SceneBuilder(setting.cell, watch, setting.grasping, setting.legs, setting.outlines, setting.least_score)
-    filling = Filling(tuple(setting.grasping.places.values()))
+    first, builder, filling = run.picks[0], builder_of(setting), Filling(tuple(setting.grasping.places.values()))
     for rule in (policy, Arrival()):  # a run may have fallen back to arrival
         banned: set[tuple[int, int]] = set()
         for _ in range(MOST_TRIES):
@@ -85,6 +88,12 @@ def first_decision(setting: Setting, policy: Policy, horizon: int, run: Run) -> 
                 return _explained(setting, scene, setting.mover.arm.forward(first.cycle.start_joints)[:2], picked)
             banned |= scene.alike(picked.node)
     return None
+
+
+def builder_of(setting: Setting) -> SceneBuilder:
+    """What builds the scenes of a replay of its own."""
+    watch = Watch(setting.cell, setting.recording, setting.belt, setting.parts)
+    return SceneBuilder(setting.cell, watch, setting.grasping, setting.legs, setting.outlines, setting.least_score)
 
 
 def _led_to(scene: Scene, picked: Picked, pick: Pick) -> bool:

@@ -34,9 +34,9 @@ def decision_graph(decision: Decision) -> "nx.DiGraph[str]":
     return graph
 
 
-def write_graph(path: Path, decision: Decision) -> None:
-    """The graph as a GraphML file."""
-    nx.write_graphml(decision_graph(decision), path, encoding="utf-8", named_key_ids=True)
+def write_graph(path: Path, graph: "nx.DiGraph[str]") -> None:
+    """A graph as a GraphML file."""
+    nx.write_graphml(graph, path, encoding="utf-8", named_key_ids=True)
 
 
 def _join(graph: "nx.DiGraph[str]", decision: Decision) -> None:

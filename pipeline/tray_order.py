@@ -139,22 +139,25 @@ def _sought(tray: Tray, budget: int) -> _Found:
     return _Found(best, *worth, spent)
 
 
-def _told(tray: Tray, found: _Found, time_share: float, budget: int) -> TrayOrder:
-    """What is known of an order: which parts it picks in time, how, and how long that takes."""
+def followed(tray: Tray, order: IntArray, time_share: float = 1.0, bounded: bool = True) -> TrayOrder:
+    """What is known of an order (n,): which parts it picks in time, how, how long that takes, and its bounds."""
     cost = judged(tray, time_share)
-    done = _follow(cost, found.order)
-    picked = found.order[done[found.order]]
+    done = _follow(cost, order)
+    picked, late = order[done[order]], order[~done[order]]
     ways = walked(cost, picked, np.zeros(len(tray.slots), np.int64), len(tray.out) - 1)
     contact_s, free_s = along(tray.out, tray.carry, ways)
-    if len(picked) and (contact_s > tray.left_s - tray.grasp_s + HAIR).any():  # judged by travel, some come too late
-        return TrayOrder((), 0, -1.0, (), 0.0, 0.0, 0.0, 0.0, time_share, found.steps, cut=True)
-    late = found.order[~done[found.order]]
-    bound = _bound(cost, found.order) if not len(late) and len(picked) else 0.0
-    return TrayOrder(
+    bound = bounded and len(picked) > 0 and not len(late)
+    told = TrayOrder(
         (*picked.tolist(), *late.tolist()), len(picked), float(tray.weights[picked].sum()), ways,
-        float(free_s[-1]) if len(ways) else 0.0, travel_of(tray, ways),
-        _bound(tray, found.order) if bound and time_share > 0 else 0.0, bound if time_share == 0 else 0.0, time_share,
-        found.steps, found.steps >= budget)
+        float(free_s[-1]) if ways else 0.0, travel_of(tray, ways),
+        _bound(tray, order) if bound and time_share > 0 else 0.0,
+        _bound(cost, order) if bound and time_share == 0 else 0.0, time_share, 0, cut=False)
+    in_time = (contact_s <= tray.left_s - tray.grasp_s + HAIR).all()
+    return told if in_time else replace(told, weight=-1.0)  # judged by travel, some come too late
+
+
+def _told(tray: Tray, found: _Found, time_share: float, budget: int) -> TrayOrder:
+    return replace(followed(tray, found.order, time_share), steps=found.steps, cut=found.steps >= budget)
 
 
 def walked(cost: Tray, order: IntArray, used: IntArray, at: int) -> tuple[tuple[int, int], ...]:

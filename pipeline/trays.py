@@ -36,7 +36,7 @@ class Trays:
         numbers = np.array([candidates[k].part.number for k in able])
         if self._tray is None or not np.isin(numbers, self._tray.numbers).all():
             self._tray = None
-            if len(able) <= MOST_LOOKED_AT:
+            if len(candidates) <= MOST_LOOKED_AT:
                 return None
             self._places = tuple(sorted({candidates[k].place for k in able}))
             self._filled = np.array([filling.filled(place) for place in self._places])

@@ -45,7 +45,7 @@ def crowd() -> Decision:
 
 def test_edges_cost_what_the_policy_saw(crowd: Decision, tmp_path: Path) -> None:
     """Read back from the file: an edge from the start for every grasp that can be next, with its time and travel."""
-    write_graph(tmp_path / "order.graphml", crowd)
+    write_graph(tmp_path / "order.graphml", decision_graph(crowd))
     graph = nx.read_graphml(tmp_path / "order.graphml")
     choice = crowd.scene.choice
     _, finish = choice.next_ones()

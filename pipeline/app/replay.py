@@ -14,6 +14,9 @@ if TYPE_CHECKING:
     from pipeline.study import Seen
 
 
+TOLD = 8  # parts of an order told on one line
+
+
 def register(app: typer.Typer) -> None:
     """Add this module's commands."""
     app.command()(replay)
@@ -78,13 +81,15 @@ def plan(
     from pipeline.outputs import write_decision, write_run
     from pipeline.remedy import with_remedies
     from pipeline.study import one_frame, policy_of, run, setting
+    from pipeline.whole_tray import whole_tray
 
     whole = load_cell(cell)
     seen = one_frame(whole, recording, _source(detections, located), frame)
     chosen = setting(seen, least_score)
     order, horizon = order or whole.order.policy, horizon or whole.horizon
     done = with_remedies(chosen, run(chosen, order, horizon, budget_ms=budget_ms))
-    decision = first_decision(chosen, policy_of(chosen, order, budget_ms), horizon, done)
+    decision = (whole_tray(chosen, order == "lookahead" and whole.order.objective == "travel", horizon, done)
+                or first_decision(chosen, policy_of(chosen, order, budget_ms), horizon, done))
     figures = write_run(out, seen, chosen, done, horizon, True, detections is None and located is None)
     show_table("Plan", ("pick", "part", "kind", "x mm", "y mm", "grip s", "release s", "to", "elbow"),
                [(n, pick.part.number, pick.part.kind, *(f"{v:.0f}" for v in _gripped_mm(chosen, pick)),
@@ -112,17 +117,23 @@ def _explain(decision: "Decision", took_s: float) -> None:
         first = parts[decision.part_no(sequence.nodes[0])]
         weight, time_s = decision.costs(sequence)
         rows.append((n, f"{first.number} {first.kind}", f"{sequence.weight:g}", f"{sequence.end_s:.3f}",
-                     f"{0 - weight:+g}", f"{time_s:+.3f}", " ".join(str(decision.part_no(n)) for n in sequence.nodes)))
+                     f"{0 - weight:+g}", f"{time_s:+.3f}", _line(decision, sequence.nodes)))
     show_table("What could come first",
                ("", "part", "weight", "all done s", "more weight", "more time s", "order, by part"), rows)
     bound = decision.picked.weight_bound
     show_table("The first decision", ("", ""), [
         ("parts, grasps", f"{len(decision.scene.choice.weights)}, {len(decision.scene.choice.nodes)}"),
         ("weight, at most", f"{chosen.weight:g}, " + (f"{bound:g}" if bound < float("inf") else "not bounded")),
-        ("gap", f"{100 * decision.gap:.2f} %"),
+        (f"gap in {decision.gap_of}", f"{100 * decision.gap:.2f} %"),
         ("sequences looked at", decision.picked.states),
         ("took", f"{1e3 * took_s:.1f} ms"),
     ])  # fmt: skip
+
+
+def _line(decision: "Decision", nodes: "tuple[int, ...]") -> str:
+    """The first parts of an order."""
+    numbers = [str(decision.part_no(node)) for node in nodes]
+    return " ".join(numbers[:TOLD] + ["and", str(len(numbers) - TOLD), "more"] * (len(numbers) > TOLD))
 
 
 def _source(detections: Path | None, located: Path | None):  # type: ignore[no-untyped-def]
