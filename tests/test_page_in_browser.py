@@ -188,6 +188,9 @@ def test_every_control_has_a_name_and_a_role(page: Browser) -> None:
     named = [node for node in nodes if node["role"] in operated | shown]
     assert len(named) > 40
     assert [node for node in named if not node["name"]] == []
+    fields = [node["name"] for node in nodes if node["role"] in ("searchbox", "combobox", "slider")]
+    assert len(set(fields)) == len(fields) == 6
+    assert "decided s" in {node["name"] for node in nodes if node["role"] == "button"}
     assert [node for node in nodes if node.get("focusable") and node["role"] not in operated | shown] == []
 
 

@@ -27,6 +27,7 @@ function filterable(table) {
   const label = document.createElement("label"), field = document.createElement("input"), many = document.createElement("span");
   field.type = "search";
   field.placeholder = "words to look for";
+  field.setAttribute("aria-label", `Filter: ${table.caption.textContent}`);
   many.setAttribute("role", "status");
   label.className = "filter";
   label.append("Filter ", field);
