@@ -32,7 +32,7 @@ ROUND_DOWN = 0.1  # more of a circle must be found where nothing but a circle is
 LEAST_ROUGH = 0.6  # score of a rough placement worth fitting
 PROMISING = 0.45
 SETTLED = 0.92
-STEP_SHARE = 0.12  # of the edge map's threshold: the least step of grey levels that the fit takes for an edge
+STEP_SHARE, STEP_NOISE = 0.12, 2.5  # of the edge map's threshold and noise: the least step the fit takes for an edge
 OVERLAP = 0.2
 UNKNOWN_SHARE = 0.25
 UNKNOWN_LEAST_MM2 = 25.0
@@ -136,6 +136,7 @@ class PartFinder:
     ) -> list[_Placed]:
         """Fits on one patch: from the best rough placement down, none where a good fit already stands."""
         affine = np.ascontiguousarray(views.coefficients[place][:, 1:3]) / CELL_PX
+        least = max(STEP_SHARE * edges.least, STEP_NOISE * edges.noise)
         rough = self._rough(edges, blobs, patch, affine)
         most = TRIED_ON_ONE + TRIED_ON_MORE * int(blobs.cells[patch] / self.least_cells)
         placed: list[_Placed] = []
@@ -148,7 +149,7 @@ class PartFinder:
                 continue
             tried += 1
             at_px = CELL_PX * np.array([u, v]) + 0.5 * (CELL_PX - 1)
-            one = self._fitted(grey, views, kind, at_px, yaw, place, edges.least)
+            one = self._fitted(grey, views, kind, at_px, yaw, place, least)
             if one is not None:
                 placed.append(one)
         return placed
@@ -175,10 +176,10 @@ class PartFinder:
             unproject(views.coefficients[place], at_px[0], at_px[1], middle, start)
             place = int(views.nearest((views.places_mm[place] + start)[None])[0])
         unproject(views.coefficients[place], at_px[0], at_px[1], middle, start)
-        fit = fit_pose(grey, views.coefficients[place], kind.template, (start[0], start[1], yaw), STEP_SHARE * least,
-                       PROMISING)  # fmt: skip
+        at = (float(start[0]), float(start[1]), yaw)
+        fit = fit_pose(grey, views.coefficients[place], kind.template, at, least, PROMISING)
         least_share = self.least_score + (ROUND_DOWN if kind.template.round and kind.down else 0.0)
-        if fit is None or fit.outline_share < least_share:
+        if fit is None or fit.share < least_share:
             return None
         if kind.model.mirrored_alike and not kind.down and fit.inner_share < LEAST_INNER:
             return None
@@ -284,7 +285,7 @@ def _sightings(kept: list[_Placed], unknown: list[tuple[FloatArray, FloatArray]]
         side=np.array(["down" if one.kind.down else "up" for one in kept] + [""] * m, dtype=np.str_),
         xy_mm=np.array([one.xy_mm for one in kept] + [xy for xy, _ in unknown]).reshape(-1, 2),
         yaw_rad=np.array([float(one.fit.pose[2]) for one in kept] + [0.0] * m),
-        score=np.array([one.fit.outline_share for one in kept] + [0.0] * m),
+        score=np.array([one.fit.share for one in kept] + [0.0] * m),
         sigma_mm=np.array([one.fit.sigma_mm for one in kept] + [1.0] * m),
         sigma_rad=np.array([one.fit.sigma_rad for one in kept] + [np.pi] * m),
         outline_mm=tuple([none] * n + [outline for _, outline in unknown]),

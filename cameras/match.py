@@ -216,7 +216,7 @@ class Fit:
     """A template laid on an image. pose (3,): x, y mm from the place, yaw rad.
 
     lean_mm (2,): how far x, y would move, were the part's edges one standard deviation higher than its template says.
-    outline_share, inner_share: of the points, how many met an edge (inner_share 1 without inner edges).
+    share: of the points, or of the outline's alone, how many met an edge.  inner_share: of those inside; 1 without any.
     worth: by which rivals are ranked.  polygon_px (k, 2): the outline in the image.
     """
 
@@ -225,7 +225,7 @@ class Fit:
     sigma_mm: float
     sigma_rad: float
     lean_mm: FloatArray
-    outline_share: float
+    share: float
     inner_share: float
     worth: float
     polygon_px: FloatArray
@@ -253,6 +253,7 @@ def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, sta
     seen = out[:, 3] > 0.0
     outline_share = float(np.sum(out[outline, 2]) / max(np.sum(seen & outline), 1))
     inner_share = float(np.mean(out[seen & ~outline, 2])) if np.any(seen & ~outline) else 1.0
+    share = max(outline_share, float(np.mean(out[seen, 2])))
     worth = outline_share + (0.0 if outline.all() else INNER_WORTH * (min(inner_share, INNER_MOST) - INNER_SHARE))
     polygon = np.empty_like(template.outline)
     outline_pixels(view, template.outline, pose, 0.5 * (heights[0] + heights[1]), polygon)
@@ -260,8 +261,7 @@ def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, sta
     sigma_mm = np.sqrt(0.5 * (unit * np.trace(cov[:2, :2]) + lean @ lean))
     sigma_rad = np.sqrt(unit * cov[2, 2])
     turn_sigma = np.pi if template.round else float(min(sigma_rad, np.pi))
-    lean = cov[:2, 4:] @ (unit / template.sigmas[1:] ** 2)
-    return Fit(pose, heights, float(sigma_mm), turn_sigma, lean, outline_share, inner_share, worth, polygon)
+    return Fit(pose, heights, float(sigma_mm), turn_sigma, lean, share, inner_share, worth, polygon)
 
 
 def _scatter(out: FloatArray) -> float:

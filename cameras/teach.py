@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cameras.blobs import blobs_of
-from cameras.edges import MOST_SAMPLES, edge_along, edge_map
+from cameras.edges import MOST_SAMPLES, edge_along, edge_map, noise_of
 from cameras.faults import InputFault
 from cameras.model import MOST_CONTOURS, Contour, Model
 from cameras.outline import rough_outline
@@ -20,6 +20,7 @@ Grey = NDArray[np.uint8]
 
 SPACING_MM = 0.8
 LEAST_INNER_MM = 4.0
+LEAST_INNER_SLOPE, INNER_NOISE = 20.0, 14.0  # of a 3 x 3 Sobel filter; of the image's noise
 CHAMFER_PX, CHAMFER_REACH_PX, CHAMFER_STEP = 2.0, 1.2, 0.5  # its step is at least half the edge's
 MARGIN_PX = 14
 UNKNOWN_TOP, UNKNOWN_SIGMA = 0.65, 0.22  # of the height, where one view cannot tell it
@@ -217,7 +218,7 @@ def _inner(grey: Grey, polygon: FloatArray, frame: GripFrame, taught: Taught) ->
     size = np.hypot(dx.astype(np.float64), dy)[inside > 0]
     if len(size) == 0:
         return ()
-    strong = max(float(np.percentile(size, 85)), 60.0)
+    strong = max(float(np.percentile(size, 85)), LEAST_INNER_SLOPE, INNER_NOISE * noise_of(grey))
     lines = np.where(inside > 0, cv2.Canny(dx, dy, 0.5 * strong, strong, L2gradient=True), 0).astype(np.uint8)
     count, label = cv2.connectedComponents(lines, connectivity=8)
     kept = []

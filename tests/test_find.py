@@ -11,7 +11,7 @@ from hypothesis import strategies as st
 from scenes import HOLE, PLATE, Laid, Pinhole, Scene, disc
 
 from cameras.blobs import blobs_of
-from cameras.edges import edge_map
+from cameras.edges import edge_map, noise_of
 from cameras.find import PartFinder, TaughtPart
 from cameras.model import load_model
 from cameras.teach import Taught, teach
@@ -243,3 +243,13 @@ def test_the_demo_is_found_whole_right_and_once(demo, tmp_path):
     assert found >= 15
     assert np.median(errors) < 0.15
     assert np.percentile(errors, 95) < 0.4
+
+
+@pytest.mark.parametrize("sigma", [1.0, 3.0, 8.0])
+def test_noise_is_told_from_slopes_and_edges(sigma):
+    """A ramp and a bright square are no noise."""
+    rng = np.random.default_rng(1)
+    level = np.tile(np.linspace(60, 140, 400), (300, 1))
+    level[100:200, 100:200] += 80.0
+    grey = np.clip(np.round(level + rng.normal(0, sigma, level.shape)), 0, 255).astype(np.uint8)
+    assert noise_of(grey) == pytest.approx(sigma, rel=0.06)
