@@ -131,12 +131,12 @@ MOST_SAMPLES = 96
 OUTSIDE = 1e9
 
 
-@njit("void(u1[:,::1], f8, f8, f8, f8, f8, f8, f8, b1, f8[::1], f8[::1])", cache=True)
-def edge_along(image, u, v, nu, nv, reach, least, sign, fine, profile, found):  # type: ignore[no-untyped-def]
+@njit("void(u1[:,::1], f8, f8, f8, f8, f8, f8, f8, f8, b1, f8[::1], f8[::1])", cache=True)
+def edge_along(image, u, v, nu, nv, reach, least, sign, against, fine, profile, found):  # type: ignore[no-untyped-def]
     """Place of the edge that crosses the normal (nu, nv) near (u, v): found[0] pixels along it, found[1] its step.
 
     The profile is differenced over two pixels; the best peak is its strength less half for one at the end of the reach,
-    less 0.4 for one of the other sign; a parabola gives its top. A fine profile has two samples a pixel,
+    times `against` for one of the other sign; a parabola gives its top. A fine profile has two samples a pixel,
     each averaged over three pixels along the edge; a rough one has one sample a pixel.
     found[1] is 0 where no step of `least` grey levels is in reach; found[0] is OUTSIDE where the profile leaves the
     image.
@@ -165,7 +165,7 @@ def edge_along(image, u, v, nu, nv, reach, least, sign, fine, profile, found):  
             continue
         worth = size * (1.0 - 0.5 * abs(k - side) / (d * reach))
         if here * sign < 0.0:
-            worth *= 0.6
+            worth *= against
         if worth > best:
             best, at = worth, k
     if at < 0:

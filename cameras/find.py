@@ -27,11 +27,15 @@ MOST_PEAKS = 40
 DEPTH_SHARE, DEPTH_SLACK = 0.7, 2.0  # of a part's depth, what the patch under its middle has at the least; cells less
 SLACK_CELLS, BEYOND_CELLS = 3, 24
 TRIED_ON_ONE, TRIED_ON_MORE = 6, 5
-LEAST_INNER = 0.4  # share of inner edges without which nothing says that a part lies the right side up
-ROUND_DOWN = 0.1  # more of a circle must be found where nothing but a circle is known
+LEAST_INNER, LEAST_INNER_TOLD = 0.4, 0.3  # share of inner edges without which nothing says that a part lies the right
+# side up; and where the outline tells as well
+FLAT_DOWN = -0.05  # the underside's edges are not quite those that were taught
+ROUND_DOWN, ROUND_UP = 0.22, 0.725  # circles are met by chance: how much more must be found of one where nothing else
+# is known, and the least mean share of circle and inner edges
 LEAST_ROUGH = 0.6  # score of a rough placement worth fitting
 PROMISING = 0.45
 SETTLED = 0.92
+WORTH_TURNING, TURNED_RAD = 0.55, 0.2
 STEP_SHARE, STEP_NOISE = 0.12, 2.5  # of the edge map's threshold and noise: the least step the fit takes for an edge
 OVERLAP = 0.2
 UNKNOWN_SHARE = 0.25
@@ -176,17 +180,31 @@ class PartFinder:
             unproject(views.coefficients[place], at_px[0], at_px[1], middle, start)
             place = int(views.nearest((views.places_mm[place] + start)[None])[0])
         unproject(views.coefficients[place], at_px[0], at_px[1], middle, start)
-        at = (float(start[0]), float(start[1]), yaw)
-        fit = fit_pose(grey, views.coefficients[place], kind.template, at, least, PROMISING)
-        least_share = self.least_score + (ROUND_DOWN if kind.template.round and kind.down else 0.0)
+        fit = self._turned_fit(grey, views.coefficients[place], kind, start, yaw, least)
+        least_share = self.least_score + (0.0 if not kind.down else ROUND_DOWN if kind.template.round else FLAT_DOWN)
         if fit is None or fit.share < least_share:
             return None
-        if kind.model.mirrored_alike and not kind.down and fit.inner_share < LEAST_INNER:
+        least_inner = LEAST_INNER if kind.model.mirrored_alike else LEAST_INNER_TOLD
+        if not kind.down and fit.inner_share < least_inner:
+            return None
+        if kind.template.round and not kind.down and 0.5 * (fit.share + fit.inner_share) < ROUND_UP:
             return None
         rows, columns = grey.shape
         low, high = fit.polygon_px.min(axis=0), fit.polygon_px.max(axis=0)
         cut = bool(low.min() < 0.5 or high[0] > columns - 1.5 or high[1] > rows - 1.5)
         return _Placed(kind, fit, views.places_mm[place] + fit.pose[:2] - kind.model.shift_mm, fit.polygon_px, cut)
+
+    def _turned_fit(
+        self, grey: Grey, view: FloatArray, kind: _Kind, start: FloatArray, yaw: float, least: float
+    ) -> Fit | None:
+        """The fit from a start; where it is no good one, the best of it and of starts turned by a little more."""
+        at = (float(start[0]), float(start[1]))
+        fit = fit_pose(grey, view, kind.template, (*at, yaw), least, PROMISING)
+        if fit is None or kind.steps == 1 or not WORTH_TURNING < fit.share < SETTLED:
+            return fit
+        turn = min(TURNED_RAD, 0.25 * kind.steps * kind.step_rad)
+        others = (fit_pose(grey, view, kind.template, (*at, yaw + way * turn), least, PROMISING) for way in (-1.0, 1.0))
+        return max([fit, *(one for one in others if one is not None)], key=lambda one: one.worth)
 
     def _bounds(self, blobs: Blobs, patch: int) -> NDArray[np.int64]:
         """How far placements on a patch may reach, in cells: a little beyond it, and beyond a border that cuts it."""

@@ -18,6 +18,7 @@ from cameras.view import project, slopes
 FloatArray = NDArray[np.float64]
 
 HIT_PX = 1.6
+AGAINST = 0.6  # worth of an edge that is lighter on the other side than when taught
 INNER_AT_FIRST = 0.3  # weight of inner edges while the outline is still sought; heights are held then
 INNER_SHARE, INNER_MOST, INNER_WORTH = 0.55, 0.85, 0.6  # more of the inner edges than this speaks for the side up
 PIXEL_SIGMA = 0.25
@@ -37,6 +38,7 @@ class Template:
     heights (g,): of the outline where it faces the camera and where away, then of each inner contour.  sigmas (g,): by
     how much each may differ from the others; the first of them is that of the difference between the first two.
     sigma_mm: by how much all of them may be higher than they say, of which one view tells nothing.
+    shifted (2,): how far, in the cell frame, a part would lie from where it was taught, for each millimetre likewise.
     away (2,): how far the taught points would lie towards the camera's foot for each millimetre that they are higher
     than `heights` says; zero where what is seen is not what was taught. They would lie closer together as well: how
     large a part looks tells nothing of its height.  outline (k, 2): polygon.
@@ -46,6 +48,7 @@ class Template:
     heights: FloatArray
     sigmas: FloatArray
     sigma_mm: float
+    shifted: FloatArray
     away: FloatArray
     outline: FloatArray
     round: bool
@@ -66,9 +69,12 @@ def template_of(model: Model, down: bool) -> Template:
         drop = DROP_SIGMA * top if model.turns == 1 else model.facing_sigma_mm
         sigmas = [drop, model.outline.height_sigma_mm] + [one.height_sigma_mm for one in model.inner]
     outline = model.outline_mm[::-1] * np.array([1.0, -1.0]) if down else model.outline_mm.copy()
-    away = np.zeros(2) if down else model.away.copy()
+    centred = down or model.turns != 1  # a symmetric part's points were centred on its grip point, whatever the height
+    away = np.zeros(2) if centred else model.away.copy()
+    cosine, sine = np.cos(model.yaw_rad), np.sin(model.yaw_rad)
+    shifted = np.zeros(2) if down or model.turns == 1 else np.array([[cosine, -sine], [sine, cosine]]) @ model.away
     own = np.maximum(OWN_SHARE * np.array(sigmas), 0.02)
-    return Template(np.ascontiguousarray(points), np.array(heights), own, sigmas[1], away,
+    return Template(np.ascontiguousarray(points), np.array(heights), own, sigmas[1], shifted, away,
                     np.ascontiguousarray(outline), model.turns == 0)  # fmt: skip
 
 
@@ -113,7 +119,7 @@ def _step(  # type: ignore[no-untyped-def]
         nu, nv = tv / length, -tu / length
         if nu * (local[0, 0] * nx + local[0, 1] * ny) + nv * (local[1, 0] * nx + local[1, 1] * ny) < 0.0:
             nu, nv = -nu, -nv
-        edge_along(image, u, v, nu, nv, reach, least, points[k, 4], stride == 1, profile, found)
+        edge_along(image, u, v, nu, nv, reach, least, points[k, 4], AGAINST, stride == 1, profile, found)
         out[k, 0], out[k, 1] = found[0], found[1]
         out[k, 2], out[k, 3] = 0.0, 0.0 if found[0] == OUTSIDE else 1.0
         inside += int(out[k, 3])
@@ -257,7 +263,7 @@ def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, sta
     worth = outline_share + (0.0 if outline.all() else INNER_WORTH * (min(inner_share, INNER_MOST) - INNER_SHARE))
     polygon = np.empty_like(template.outline)
     outline_pixels(view, template.outline, pose, 0.5 * (heights[0] + heights[1]), polygon)
-    lean = template.sigma_mm * (cov[:2, 4:] @ (unit / template.sigmas[1:] ** 2))
+    lean = template.sigma_mm * (cov[:2, 4:] @ (unit / template.sigmas[1:] ** 2) + template.shifted)
     sigma_mm = np.sqrt(0.5 * (unit * np.trace(cov[:2, :2]) + lean @ lean))
     sigma_rad = np.sqrt(unit * cov[2, 2])
     turn_sigma = np.pi if template.round else float(min(sigma_rad, np.pi))

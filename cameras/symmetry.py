@@ -18,7 +18,7 @@ ROUND_TURNS = 24
 ALIKE_MM = 0.35
 MOST_TURNS = 12
 HEIGHT_STEPS = 25
-SEEN_SIGMA_MM = 0.1  # light and chamfers shift edges by as much
+SEEN_SIGMA_MM = 0.2  # light and chamfers shift edges by as much
 PRIOR, PRIOR_SIGMA = 0.5, 0.3  # of the height of the top face
 INNER_PRIOR = 0.85
 VOTED_HEIGHTS = 7
@@ -39,12 +39,13 @@ def turned(points: FloatArray, angle: float) -> FloatArray:
 
 
 def voted_plan(
-    lines: NDArray[np.uint8], corner: FloatArray, frame: Frame, top_mm: float, turns: int
+    lines: NDArray[np.uint8], corner: FloatArray, frame: Frame, top_mm: float, turns: int, least_px: float
 ) -> tuple[FloatArray, float]:
     """Polygon (k, 2) in the grip frame that the lines enclose where their turned copies agree; and its height.
 
-    A shadow's edge is in a minority among the copies, and a gap in one copy is closed by another. The height is the
-    one at which most lines agree. The polygon is empty where nothing is enclosed.
+    A shadow's edge is in a minority among the copies, and a gap in one copy is closed by another. Of all heights, and
+    of how many copies have to agree, the polygon counts on whose rim most of them do; it encloses at least `least_px`
+    pixels, so as to be no inner edge. The polygon is empty where nothing is enclosed.
     """
     j, i = np.nonzero(lines)
     if len(i) == 0:
@@ -56,23 +57,30 @@ def voted_plan(
     grid = np.column_stack([x.ravel(), y.ravel()])
     thick = cv2.dilate(lines, np.ones((3, 3), np.uint8)).astype(np.float32) / 255.0
     count = turns or ROUND_TURNS
-    need = {2: 1.5, 3: 1.5}.get(count, 0.4 * count)
     best, plan, height = 0.0, np.zeros((0, 2)), 0.0
     for h in np.linspace(0.0, top_mm, VOTED_HEIGHTS):
         at = (frame.to_pixels(grid, h) - corner).reshape(*x.shape, 2).astype(np.float32)
         one = cv2.remap(thick, at[..., 0], at[..., 1], cv2.INTER_LINEAR)
+        pixels_mm2 = abs(_area(at[[0, 0, -1, -1], [0, -1, -1, 0]])) / (side[-1] - side[0]) ** 2
         votes: NDArray[Any] = np.zeros_like(one)
         for k in range(count):
             middle = (len(side) - 1) / 2.0
             turn = cv2.getRotationMatrix2D((middle, middle), 360.0 * k / count, 1.0)
             votes += cv2.warpAffine(one, turn, (len(side), len(side)))
-        agreed = (votes >= need).astype(np.uint8)
-        shape = _enclosing(agreed, step)
-        worth = float(np.minimum(votes, count)[_rim(shape, step)].sum()) if shape.any() else 0.0
-        if worth > best:
-            outlines, _ = cv2.findContours(shape, cv2.RETR_EXTERNAL, cv2.CHAIN_APPROX_NONE)
-            best, plan, height = worth, max(outlines, key=len)[:, 0] * step + side[0], float(h)
+        for need in {2: (1.5,), 3: (2.4, 1.5)}.get(count, (0.75 * count, 0.55 * count, 0.4 * count)):
+            shape = _enclosing((votes >= need).astype(np.uint8), step)
+            if float(shape.sum()) * step * step * pixels_mm2 < least_px:
+                continue
+            worth = float(np.minimum(votes, count)[_rim(shape, step)].mean())
+            if worth > best:
+                outlines, _ = cv2.findContours(shape, cv2.RETR_EXTERNAL, cv2.CHAIN_APPROX_NONE)
+                best, plan, height = worth, max(outlines, key=len)[:, 0] * step + side[0], float(h)
     return np.asarray(plan), height
+
+
+def _area(polygon: NDArray[Any]) -> float:
+    x, y = np.asarray(polygon, dtype=np.float64).T
+    return 0.5 * float(np.sum(x * np.roll(y, -1) - y * np.roll(x, -1)))
 
 
 def _enclosing(agreed: NDArray[Any], step: float) -> NDArray[Any]:
@@ -129,18 +137,19 @@ def wall_heights(
     away = (normal @ frame.away() > 0.0)[:, None]
     steps = np.linspace(0.0, top_mm, HEIGHT_STEPS)
     levels = [frame.from_pixels(pixels, h) for h in steps]
-    best = np.array([0, 0])
-    cost = np.array([_misses(level[::2], turns) for level in levels])
-    best[:] = int(np.argmin(cost))
-    for side in (0, 1, 0, 1):
-        tried = [(k, best[1]) if side == 0 else (best[0], k) for k in range(len(steps))]
-        cost = np.array([_misses(np.where(away, levels[b], levels[a])[::2], turns) for a, b in tried])
-        best[side] = int(np.argmin(cost))
-    slope = float(np.linalg.norm(frame.away()))
-    seen = SEEN_SIGMA_MM / max(slope, 1e-6)
-    share = 1.0 / (1.0 + (seen / (PRIOR_SIGMA * top_mm)) ** 2)
-    low, high = (share * float(steps[k]) + (1.0 - share) * PRIOR * top_mm for k in best)
-    return (low, high), float(np.sqrt(share)) * seen
+    usual = PRIOR_SIGMA * top_mm
+
+    def cost(low: int, high: int) -> float:
+        known = np.sum((steps[[low, high]] - PRIOR * top_mm) ** 2) + (steps[low] - steps[high]) ** 2
+        plan = np.where(away, levels[high], levels[low])[::2]
+        return _misses(plan, turns) / SEEN_SIGMA_MM**2 + float(known) / usual**2
+
+    low = high = int(np.argmin([cost(k, k) for k in range(len(steps))]))
+    for _ in range(2):
+        low = int(np.argmin([cost(k, high) for k in range(len(steps))]))
+        high = int(np.argmin([cost(low, k) for k in range(len(steps))]))
+    seen = SEEN_SIGMA_MM / max(float(np.linalg.norm(frame.away())), 1e-6)
+    return (float(steps[low]), float(steps[high])), seen / float(np.hypot(1.0, seen / usual))
 
 
 def edge_height(line: FloatArray, every: FloatArray, frame: Frame, top_mm: float, turns: int) -> tuple[float, float]:
@@ -177,12 +186,12 @@ def off_centre(polygon: FloatArray, turns: int) -> FloatArray:
     """
     normal = np.roll(polygon, -1, axis=0) - np.roll(polygon, 1, axis=0)
     normal = np.column_stack([normal[:, 1], -normal[:, 0]]) / np.maximum(np.linalg.norm(normal, axis=1), 1e-12)[:, None]
-    centre = np.zeros(2)
+    centre, count = np.zeros(2), turns or ROUND_TURNS
     for within in (3.0, 2.0, 1.0, 0.7, 0.7):
         tree = cKDTree(polygon - centre)
         rows, right = [], []
-        for k in range(1, turns):
-            angle = 2.0 * np.pi * k / turns
+        for k in range(1, count):
+            angle = 2.0 * np.pi * k / count
             copy = turned(polygon - centre, angle)
             apart, at = (np.asarray(one) for one in tree.query(copy))
             near = apart < within * ALIKE_MM

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cameras.blobs import blobs_of
+from cameras.chain import even, outward, snapped
 from cameras.edges import MOST_SAMPLES, edge_along, edge_map, noise_of
 from cameras.faults import InputFault
 from cameras.model import MOST_CONTOURS, Contour, Model
@@ -21,7 +22,6 @@ Grey = NDArray[np.uint8]
 SPACING_MM = 0.8
 LEAST_INNER_MM = 4.0
 LEAST_INNER_SLOPE, INNER_NOISE = 20.0, 14.0  # of a 3 x 3 Sobel filter; of the image's noise
-CHAMFER_PX, CHAMFER_REACH_PX, CHAMFER_STEP = 2.0, 1.2, 0.5  # its step is at least half the edge's
 MARGIN_PX = 14
 UNKNOWN_TOP, UNKNOWN_SIGMA = 0.65, 0.22  # of the height, where one view cannot tell it
 UNKNOWN_INNER = 0.85
@@ -75,7 +75,7 @@ def teach(grey: Grey, camera: CameraMap, surface_mm: float, taught: Taught, file
     if len(chain) < 8:
         raise InputFault(file, "--tool", "no outline can be told from the belt",
                          "take a sharper image, or change the light")
-    pixels, steps = snapped(grey, chain)
+    pixels, steps = snapped(grey, chain, taught.turns != 1)
     top = taught.height_mm
     lighter = float(np.median(steps)) < 0.0  # then a wall, in shade, is not seen as part of it
     heights, sigma = (UNKNOWN_TOP * top if lighter else 0.0, UNKNOWN_TOP * top), UNKNOWN_SIGMA * top
@@ -84,7 +84,7 @@ def teach(grey: Grey, camera: CameraMap, surface_mm: float, taught: Taught, file
     outline, polygon = _outline(pixels, steps, frame, heights, sigma)
     inner = _inner(grey, polygon, frame, taught)
     shift = np.zeros(2)
-    if taught.turns > 1:
+    if taught.turns != 1:
         off = off_centre(polygon, taught.turns)
         polygon, outline = polygon - off, replace(outline, points_mm=outline.points_mm - off)
         inner = tuple(replace(one, points_mm=one.points_mm - off) for one in inner)
@@ -118,67 +118,6 @@ def _window(grey: Grey, frame: GripFrame, taught: Taught, file: str) -> tuple[Gr
     blob[: own.shape[0], : own.shape[1]] = own
     return (np.ascontiguousarray(grey[top:bottom, left:right]), np.array([left, top], float),
             np.ascontiguousarray(blob[top:bottom, left:right]))  # fmt: skip
-
-
-def even(polygon: FloatArray, spacing: float, smooth: float = 0.0) -> FloatArray:
-    """A closed polygon with its points evenly `spacing` apart, after Gaussian smoothing along it by `smooth`."""
-    closed = np.vstack([polygon, polygon[:1]])
-    at = np.concatenate([[0.0], np.cumsum(np.linalg.norm(np.diff(closed, axis=0), axis=1))])
-    fine = max(int(np.ceil(at[-1] / (spacing / 4 if smooth else spacing))), 8)
-    want = np.linspace(0.0, at[-1], fine, endpoint=False)
-    points = np.column_stack([np.interp(want, at, closed[:, k]) for k in range(2)])
-    if not smooth:
-        return points
-    step = at[-1] / fine
-    frequency = np.fft.fftfreq(fine, step)[:, None]
-    low = np.fft.ifft(np.fft.fft(points, axis=0) * np.exp(-2.0 * (np.pi * frequency * smooth) ** 2), axis=0).real
-    return np.asarray(low[::4])
-
-
-def outward(polygon: FloatArray) -> FloatArray:
-    """Unit normals (n, 2) of a closed polygon's points, away from its inside."""
-    along = np.roll(polygon, -1, axis=0) - np.roll(polygon, 1, axis=0)
-    normal = np.column_stack([along[:, 1], -along[:, 0]])
-    x, y = polygon.T
-    if np.sum(x * np.roll(y, -1) - y * np.roll(x, -1)) < 0.0:
-        normal = -normal
-    return np.asarray(normal / np.maximum(np.linalg.norm(normal, axis=1), 1e-12)[:, None])
-
-
-def snapped(grey: Grey, chain: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """A closed chain of pixels (n, 2) moved onto the image's edges along its normals; and the edges' grey steps."""
-    profile, found = np.empty(MOST_SAMPLES), np.empty(2)
-    points, steps = chain, np.zeros(len(chain))
-    for reach, smooth in ((4.0, 2.0), (2.5, 1.2), (1.5, 0.6)):
-        points = even(points, 1.0, smooth)
-        normals = outward(points)
-        moved = np.zeros((len(points), 2))
-        for k, ((u, v), (nu, nv)) in enumerate(zip(points, normals, strict=True)):
-            edge_along(grey, u, v, nu, nv, reach, 3.0, 0.0, True, profile, found)
-            moved[k] = found
-        seen = moved[:, 1] != 0.0
-        if seen.sum() < 8:
-            return points, moved[:, 1]
-        at = np.arange(len(points))
-        offset = np.interp(at, at[seen], moved[seen, 0], period=len(points))
-        wide = np.concatenate([offset[-2:], offset, offset[:2]])
-        offset = np.median(np.lib.stride_tricks.sliding_window_view(wide, 5), axis=1)
-        points, steps = points + offset[:, None] * normals, moved[:, 1]
-    return _beyond_chamfer(grey, points, steps), steps
-
-
-def _beyond_chamfer(grey: Grey, points: FloatArray, steps: FloatArray) -> FloatArray:
-    """Outline pixels moved on, where a narrow dark chamfer lies between the edge and the belt, to the chamfer's end."""
-    normals = outward(points)
-    profile, found = np.empty(MOST_SAMPLES), np.empty(2)
-    on = np.zeros(len(points))
-    for k, ((u, v), (nu, nv)) in enumerate(zip(points + CHAMFER_PX * normals, normals, strict=True)):
-        least = CHAMFER_STEP * abs(steps[k]) + 3.0
-        edge_along(grey, u, v, nu, nv, CHAMFER_REACH_PX, least, -steps[k], True, profile, found)
-        if found[1] * steps[k] < 0.0:
-            on[k] = CHAMFER_PX + found[0]
-    near = np.lib.stride_tricks.sliding_window_view(np.concatenate([on[-3:], on, on[:3]]), 7)
-    return np.asarray(points + np.median(near, axis=1)[:, None] * normals)
 
 
 def _outline(
@@ -238,7 +177,7 @@ def _sharp(grey: Grey, pixels: NDArray[Any], dx: NDArray[Any], dy: NDArray[Any])
         if length == 0.0:
             continue
         nu, nv = gu / length, gv / length
-        edge_along(grey, u, v, nu, nv, 1.5, 5.0, 0.0, True, profile, found)
+        edge_along(grey, u, v, nu, nv, 1.5, 5.0, 0.0, 1.0, True, profile, found)
         if found[1] != 0.0:
             rows.append((u + found[0] * nu, v + found[0] * nv, nu, nv, found[1]))
     return np.array(rows).reshape(-1, 5)
@@ -270,12 +209,3 @@ def _thinned(line: FloatArray, frame: GripFrame, height: float, sigma: float) ->
     normal = ahead[kept] - points[kept]
     normal = normal / np.maximum(np.linalg.norm(normal, axis=1), 1e-12)[:, None]
     return Contour(points[kept], normal, line[kept, 4], height, sigma)
-
-
-def _is_hole(line: FloatArray) -> bool:
-    """Whether an inner line (rows u, v, nu, nv, step) runs round a dark middle, as a hole's rim does."""
-    middle = 0.5 * (line[:, :2].min(axis=0) + line[:, :2].max(axis=0))
-    away = line[:, :2] - middle
-    outwards = np.sum(away * line[:, 2:4], axis=1) * line[:, 4] > 0.0
-    sectors = np.unique(np.floor((np.arctan2(away[:, 1], away[:, 0]) + np.pi) / (np.pi / 6)))
-    return bool(np.mean(outwards) > 0.85 and len(sectors) >= 9)

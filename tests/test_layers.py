@@ -21,6 +21,7 @@ cameras.plane
 cameras.plane_checks cameras.uncertainty
 cameras.edges cameras.outline cameras.model cameras.view cameras.sightings
 cameras.blobs cameras.search
+cameras.chain
 cameras.teach cameras.match
 cameras.find cameras.locate
 pipeline

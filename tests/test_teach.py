@@ -1,6 +1,7 @@
 import contextlib
 import json
 
+import cv2
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -8,10 +9,11 @@ from hypothesis import strategies as st
 from scenes import HOLE, PLATE, Laid, Pinhole, Scene, disc
 from scipy.spatial import cKDTree
 
+from cameras.chain import even, snapped
 from cameras.faults import InputFault
 from cameras.model import Model, load_model
-from cameras.symmetry import turns_seen
-from cameras.teach import Taught, even, teach
+from cameras.symmetry import turns_seen, voted_plan
+from cameras.teach import Taught, teach
 
 POSE = (12.0, -8.0, 0.7)
 SQUARE = np.array([[-11.0, -11.0], [11.0, -11.0], [11.0, 11.0], [-11.0, 11.0]])
@@ -128,3 +130,41 @@ def test_a_damaged_model_is_refused_or_sound(plate, tmp_path_factory, junk, at, 
         return
     assert np.all(np.isfinite(model.outline_mm))
     assert np.allclose(np.linalg.norm(model.outline.normals, axis=1), 1.0)
+
+
+def test_an_outline_keeps_to_one_of_two_edges_side_by_side():
+    """A bright face, a dark chamfer about it that on one side is hardly darker than the belt."""
+    y, x = np.mgrid[:160, :160].astype(float) - 80.0
+    radius, belt = np.hypot(x, y), 90.0
+    chamfer = np.where(x > 0.0, 30.0, 80.0)
+    grey = np.where(radius < 40.0, 200.0, np.where(radius < 44.5, chamfer, belt))
+    grey = np.round(cv2.GaussianBlur(grey, (0, 0), 0.8)).astype(np.uint8)
+    angle = np.linspace(0.0, 2 * np.pi, 260, endpoint=False)
+    around = np.column_stack([np.cos(angle), np.sin(angle)])
+    chain = 80.0 + (43.0 + 1.5 * np.sin(3 * angle))[:, None] * around
+    pixels, steps = snapped(grey, chain, symmetric=True)
+    assert np.abs(np.linalg.norm(pixels - 80.0, axis=1) - 40.0).max() < 1.0
+    assert (steps < 0.0).all()
+
+
+class Above:
+    """A frame seen from straight above at 0.5 mm a pixel."""
+
+    def from_pixels(self, pixels, height_mm):
+        return (np.asarray(pixels) - 100.0) * 0.5
+
+    def to_pixels(self, points_mm, height_mm):
+        return np.asarray(points_mm) / 0.5 + 100.0
+
+    def away(self):
+        return np.zeros(2)
+
+
+def test_a_shadow_beside_a_round_part_is_no_outline():
+    """Lines: the part's edge, its hole's, and a shadow's along nearly half of it."""
+    lines = np.zeros((200, 200), np.uint8)
+    for radius in (40, 12):
+        cv2.circle(lines, (100, 100), radius, 255, 1)
+    cv2.ellipse(lines, (90, 100), (44, 44), 0.0, 95.0, 265.0, 255, 1)
+    plan, _ = voted_plan(lines, np.zeros(2), Above(), 5.0, 0, least_px=0.5 * np.pi * 40**2)
+    assert np.abs(np.linalg.norm(plan, axis=1) - 20.0).max() < 1.2
