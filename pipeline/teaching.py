@@ -1,6 +1,7 @@
 """Around teaching: the tool pose carried back to the image, what to tell the teacher, and a picture of the model."""
 
 import math
+from collections.abc import Sequence
 from pathlib import Path
 
 import cv2
@@ -49,6 +50,17 @@ def pose_when_seen(
         moved = (moved + modulus / 2) % modulus - modulus / 2
     heading, travel = math.radians(cell.belt.heading_deg), moved * cell.belt.mm_per_count
     return x + travel * math.cos(heading), y + travel * math.sin(heading), math.radians(yaw)
+
+
+def poses_when_seen(
+    cell: Cell, tool: str, counts: Sequence[float], touch_counts: float | None, images: int
+) -> list[tuple[float, float, float]]:
+    """The same for each of several images, in order. Raises InputFault where a belt's counts are not one an image."""
+    if cell.belt is not None and counts and len(counts) != images:
+        raise InputFault("--counts", "", f"{len(counts)} given for {images} images",
+                         "give one for each image, in order")  # fmt: skip
+    each: list[float | None] = [None] * images if cell.belt is None or not counts else [*counts]
+    return [pose_when_seen(cell, tool, one, touch_counts) for one in each]
 
 
 def remarks(cell: Cell, model: Model) -> list[str]:

@@ -23,7 +23,7 @@ cameras.edges cameras.outline cameras.model cameras.view cameras.sightings
 cameras.blobs cameras.search
 cameras.chain
 cameras.teach cameras.match
-cameras.find cameras.locate
+cameras.find cameras.locate cameras.teach_views
 pipeline
 pipeline.cell pipeline.shapes
 pipeline.arm pipeline.belt pipeline.belt_scale pipeline.places

@@ -16,16 +16,18 @@ def register(app: typer.Typer) -> None:
 
 
 def teach(
-    image: Annotated[Path, typer.Argument(help="Image of one lone part, right side up.")],
+    images: Annotated[list[Path], typer.Argument(help="Images of one lone part, right side up, left as it lies.")],
     cell: Annotated[Path, typer.Option(help="The cell file.")],
     part: Annotated[str, typer.Option(help="The part's name in the cell file.")],
     tool: Annotated[str, typer.Option(help="Tool pose that grips it: X,Y,YAW in mm and degrees.")],
     out: Annotated[Path, typer.Option(help="The model file to write.")],
-    counts: Annotated[float | None, typer.Option(help="Belt counts when the image was taken.")] = None,
+    counts: Annotated[list[float] | None, typer.Option(help="Belt counts of each image, in order.")] = None,
     touch_counts: Annotated[float | None, typer.Option(help="Belt counts when the part was gripped.")] = None,
     camera: Annotated[str, typer.Option(help="Which camera took it, where there are several.")] = "",
 ) -> None:
-    """Teach a part: its outline, its inner edges and its grip frame, from one image and the tool pose that grips it.
+    """Teach a part: its outline, its inner edges and its grip frame, from images and the tool pose that grips it.
+
+    One image will do; of several, the belt moved on between them, the heights of its edges are measured.
 
     Example: sanderling teach teach/lever.png --cell cell.toml --part lever --tool=321.6,-58.6,-26.1 --counts 21475
     --touch-counts 30868 --out parts/lever.json
@@ -34,22 +36,23 @@ def teach(
     from cameras.find import grey_of
     from cameras.image import read_image
     from cameras.teach import Taught
-    from cameras.teach import teach as taught_model
+    from cameras.teach_views import TeachingView, teach_views
     from pipeline.cell import load_cell
     from pipeline.finding import calibration_of
-    from pipeline.teaching import part_of, pose_when_seen, remarks
+    from pipeline.teaching import part_of, poses_when_seen, remarks
     from pipeline.teaching import picture as model_picture
 
     whole = load_cell(cell)
     kind = part_of(whole, part)
-    pose = pose_when_seen(whole, tool, counts, touch_counts)
-    grey = grey_of(read_image(image))
+    poses = poses_when_seen(whole, tool, counts or [], touch_counts, len(images))
     view = load_camera(calibration_of(whole, camera))
-    model = taught_model(grey, view, whole.surface_mm, Taught(part, kind.height_mm, kind.turns, pose), str(image))
+    views = [TeachingView(grey_of(read_image(image)), view, Taught(part, kind.height_mm, kind.turns, pose), str(image))
+             for image, pose in zip(images, poses, strict=True)]  # fmt: skip
+    model = teach_views(views, whole.surface_mm)
     shown = out.with_suffix(".png")
     with written_whole(out) as text, written_whole(shown) as drawn:
         text.write_text(model.as_json(), encoding="utf-8")
-        model_picture(grey, view, whole, model, pose, drawn)
+        model_picture(views[0].grey, view, whole, model, poses[0], drawn)
     print(f"{len(model.outline.steps)} outline points, {len(model.inner)} inner edges -> {out}, {shown}")
     for line in remarks(whole, model):
         print(line)
