@@ -85,14 +85,21 @@ def _offset(edges: FloatArray, points: FloatArray) -> FloatArray:
 
 
 def _raised(contour: Contour, apart: Sequence[FloatArray], models: Sequence[Model]) -> tuple[float, float]:
-    """How much higher a contour is than its one view assumed, and the sigma of that; least squares over the views."""
-    known = (SEEN_SIGMA_MM / max(contour.height_sigma_mm, 1e-6)) ** 2
-    total, weight = 0.0, known
-    for offset, other in zip(apart, models[1:], strict=True):
-        lean = other.away - models[0].away
-        if np.all(np.isfinite(offset)):
-            total, weight = total + float(offset @ lean), weight + float(lean @ lean)
-    return total / weight, SEEN_SIGMA_MM / float(np.sqrt(weight))
+    """How much higher a contour is than its one view assumed, and the sigma of that; least squares over the views.
+
+    All offsets are against the first view and share its error. The height stays between the surface and the top face.
+    """
+    known = max(contour.height_sigma_mm, 1e-6) ** -2
+    pairs = [(offset, other.away - models[0].away) for offset, other in zip(apart, models[1:], strict=True)
+             if np.all(np.isfinite(offset))]  # fmt: skip
+    if not pairs:
+        return 0.0, contour.height_sigma_mm
+    offsets, leans = (np.array(one) for one in zip(*pairs, strict=True))
+    shared = np.linalg.inv(np.eye(len(pairs)) + 1.0) / SEEN_SIGMA_MM**2
+    weight = known + float(np.sum(shared * (leans @ leans.T)))
+    raised = float(np.sum(shared * (leans @ offsets.T))) / weight
+    top = models[0].height_mm
+    return float(np.clip(raised, -contour.height_mm, max(top - contour.height_mm, 0.0))), weight**-0.5
 
 
 def _lifted(model: Model, raised: float, sigma: float, frame: GripFrame) -> Model:

@@ -202,6 +202,11 @@ def test_what_failed_is_not_kept(tmp_path: Path) -> None:
     assert list(tmp_path.iterdir()) == []
 
 
+def heard() -> None:
+    """A shell's background job ignores interrupts, and so would what it starts."""
+    signal.signal(signal.SIGINT, signal.SIG_DFL)
+
+
 def test_broken_off_it_goes_on_where_it_was(tmp_path: Path) -> None:
     """Interrupted, then killed, then let run: no finished point is done twice, and the table is whole."""
     folder, out = tmp_path / "small", tmp_path / "out"
@@ -211,7 +216,7 @@ def test_broken_off_it_goes_on_where_it_was(tmp_path: Path) -> None:
 
     def broken_off(with_signal: int, points: int) -> tuple[int, str, dict[str, int]]:
         process = subprocess.Popen([sys.executable, "-c", MAIN, *words, "--jobs", "1"], stderr=subprocess.PIPE,
-                                   start_new_session=True)
+                                   start_new_session=True, preexec_fn=heard)
         until = time.monotonic() + 120
         while len(list(out.glob("points/*.json"))) < points and time.monotonic() < until and process.poll() is None:
             time.sleep(0.005)

@@ -29,8 +29,8 @@ def test_heights_are_measured(outline, turns):
     """The drawn walls are straight: their edge is at the top."""
     given = views(outline, 25.0, turns)
     one, several = teach_views(given[:1], 0.0), teach_views(given, 0.0)
-    assert abs(several.outline.height_mm - 25.0) < 2.5
-    assert abs(several.outline.height_mm - 25.0) < abs(one.outline.height_mm - 25.0) + 0.5
+    assert abs(several.outline.height_mm - 25.0) < min(2.5, 0.5 * abs(one.outline.height_mm - 25.0))
+    assert abs(several.outline.height_mm - 25.0) < 2.5 * several.outline.height_sigma_mm
     assert several.outline.height_sigma_mm < one.outline.height_sigma_mm
 
 
