@@ -188,6 +188,17 @@ class Arm:
         return np.stack(rates, axis=-1)
 
 
+def gripper_arms(arm: ArmCell, tool: ToolCell) -> tuple[Arm, ...]:
+    """The arm with its tip at each gripper: the tool frame moved by the gripper's x, y, then turned by its yaw.
+
+    Without grippers, the arm with its tip where the tool's is.
+    """
+    moved = _turned(np.array(tool.grippers).reshape(-1, 3)[:, :2].T, np.radians(tool.yaw_deg)) + tool.offset_mm
+    tools = [tool.model_copy(update={"offset_mm": (x, y), "yaw_deg": tool.yaw_deg + yaw})
+             for (x, y), (_, _, yaw) in zip(moved.tolist(), tool.grippers, strict=True)]
+    return tuple(Arm(arm, one) for one in tools or [tool])
+
+
 def _fixed(values: ArrayLike) -> Floats:
     """A read-only array."""
     array = np.array(values, np.float64)

@@ -96,7 +96,7 @@ class ArmCell(Record):
 
 
 class ToolCell(Record):
-    """`[tool]`: where the tool tip is, and what comes down beside the part."""
+    """`[tool]`: where the tool tip is, what comes down beside a part, and its grippers: x, y, yaw in the tool frame."""
 
     offset_mm: Point = (0.0, 0.0)
     yaw_deg: Number = 0.0

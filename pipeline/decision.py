@@ -8,8 +8,9 @@ from numpy.typing import NDArray
 
 from pipeline.places import Filling
 from pipeline.policy import MOST_LOOKED_AT, Arrival, Choice, Lookahead, Picked, Policy
-from pipeline.replay import MOST_TRIES, Pick, Run, Setting
+from pipeline.replay import MOST_TRIES, Run, Setting
 from pipeline.scene import Scene, SceneBuilder
+from pipeline.trip import Pick
 from pipeline.watch import Watch
 
 FloatArray = NDArray[np.float64]
@@ -99,7 +100,8 @@ def builder_of(setting: Setting) -> SceneBuilder:
 def _led_to(scene: Scene, picked: Picked, pick: Pick) -> bool:
     one, hold, drop, _ = scene.grasp(picked.node)
     made = pick.cycle.hold
-    return (one.part.number == pick.part.number and np.array_equal(drop, pick.cycle.end_joints)
+    there = pick.set_down is not None or np.array_equal(drop, pick.cycle.end_joints)
+    return (one.part.number == pick.part.number and there
             and (hold.yaw, hold.elbow, hold.turn) == (made.yaw, made.elbow, made.turn))
 
 

@@ -13,10 +13,12 @@ import numpy as np
 
 from cameras.faults import InputFault
 from cameras.written import written_whole
-from pipeline.replay import Pick, Run, Setting
+from pipeline.replay import Run, Setting
 from pipeline.tables import FILE_UNITS, degrees, write_rows
 from pipeline.trajectory import sampled
+from pipeline.trip import Pick
 
+OF_PICK = ("decided", "there", "release_start", "release_end")
 SCHEMA = "plan.schema.json"
 LEAST_PERIOD_S, MOST_PERIOD_S = 0.0005, 1.0
 MOST_SAMPLES = 20_000_000
@@ -70,18 +72,18 @@ def plan_of(setting: Setting, run: Run) -> dict[str, Any]:
 
 def _pick(n: int, pick: Pick, setting: Setting, run: Run) -> dict[str, Any]:
     """One pick, with the keys and in the order of the schema."""
-    cycle, arm = pick.cycle, run.mover.arm
+    cycle, arm = pick.cycle, run.mover.grippers[pick.gripper]
     ends = run.mover.joints(cycle, np.array([cycle.grasp_start_s, cycle.grasp_end_s]))
     told: dict[str, Any] = {"pick": n, "part_no": pick.part.number, "part": pick.part.kind}
-    told |= {f"{name}_s": _told(getattr(cycle, f"{name}_s") if name != "decided" else pick.decided_s)
+    told |= {f"{name}_s": _told(getattr(pick if name in OF_PICK else cycle, f"{name}_s"))
              for name in ("decided", "depart", "met", "grasp_start", "grasp_end", "left", "there", "release_start",
                           "release_end")}  # fmt: skip
     told |= {f"{name}_counts": _counts(setting, getattr(cycle, f"{name}_s")) for name in ("grasp_start", "grasp_end")}
-    for name, joints in (("grasp_start", ends[0]), ("grasp_end", ends[1]), ("release", cycle.end_joints)):
+    for name, joints in (("grasp_start", ends[0]), ("grasp_end", ends[1]), ("release", pick.place_joints)):
         told |= dict(_posture(name, joints, arm.forward(joints)))
     return told | {"elbow": "left" if arm.elbow_of(ends[0]) else "right",
-                   "release_elbow": "left" if arm.elbow_of(cycle.end_joints) else "right", "place": pick.place,
-                   "slot": pick.slot + 1}
+                   "release_elbow": "left" if arm.elbow_of(pick.place_joints) else "right", "place": pick.place,
+                   "slot": pick.slot + 1, "gripper": pick.gripper + 1}
 
 
 def _posture(name: str, joints: Any, pose: Any) -> Iterator[tuple[str, float]]:
@@ -111,8 +113,8 @@ def _write_trajectory(path: Path, run: Run, period_s: float) -> None:
     t, joints = sampled(run, period_s)
     poses = run.mover.arm.forward(joints)
     carried = np.zeros(len(t))
-    for pick in run.picks:  # in hand from the end of the grasp dwell to the start of the release
-        first, last = np.searchsorted(t, [pick.cycle.grasp_end_s, pick.cycle.release_start_s])
+    for pick in run.picks:  # in hand from the end of the grasp dwell to the start of the release; the last picked
+        first, last = np.searchsorted(t, [pick.cycle.grasp_end_s, pick.release_start_s])
         carried[first:last] = pick.part.number
     poses[:, 3] = degrees(poses[:, 3])
     table = np.column_stack([t, joints * FILE_UNITS, poses, run.mover.belt.travel_mm(t), carried])

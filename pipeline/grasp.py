@@ -82,10 +82,10 @@ class Drops:
 
 
 class Grasping:
-    """What one arm in one cell can grip and where it can set it down."""
+    """What one gripper of an arm in one cell can grip and where it can set it down."""
 
-    def __init__(self, cell: Cell, arm: Arm, places: Iterable[Place]) -> None:
-        self.cell, self.arm = cell, arm
+    def __init__(self, cell: Cell, arm: Arm, places: Iterable[Place], gripper: int = 0) -> None:
+        self.cell, self.arm, self.gripper = cell, arm, gripper
         self.places = {place.name: place for place in places}
         margin = np.array([cell.motion.limit_margin_deg] * 4) * np.pi / 180
         margin[2] = cell.motion.limit_margin_mm
@@ -143,7 +143,7 @@ class Grasping:
                 usable = self._usable(joints)
                 if usable[self._inside].any():
                     at = poses[y, 0, :2] - (along[0] - xy_mm @ self.heading) * self.heading
-                    hold = Hold(at, float(yaws[y]), float(poses[y, 0, 2]), elbow, int(turn))
+                    hold = Hold(at, float(yaws[y]), float(poses[y, 0, 2]), elbow, int(turn), self.gripper)
                     found.append((hold, int(grips[y]), joints, usable))
                 else:
                     shortest.look(joints[self._inside])

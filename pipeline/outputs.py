@@ -64,6 +64,10 @@ def more_figures(seen: Seen, run: Run) -> dict[str, Any]:
         "grasp": [c.grasp_end_s - c.grasp_start_s for c in cycles], "up": [c.left_s - c.grasp_end_s for c in cycles],
         "across": [c.there_s - c.left_s for c in cycles], "set_down": [c.release_end_s - c.there_s for c in cycles],
     }  # fmt: skip
+    for k, pick in enumerate(run.picks):
+        if pick.set_down:
+            split["across"][k] += pick.set_down.there_s - pick.set_down.way.depart_s
+            split["set_down"][k] += pick.set_down.release_end_s - pick.set_down.there_s
     drift = seen.followed.drift
     return {
         "cell": seen.cell.name,

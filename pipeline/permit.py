@@ -24,23 +24,23 @@ ROUNDING = 1e-9
 
 @dataclass(frozen=True)
 class Permit:
-    """Checks cycles of one arm in one cell."""
+    """Checks cycles of one gripper of an arm in one cell."""
 
     mover: Mover
     grasping: Grasping
 
     def cycle(self, start: FloatArray, free_s: float, hold: Hold, drop_joints: FloatArray, from_mm: float = -np.inf,
-              until_s: float = np.inf) -> Cycle | Refusal:
+              until_s: float = np.inf, holds_on: bool = False) -> Cycle | Refusal:
         """The soonest cycle of a grasp by an arm at rest at start (4,) from free_s on, or why none can be carried out.
 
         from_mm: how far along the part must be before it is met. The ways to the part and to the slot are tried in
-        turn, each for itself.
+        turn, each for itself. holds_on: see Mover.pick.
         """
         met_from = self.mover.passes(hold, from_mm) if np.isfinite(from_mm) else -np.inf
 
         def made(out: int, back: int) -> Cycle | Refusal:
             try:
-                cycle = self.mover.pick(start, free_s, hold, drop_joints, met_from, (out, back))
+                cycle = self.mover.pick(start, free_s, hold, drop_joints, met_from, (out, back), holds_on)
             except MotionFault as fault:
                 return Refusal("joint_limit", str(fault))
             return Refusal("too_late", "the arm can't meet it inside the window") if cycle is None else cycle
@@ -161,6 +161,13 @@ class Permit:
     def transfer_refused(self, way: Transfer) -> Refusal | None:
         """Why a way without a part may not be taken, or None."""
         return self._near(self.mover.transfer_joints(way, _times(way.depart_s, way.end_s)))
+
+    def set_down_refused(self, way: Transfer) -> Refusal | None:
+        """The same of a way from slot to slot, which has to keep J3's limits as well."""
+        j3 = self.mover.transfer_joints(way, _times(way.depart_s, way.end_s))[:, 2]
+        if j3.min() < self.grasping.lower[2] - 1e-6 or j3.max() > self.grasping.upper[2] + 1e-6:
+            return Refusal("joint_limit", f"J3 would go from {j3.min():.1f} to {j3.max():.1f} mm")
+        return self.transfer_refused(way)
 
     def _near(self, joints: FloatArray) -> Refusal | None:
         if not self.grasping.cell.keepouts:

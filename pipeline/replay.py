@@ -1,4 +1,7 @@
-"""The replay: the clock, what is known when, what the arm does, what becomes of each part."""
+"""The replay: the clock, what is known when, what the arm does, what becomes of each part.
+
+With several grippers a pick may begin a trip of several (see `pipeline.trip`).
+"""
 
 import time
 from collections.abc import Callable, Mapping
@@ -8,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cameras.recording import Recording
-from pipeline.arm import Arm
+from pipeline.arm import Arm, gripper_arms
 from pipeline.belt import Belt
 from pipeline.cell import Cell
 from pipeline.follow import Part
@@ -18,8 +21,9 @@ from pipeline.motion.across import SHAPES
 from pipeline.motion.cycle import Cycle, Mover, Transfer
 from pipeline.permit import Permit
 from pipeline.places import Filling, Place
-from pipeline.policy import Arrival, Picked, Policy
+from pipeline.policy import Arrival, Policy
 from pipeline.scene import SceneBuilder
+from pipeline.trip import Chosen, Pick, Trip, alone, closed, held_on
 from pipeline.watch import Watch
 
 FloatArray = NDArray[np.float64]
@@ -28,21 +32,6 @@ MOST_TRIES = 24  # grasps tried at one moment before the arm waits for news
 NEWS_S = 1e-6
 RETRY_S, MOST_RETRIES = 0.1, 100
 NEAR_MM = 60.0  # so near a ready pose the arm stays where it is
-
-
-@dataclass(frozen=True)
-class Pick:
-    """One pick as it was carried out, and the choice that led to it."""
-
-    part: Part
-    decided_s: float
-    cycle: Cycle
-    place: str
-    slot: int
-    place_pose: FloatArray
-    picked: Picked
-    looked_at: int
-    decide_s: float
 
 
 @dataclass(frozen=True)
@@ -66,7 +55,8 @@ class Run:
 class Setting:
     """All that stays the same while orders are tried: cell, recording, its parts, and what follows from them.
 
-    outlines: of each kind, (k, 2) mm in the grip frame or the radius of a disc.
+    outlines: of each kind, (k, 2) mm in the grip frame or the radius of a disc. grasping: of the first gripper;
+    graspings: of each.
     """
 
     cell: Cell
@@ -77,15 +67,18 @@ class Setting:
     belt: Belt = field(init=False)
     mover: Mover = field(init=False)
     grasping: Grasping = field(init=False)
+    graspings: tuple[Grasping, ...] = field(init=False)
     legs: Legs = field(init=False)
 
     def __post_init__(self) -> None:
         """Work out what follows."""
         arm = Arm(self.cell.arm, self.cell.tool)
         belt = Belt(self.recording.times_s, self.recording.counts, self.cell.belt)
-        mover = Mover(self.cell, arm, belt)
-        grasping = Grasping(self.cell, arm, tuple(Place.of(place) for place in self.cell.places))
-        for name, value in (("belt", belt), ("mover", mover), ("grasping", grasping), ("legs", Legs(mover))):
+        grippers = gripper_arms(self.cell.arm, self.cell.tool)
+        mover, places = Mover(self.cell, arm, belt, grippers), tuple(Place.of(place) for place in self.cell.places)
+        graspings = tuple(Grasping(self.cell, one, places, k) for k, one in enumerate(grippers))
+        for name, value in (("belt", belt), ("mover", mover), ("grasping", graspings[0]), ("graspings", graspings),
+                            ("legs", Legs(mover))):
             object.__setattr__(self, name, value)
         self._time_lifts()
 
@@ -101,9 +94,12 @@ class Setting:
 
 
 def replay(setting: Setting, policy: Policy, name: str, horizon: int,
-           tick: Callable[[float], None] = lambda now: None) -> Run:
-    """Replay a recording under one policy. tick is told the time the replay has come to."""
-    return _Clock(setting, policy, name, horizon, tick).run()
+           tick: Callable[[float], None] = lambda now: None, at_once: int = 1) -> Run:
+    """Replay a recording under one policy. tick is told the time the replay has come to.
+
+    at_once: most parts the arm holds together; no more than there are grippers, and one on a tray.
+    """
+    return _Clock(setting, policy, name, horizon, tick, at_once).run()
 
 
 def replay_ahead(setting: Setting, policy: Policy, name: str, horizon: int,
@@ -118,6 +114,20 @@ def replay_ahead(setting: Setting, policy: Policy, name: str, horizon: int,
     return replace(plain, notes=(note,))
 
 
+def replay_trips(setting: Setting, policy: Policy, name: str, horizon: int, single: Run) -> Run:
+    """Replay with all grippers; where `single`, with the first one alone, picks more parts or weight, that run, and a
+    note in it."""
+    if setting.cell.belt is None:
+        return replace(single, notes=(*single.notes, "a tray is emptied with the first gripper alone"))
+    trips = replay(setting, policy, name, horizon, at_once=len(setting.graspings))
+    if _worth(setting, trips) >= _worth(setting, single) - 1e-9 and len(trips.picks) >= len(single.picks):
+        return trips
+    note = (f"with {len(setting.graspings)} grippers {len(trips.picks)} parts of weight {_worth(setting, trips):g} "
+            f"would be picked, with the first one alone {len(single.picks)} of {_worth(setting, single):g}: this run "
+            "is with the first one alone")
+    return replace(single, notes=(*single.notes, note))
+
+
 def _worth(setting: Setting, run: Run) -> float:
     return sum(setting.cell.parts[pick.part.kind].weight for pick in run.picks)
 
@@ -126,20 +136,22 @@ class _Clock:
     """The run of one replay."""
 
     def __init__(self, setting: Setting, policy: Policy, name: str, horizon: int,
-                 tick: Callable[[float], None]) -> None:
+                 tick: Callable[[float], None], at_once: int) -> None:
         self.set, self.policy, self.name, self.horizon, self.tick = setting, policy, name, horizon, tick
         self.watch = Watch(setting.cell, setting.recording, setting.belt, setting.parts)
-        self.builder = SceneBuilder(setting.cell, self.watch, setting.grasping, setting.legs, setting.outlines,
-                                    setting.least_score)
-        self.permit = Permit(setting.mover, setting.grasping)
+        used = setting.graspings[:1 if setting.cell.belt is None else at_once]
+        self.builders = [SceneBuilder(setting.cell, self.watch, grasping, setting.legs, setting.outlines,
+                                      setting.least_score) for grasping in used]
+        self.permits = tuple(Permit(setting.mover, grasping) for grasping in used)
         self.filling = Filling(tuple(setting.grasping.places.values()))
-        self.arm = setting.mover.arm
+        self.arm = setting.grasping.arm
         self.joints = np.array(self.arm.home)
         self.waits: list[Transfer] = []
         self.picks: list[Pick] = []
         self.tried: dict[int, Refusal] = {}
         self.decide_s: list[float] = []
         self.turned_down = False
+        self.free_s = -np.inf
 
     def run(self) -> Run:
         """From the first frame until nothing is left to pick."""
@@ -148,20 +160,21 @@ class _Clock:
         tries = 0  # since anything new was known or done
         while np.isfinite(now) and tries < MOST_RETRIES:
             self.tick(now)
-            pick = self._decide(now)
+            one = self._decide(now, self.joints, now)
+            pick = one.pick if one else None
             news, later = self.watch.next_news(now), self.watch.next_frame(now)
             tries = 0 if pick or np.isfinite(later) else tries + 1
             idle = pick is None and not self.turned_down and np.isfinite(later)
             wait = self._get_ready(now) if idle else None
             if wait is not None:
                 now = wait.end_s
-            elif pick is None:  # what can't be had now may be had a little farther on
+            elif one is None or pick is None:  # what can't be had now may be had a little farther on
                 now = min(later, now + RETRY_S) if self.turned_down else later
             elif pick.cycle.depart_s > news + NEWS_S:  # nothing is under way yet: decide anew with what comes
                 now = min(news, now + RETRY_S) if self.turned_down else news
             else:
-                now = self._carry_out(pick)
-        last = max(float(self.set.recording.times_s[-1]), self.picks[-1].cycle.release_end_s if self.picks else 0.0)
+                now = self._carry_out(one)
+        last = max(float(self.set.recording.times_s[-1]), self.free_s)
         return Run(self.set.parts, tuple(self.picks), self._fates(), self.name, self.set.mover, start, last,
                    self._home(), tuple(self.decide_s), waits=tuple(self.waits))
 
@@ -172,7 +185,7 @@ class _Clock:
             return None
         for shape in SHAPES:
             way = self.set.mover.transfer(self.joints, now, ready, shape)
-            if self.permit.transfer_refused(way) is None:
+            if self.permits[0].transfer_refused(way) is None:
                 self.waits.append(way)
                 self.joints = way.end_joints
                 return way
@@ -187,36 +200,53 @@ class _Clock:
         height = max(motion.travel_mm, motion.clear_height_mm)
         return self.set.grasping.above(at, height, self.arm.home)
 
-    def _decide(self, now: float) -> Pick | None:
-        """The next pick as it would be carried out."""
+    def _decide(self, now: float, start: FloatArray, free_s: float, gripper: int = 0) -> Chosen | None:
+        """The next pick as it would be carried out from rest at start (4,), from what is known now."""
         banned: set[tuple[int, int]] = set()
         self.turned_down = False
         begun = time.perf_counter()
         for _ in range(MOST_TRIES):
-            scene = self.builder.scene(now, self.joints, self.filling, self.horizon, banned)
+            scene = self.builders[gripper].scene(now, start, self.filling, self.horizon, banned)
             picked = self.policy.choose(scene.choice) if scene else None
             if scene is None or picked is None:
                 break
             one, hold, drop_joints, drop_pose = scene.grasp(picked.node)
             spent = time.perf_counter() - begun
-            cycle = self.permit.cycle(self.joints, now, hold, drop_joints, scene.met_from_mm(picked.node),
-                                      float(self.watch.until_s[one.row]))
+            asked = free_s, scene.met_from_mm(picked.node), float(self.watch.until_s[one.row])
+            cycle = self.permits[gripper].cycle(start, asked[0], hold, drop_joints, *asked[1:])
             if isinstance(cycle, Cycle):
                 self.decide_s.append(spent)
                 self.turned_down = bool(banned)
-                return Pick(one.part, now, cycle, one.place, one.slot, drop_pose, picked, len(scene.candidates), spent)
-            self.tried[one.row] = cycle
+                pick = Pick(one.part, now, cycle, one.place, one.slot, drop_pose, picked, len(scene.candidates), spent)
+                return Chosen(pick, scene.grip(picked.node), *asked)
+            if gripper == 0:
+                self.tried[one.row] = cycle
             banned |= scene.alike(picked.node)
         self.turned_down = bool(banned)
         return None
 
-    def _carry_out(self, pick: Pick) -> float:
-        """Let the pick happen; the time the arm is free again."""
-        self.picks.append(pick)
-        self.filling.fill(pick.place)
-        self.watch.gripped[pick.part.number - 1] = True
-        self.joints = pick.cycle.end_joints
-        return pick.cycle.release_end_s
+    def _carry_out(self, one: Chosen) -> float:
+        """Let the pick happen, and those that follow before anything is set down; the time the arm is free again."""
+        trip: Trip | None = alone(one)
+        while trip is not None:
+            done, last = trip, trip.chosen[-1].pick
+            self.filling.fill(last.place)
+            self.watch.gripped[last.part.number - 1] = True
+            trip = self._longer(trip) if len(trip.chosen) < len(self.permits) else None
+        self.picks += done.picks
+        self.joints, self.free_s = done.end_joints, done.end_s
+        return self.free_s
+
+    def _longer(self, trip: Trip) -> Trip | None:
+        """The trip with another pick before anything is set down; None where there is none, or it loses by it."""
+        gripper = len(trip.chosen)
+        kept = held_on(trip.chosen[-1], self.permits[gripper - 1])
+        if kept is None:
+            return None
+        cycle = kept.pick.cycle
+        after = self._decide(cycle.grasp_end_s, cycle.end_joints, cycle.release_end_s, gripper)
+        longer = closed((*trip.chosen[:-1], kept, after), self.permits) if after else None
+        return longer if longer and longer.rate >= trip.rate else None
 
     def _fates(self) -> tuple[Refusal | None, ...]:
         picked = {pick.part.number for pick in self.picks}
@@ -230,7 +260,7 @@ class _Clock:
             return Refusal("wrong_side", "lies on its wrong side")
         if part.score < self.set.least_score:
             return Refusal("low_score", f"score {part.score:.2f}, asked for {self.set.least_score:.2f}")
-        refusal = self.builder.refusals.get(k) or self.builder.crowded.get(k)
+        refusal = self.builders[0].refusals.get(k) or self.builders[0].crowded.get(k)
         if refusal is not None:
             return refusal
         tried = self.tried.get(k)
@@ -242,6 +272,6 @@ class _Clock:
         """The way home after the last pick; None where there is none past the keep-outs."""
         if not self.picks:
             return None
-        free = max([self.picks[-1].cycle.release_end_s, *(way.end_s for way in self.waits)])
+        free = max([self.free_s, *(way.end_s for way in self.waits)])
         ways = (self.set.mover.home(self.joints, free, shape) for shape in SHAPES)
-        return next((way for way in ways if self.permit.transfer_refused(way) is None), None)
+        return next((way for way in ways if self.permits[0].transfer_refused(way) is None), None)

@@ -49,6 +49,12 @@ class Scene:
         elbow, end = one.holds.elbow[one.grasps.hold], one.grasps.drop_joints[:, 1] > 0
         return {(one.row, int(r)) for r in np.flatnonzero((elbow == elbow[row]) & (end == end[row]))}
 
+    def grip(self, node: int) -> int:
+        """Which of its kind's grips a node uses."""
+        k, row = self.node_of[node].tolist()
+        one = self.candidates[k]
+        return int(one.holds.grip[one.grasps.hold[row]])
+
     def met_from_mm(self, node: int) -> float:
         """How far along the part must be before it can be met with this grasp; -inf where anywhere will do."""
         k, row = self.node_of[node].tolist()

@@ -21,7 +21,7 @@ from pipeline.finding import calibration_of, found_in
 from pipeline.follow import Followed, follow
 from pipeline.map_share import with_map_share
 from pipeline.policy import MOST_LOOKED_AT, POLICIES, Policy, policy_named
-from pipeline.replay import LEAST_SCORE, Run, Setting, replay, replay_ahead
+from pipeline.replay import LEAST_SCORE, Run, Setting, replay, replay_ahead, replay_trips
 
 FloatArray = NDArray[np.float64]
 Rows = Callable[[Iterable[int]], Iterable[int]]
@@ -126,9 +126,9 @@ def run(setting: Setting, order: str, horizon: int, tick: Callable[[float], None
     """Replay under one order. Raises InputFault for an order there is none of."""
     policy = policy_of(setting, order, budget_ms)
     if order == "lookahead":
-        most = MOST_ON_TRAY if setting.cell.belt is None else MOST_LOOKED_AT
-        return replay_ahead(setting, policy, order, min(horizon, most), tick)
-    return replay(setting, policy, order, horizon, tick)
+        horizon = min(horizon, MOST_ON_TRAY if setting.cell.belt is None else MOST_LOOKED_AT)
+    single = (replay_ahead if order == "lookahead" else replay)(setting, policy, order, horizon, tick)
+    return single if len(setting.graspings) == 1 else replay_trips(setting, policy, order, horizon, single)
 
 
 def _read(cell: Cell, folder: Path, source: Source) -> Recording:

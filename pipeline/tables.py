@@ -12,8 +12,9 @@ from numpy.typing import ArrayLike, NDArray
 
 from cameras.recording import Recording
 from pipeline.motion.across import TURNING
-from pipeline.replay import Pick, Run
+from pipeline.replay import Run
 from pipeline.trajectory import sampled
+from pipeline.trip import Pick
 
 FloatArray = NDArray[np.float64]
 
@@ -53,19 +54,24 @@ def write_parts(path: Path, run: Run, recording: Recording) -> None:
 
 
 def write_picks(path: Path, run: Run) -> None:
-    """picks.csv: a row for every pick, pose and joints at grasp start and at release."""
-    write_rows(path, PICKS, (_pick_row(n, pick, run) for n, pick in enumerate(run.picks, 1)))
+    """picks.csv: a row for every pick, pose and joints at grasp start and at release; which of several grippers."""
+    rows = (_pick_row(n, pick, run) for n, pick in enumerate(run.picks, 1))
+    if len(run.mover.grippers) == 1:
+        write_rows(path, PICKS, rows)
+    else:
+        told = ([*row, pick.gripper + 1] for row, pick in zip(rows, run.picks, strict=True))
+        write_rows(path, f"{PICKS},gripper", told)
 
 
 def _pick_row(n: int, pick: Pick, run: Run) -> list[object]:
-    cycle, arm = pick.cycle, run.mover.arm
+    cycle, arm = pick.cycle, run.mover.grippers[pick.gripper]
     joints = run.mover.joints(cycle, np.array([cycle.grasp_start_s]))[0]
-    pose, drop = arm.forward(joints), arm.forward(cycle.end_joints)
-    times = (pick.decided_s, cycle.grasp_start_s, cycle.grasp_end_s, cycle.release_start_s, cycle.release_end_s)
+    pose, drop = arm.forward(joints), arm.forward(pick.place_joints)
+    times = (pick.decided_s, cycle.grasp_start_s, cycle.grasp_end_s, pick.release_start_s, pick.release_end_s)
     return [n, pick.part.number, pick.part.kind, *_seconds(times), *_mm(pose[:3]), f"{degrees(pose[3]):.4f}",
             *_joints(joints), "left" if arm.elbow_of(joints) else "right", pick.place, pick.slot + 1, *_mm(drop[:3]),
-            f"{degrees(drop[3]):.4f}", *_joints(cycle.end_joints),
-            *_seconds((cycle.depart_s, cycle.met_s, cycle.left_s, cycle.there_s))]
+            f"{degrees(drop[3]):.4f}", *_joints(pick.place_joints),
+            *_seconds((cycle.depart_s, cycle.met_s, cycle.left_s, pick.there_s))]
 
 
 def write_trajectory(path: Path, run: Run) -> None:
@@ -81,7 +87,7 @@ def summary(run: Run, horizon: int, find_s: Sequence[float], more: dict[str, Any
     """What summary.json holds."""
     missed = Counter(fate.reason for fate in run.fates if fate)
     duration = run.end_s - run.start_s
-    moving = sum(pick.cycle.release_end_s - pick.cycle.depart_s for pick in run.picks)
+    moving = sum(pick.busy_s for pick in run.picks)
     moving += sum(way.end_s - way.depart_s for way in run.waits)
     travel = joint_travel(run)
     return {
@@ -110,7 +116,8 @@ def joint_travel(run: Run) -> FloatArray:
         travel += [out.travel() + back.travel() for out, back in zip(cycle.out, cycle.back, strict=True)]
         t = np.linspace(cycle.met_s, cycle.left_s, 9)
         travel += np.abs(np.diff(run.mover.joints_on(cycle.hold, t)[:, TURNING], axis=0)).sum(axis=0)
-    for way in (*run.waits, *([run.home] if run.home else [])):
+    set_downs = (pick.set_down.way for pick in run.picks if pick.set_down)
+    for way in (*run.waits, *set_downs, *([run.home] if run.home else [])):
         travel += [curve.travel() for curve in way.across]
     return travel
 

@@ -14,8 +14,9 @@ from numpy.typing import NDArray
 from pipeline.decision import Decision, Sequence, builder_of
 from pipeline.places import Filling
 from pipeline.policy import MOST_LOOKED_AT, Picked
-from pipeline.replay import Pick, Run, Setting
+from pipeline.replay import Run, Setting
 from pipeline.tray_order import Tray, TrayOrder, followed
+from pipeline.trip import Pick
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -77,7 +78,7 @@ def whole_tray(setting: Setting, by_travel: bool, horizon: int, run: Run) -> Who
     number_of = [scene.grasp(node)[0].part.number for node in range(len(scene.choice.nodes))]
     node_of = np.array([number_of.index(int(number)) for number in tray.numbers])
     chosen = Sequence(tuple(node_of[rows].tolist()), float(tray.weights[rows].sum()),
-                      tuple(pick.cycle.release_end_s for pick in picks), order.travel_s)
+                      tuple(pick.release_end_s for pick in picks), order.travel_s)
     others = sorted(_others(tray, order, node_of, scene.choice.now_s), key=lambda one: (-one.weight, one.end_s))
     picked = Picked(chosen.nodes[0], chosen.nodes, chosen.weight, chosen.end_s, float(tray.weights.sum()),
                     scene.choice.now_s + order.bound_s if order.bound_s else -np.inf, first.picked.states)
@@ -142,7 +143,7 @@ def _join(graph: "nx.DiGraph[str]", decision: WholeTray) -> None:
         if row >= 0:  # where the arm stands when it has been set down
             used[tray.queue[row]] += 1
             ways = np.arange(*tray.slots[tray.queue[row], used[tray.queue[row]] - 1 : used[tray.queue[row]] + 1])
-            end = decision.picks[turn - 1].cycle.end_joints
+            end = decision.picks[turn - 1].place_joints
             at, left[row] = int(ways[np.abs(tray.rests[ways] - end).sum(axis=1).argmin()]), False
         takes, travel = _takes(tray, at, used)
         able = np.isfinite(takes) & ~(tray.after.any(axis=1) if row < 0 else tray.after[row])
@@ -158,7 +159,7 @@ def told_tray(decision: WholeTray) -> dict[str, Any]:
     """The order in plain values, as `decision.told` has them; and what the gap is a share of."""
     chosen, now = decision.chosen, decision.scene.choice.now_s
     order = [{"pick": n, "part_no": pick.part.number, "part": pick.part.kind, "elbow": ELBOWS[pick.cycle.hold.elbow],
-              "place": pick.place, "slot": pick.slot + 1, "done_s": _plain(pick.cycle.release_end_s)}
+              "place": pick.place, "slot": pick.slot + 1, "done_s": _plain(pick.release_end_s)}
              for n, pick in enumerate(decision.picks, 1)]  # fmt: skip
     others = []
     for one in decision.others:

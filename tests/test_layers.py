@@ -36,7 +36,7 @@ pipeline.order pipeline.permit pipeline.watch pipeline.tray_steps
 pipeline.tray_order pipeline.candidate
 pipeline.policy
 pipeline.trays
-pipeline.scene
+pipeline.scene pipeline.trip
 pipeline.replay
 pipeline.trajectory pipeline.study pipeline.remedy
 pipeline.fit pipeline.trade_cycle pipeline.reach pipeline.score pipeline.budget

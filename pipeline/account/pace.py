@@ -29,7 +29,7 @@ def pace_of(run: Run, setting: Setting) -> Pace:
     duration = run.end_s - run.start_s
     span = min(SPAN_S, max(duration, 1e-6))
     times = np.linspace(run.start_s, run.end_s, POINTS)
-    released = np.array([pick.cycle.release_end_s for pick in run.picks])
+    released = np.array([pick.release_end_s for pick in run.picks])
     entered = np.array([window.enters_s for window in windows_of(setting)])
     return Pace(times, _rate(released, times, span, run.start_s), _rate(entered, times, span, run.start_s),
                 60 * len(released) / duration if duration > 0 else 0.0, span)

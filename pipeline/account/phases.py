@@ -32,10 +32,32 @@ def phases_of(run: Run) -> list[Phase]:
     for k, pick in enumerate(run.picks):
         edges = _edges(pick.cycle)
         told += _waiting(run, free, edges[0], k)
-        names = ("up", "across", "down", "dwell", "up", "across", "down", "release")
+        names = ("up", "across", "down", "dwell", "up", "across", "up" if pick.set_down else "down", "release")
         told += [Phase(name, a, b, k) for name, a, b in zip(names, edges, edges[1:], strict=False)]
         free = edges[-1]
+        if pick.set_down is None:  # the end of a trip: those held before it are set down, the last picked first
+            told += [phase for j in _held_before(run, k) for phase in _set_down(run, j)]
+            free = run.picks[_first_of_trip(run, k)].release_end_s
     return [phase for phase in told if phase.end_s > phase.start_s]
+
+
+def _first_of_trip(run: Run, last: int) -> int:
+    """Index of the first pick of the trip that ends with pick `last`."""
+    while last and run.picks[last - 1].set_down:
+        last -= 1
+    return last
+
+
+def _held_before(run: Run, last: int) -> range:
+    return range(last - 1, _first_of_trip(run, last) - 1, -1)
+
+
+def _set_down(run: Run, k: int) -> list[Phase]:
+    """How pick k, held on to, is set down."""
+    down = run.picks[k].set_down
+    edges = down.edges if down else ()
+    names = ("up", "across", "down", "release")
+    return [Phase(name, a, b, k) for name, a, b in zip(names, edges, edges[1:], strict=False)]
 
 
 def _waiting(run: Run, start_s: float, end_s: float, pick: int) -> list[Phase]:
@@ -49,8 +71,13 @@ def _waiting(run: Run, start_s: float, end_s: float, pick: int) -> list[Phase]:
 
 
 def split_of(run: Run) -> NDArray[np.float64]:
-    """(picks, 8) seconds that each cycle spends on what SPLIT names."""
-    return np.diff([_edges(pick.cycle) for pick in run.picks], axis=1) if run.picks else np.zeros((0, len(SPLIT)))
+    """(picks, 8) seconds that each cycle spends on what SPLIT names, with the setting down of a part held on to."""
+    split = np.diff([_edges(pick.cycle) for pick in run.picks], axis=1) if run.picks else np.zeros((0, len(SPLIT)))
+    for row, pick in zip(split, run.picks, strict=True):
+        if pick.set_down:
+            row[4], row[6] = row[4] + row[6], 0.0
+            row[4:] += np.diff(pick.set_down.edges)
+    return split
 
 
 def _edges(cycle: Cycle) -> list[float]:

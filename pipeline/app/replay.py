@@ -10,8 +10,9 @@ from pipeline.app.shown import progress, show_table
 
 if TYPE_CHECKING:
     from pipeline.decision import Decision
-    from pipeline.replay import Pick, Run, Setting
+    from pipeline.replay import Run, Setting
     from pipeline.study import Seen
+    from pipeline.trip import Pick
 
 
 TOLD = 8  # parts of an order told on one line
@@ -93,7 +94,7 @@ def plan(
     figures = write_run(out, seen, chosen, done, horizon, True, detections is None and located is None)
     show_table("Plan", ("pick", "part", "kind", "x mm", "y mm", "grip s", "release s", "to", "elbow"),
                [(n, pick.part.number, pick.part.kind, *(f"{v:.0f}" for v in _gripped_mm(chosen, pick)),
-                 f"{pick.cycle.grasp_start_s:.2f}", f"{pick.cycle.release_start_s:.2f}",
+                 f"{pick.cycle.grasp_start_s:.2f}", f"{pick.release_start_s:.2f}",
                  f"{pick.place} {pick.slot + 1}",
                  ("right", "left")[pick.cycle.hold.elbow]) for n, pick in enumerate(done.picks, 1)])  # fmt: skip
     if decision is not None:

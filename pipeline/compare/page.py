@@ -95,7 +95,7 @@ def _card(one: Tried, lasts_s: float, most: int, cycle_s: float) -> Markup:
 def _so_far(one: Tried, lasts_s: float, most: int) -> Markup:
     """Picks over time, and parts that had entered the window by then."""
     entered = np.array([max(window.enters_s, window.known_s) for window in windows_of(one.setting)])
-    released = np.array([pick.cycle.release_end_s for pick in one.run.picks])
+    released = np.array([pick.release_end_s for pick in one.run.picks])
     frame = Frame((0.0, lasts_s), (0.0, float(most)))
     lines = []
     for k, events in enumerate((released, entered)):

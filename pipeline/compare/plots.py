@@ -32,7 +32,7 @@ def _picks(figure: Figure, tried: Sequence[Tried]) -> None:
     """Picks so far over time; the steeper, the better."""
     ax = axes_of(figure.subplots())
     for k, one in enumerate(tried):
-        released = np.sort([pick.cycle.release_end_s for pick in one.run.picks]) - one.run.start_s
+        released = np.sort([pick.release_end_s for pick in one.run.picks]) - one.run.start_s
         times = np.concatenate([[0.0], released, [one.run.end_s - one.run.start_s]])
         counts = np.concatenate([[0], np.arange(1, len(released) + 1), [len(released)]])
         ax.step(times, counts, where="post", lw=1.5, ls=DASHES[k % 4], color=COLOURS[k % 6], label=_shown(one.label))

@@ -53,7 +53,7 @@ def compare(
 def figures_of(done: Run, horizon: int, seen: Seen) -> dict[str, Any]:
     """The figures of one run."""
     choices = choices_of(done)
-    busy_s = sum(pick.cycle.release_end_s - pick.cycle.depart_s for pick in done.picks)
+    busy_s = sum(pick.busy_s for pick in done.picks)
     return summary(done, horizon, seen.find_s.tolist(), {
         "waiting_s": round(max(done.end_s - done.start_s - busy_s, 0.0), 3),
         "gap": float(np.mean(choices.gaps)) if choices.gaps else None,

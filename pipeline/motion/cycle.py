@@ -27,22 +27,27 @@ FloatArray = NDArray[np.float64]
 SETTLED_S = 1e-7
 SETTLING = 40
 LEAST_SPARE = 0.2
+STOP_S, ABOVE_MM = 0.05, 0.01  # an arm that holds on stops so soon after leaving a part, so far above the gate
 
 
 @dataclass(frozen=True)
 class Hold:
-    """The tool on a part: tip (x, y at counts 0, yaw), height in the cell frame, elbow and whole turns of J4."""
+    """A gripper on a part: tip (x, y at counts 0, yaw), height in the cell frame, elbow and whole turns of J4."""
 
     at_mm: FloatArray
     yaw: float
     z_mm: float
     elbow: int
     turn: int
+    gripper: int = 0
 
 
 @dataclass(frozen=True)
 class Cycle:
-    """A pick as it is carried out. Times in s; joints (4,) rad and mm; curves of J1, J2, J4 and of the tip's height."""
+    """A pick as it is carried out. Times in s; joints (4,) rad and mm; curves of J1, J2, J4 and of the tip's height.
+
+    Where the arm holds the part and goes on to another one, it ends at rest above the gate: release takes no time.
+    """
 
     hold: Hold
     depart_s: float
@@ -73,20 +78,24 @@ class Transfer:
 
 
 class Mover:
-    """Motion of one arm in one cell, along one belt."""
+    """Motion of one arm in one cell, along one belt. grippers: the arm with its tip at each of them; else the tool's.
 
-    def __init__(self, cell: Cell, arm: Arm, belt: Belt) -> None:
+    A gripper's place changes which joints bring it to a pose, not how joints move, nor how high the tip is.
+    """
+
+    def __init__(self, cell: Cell, arm: Arm, belt: Belt, grippers: tuple[Arm, ...] = ()) -> None:
         self.arm, self.belt, self.motion = arm, belt, cell.motion
+        self.grippers = grippers or (arm,)
         self.window_mm = cell.belt.window_mm if cell.belt else None
         self.singular = float(np.radians(cell.motion.singularity_deg))
         self.across = Across(arm, self.singular)
         self._lift_limits = lift_limits(cell, arm)
         self.lift = lru_cache(maxsize=512)(self._lift)
 
-    def _lift(self, from_mm: float, to_mm: float) -> Lift:
+    def _lift(self, from_mm: float, to_mm: float, stays_up: bool = False) -> Lift:
         clear = self.motion.clear_height_mm
-        return Lift(from_mm, to_mm, clear, max(clear, to_mm + self.motion.approach_mm), self.motion.travel_mm,
-                    self._lift_limits)
+        return Lift(from_mm, to_mm, clear, clear if stays_up else max(clear, to_mm + self.motion.approach_mm),
+                    self.motion.travel_mm, self._lift_limits)
 
     def lift_from(self, joints: FloatArray, to_mm: float) -> Lift:
         """The lift from rest at joints (4,) to a height."""
@@ -97,7 +106,14 @@ class Mover:
         poses = np.empty((len(t), 4))
         poses[:, :2] = hold.at_mm + self.belt.shift_mm(t)
         poses[:, 2], poses[:, 3] = hold.z_mm, hold.yaw
-        return turned(self.arm, self.arm.inverse(poses)[:, hold.elbow], hold.yaw, hold.turn)
+        arm = self.grippers[hold.gripper]
+        return turned(arm, arm.inverse(poses)[:, hold.elbow], hold.yaw, hold.turn)
+
+    def ready_after(self, cycle: Cycle) -> FloatArray:
+        """Joints (4,) at rest above the gate where the arm stops soon after it has left the part; NaN out of reach."""
+        ready: FloatArray = self.joints_on(cycle.hold, np.array([cycle.left_s + STOP_S]))[0]
+        ready[2] = quill(self.arm, max(self.motion.travel_mm, self.motion.clear_height_mm) + ABOVE_MM, ready[3])
+        return ready
 
     def state_on(self, hold: Hold, t: float) -> State | None:
         """Position, speed and acceleration of J1, J2, J4 while the tool is on the part; None out of reach."""
@@ -113,10 +129,11 @@ class Mover:
         return state
 
     def pick(self, start: FloatArray, free_s: float, hold: Hold, place_joints: FloatArray, met_from_s: float = -np.inf,
-             shapes: tuple[int, int] = (TOGETHER, TOGETHER)) -> Cycle | None:
+             shapes: tuple[int, int] = (TOGETHER, TOGETHER), holds_on: bool = False) -> Cycle | None:
         """The soonest pick of a part by an arm at rest at start (4,) from free_s on; None where it can't be met.
 
         met_from_s: the part is met no sooner. shapes: of the ways to the part and to the slot, see Across.between.
+        holds_on: the part is kept in the gripper, and place_joints are above the gate.
         Raises MotionFault where ruckig refuses a move.
         """
         lift = self.lift_from(start, hold.z_mm)
@@ -132,18 +149,20 @@ class Mover:
         down = lift.curve(meeting.above_s(lift))
         grasp_start = meeting.depart_s + down.end_s
         grasp_end = grasp_start + self.motion.grasp_s
-        leaving = self._leave(hold, grasp_end, place_joints, shapes[1])
+        lift = self.lift(round(hold.z_mm, 6), round(float(self.arm.forward(place_joints)[2]), 6), holds_on)
+        leaving = self._leave(hold, grasp_end, place_joints, lift, shapes[1])
         if leaving is None:
             return None
-        lift = self.lift(round(hold.z_mm, 6), round(float(self.arm.forward(place_joints)[2]), 6))
         up = lift.curve(leaving.above_s(lift))
         left = grasp_end + leaving.rise_s
-        release = grasp_end + up.end_s
+        there = left + leaving.move.duration
+        release = max(grasp_end + up.end_s, there) if holds_on else grasp_end + up.end_s
+        released = release if holds_on else release + self.motion.release_s
         height = Curve.joined([down.later(meeting.depart_s), Curve.held(hold.z_mm, grasp_start, grasp_end),
                                up.later(grasp_end)])
         across_s = meeting.depart_s + meeting.rise_s
         return Cycle(hold, meeting.depart_s, across_s, across_s + meeting.move.duration, grasp_start, grasp_end, left,
-                     left + leaving.move.duration, release, release + self.motion.release_s, start, place_joints,
+                     there, release, released, start, place_joints,
                      tuple(curve.later(across_s) for curve in meeting.move.curves),
                      tuple(curve.later(left) for curve in leaving.move.curves), height)
 
@@ -155,7 +174,7 @@ class Mover:
         return self.transfer(start, depart_s, end, shape)
 
     def transfer(self, start: FloatArray, depart_s: float, end: FloatArray, shape: int = TOGETHER) -> Transfer:
-        """From rest at joints (4,) to rest at others, whose tip is at the clear height or above."""
+        """From rest at joints (4,) to rest at others: straight up to the gate, across, and straight down from it."""
         lift = self.lift_from(start, float(self.arm.forward(end)[2]))
         move = self.across.between(at_rest(start), at_rest(end), shape=shape)
         across_s, up = depart_s + lift.rise_s(move.duration), lift.curve(move.duration).later(depart_s)
@@ -221,9 +240,9 @@ class Mover:
             met += late
         return leg
 
-    def _leave(self, hold: Hold, grasp_end: float, place_joints: FloatArray, shape: int) -> "_Leg | None":
+    def _leave(self, hold: Hold, grasp_end: float, place_joints: FloatArray, lift: Lift,
+               shape: int) -> "_Leg | None":
         """From the part to rest over the slot."""
-        lift = self.lift(round(hold.z_mm, 6), round(float(self.arm.forward(place_joints)[2]), 6))
         rise = lift.rise_s(np.inf)
         for _ in range(SETTLING):
             state = self.state_on(hold, grasp_end + rise)
@@ -251,7 +270,6 @@ class Mover:
             q[with_part] = self.joints_on(cycle.hold, t[with_part])
         q[:, 2] = quill(self.arm, cycle.height.at(t), q[:, 3])
         return q
-
 
     def transfer_joints(self, transfer: Transfer, t: FloatArray) -> FloatArray:
         """Joints (n, 4) at times t (n,) of a transfer."""

@@ -97,10 +97,10 @@ class Above {
 
   partsAt(t, chosen) {
     const now = doing(t), by = shift(t), filled = scene.places.map(() => 0);
-    const held = now.pick >= 0 && now.step >= 3 && now.step < 7 ? scene.picks[now.pick] : null;
+    const held = scene.picks.filter((pick) => pick.edges[3] <= t && t < pick.released);
     const done = [];
     for (const pick of scene.picks) {
-      if (pick.edges[7] > t) break;
+      if (pick.released > t) continue;
       done.push([pick, filled[pick.place]++]);
     }
     for (const [pick, order] of done) {
@@ -196,9 +196,9 @@ class Above {
       context.lineWidth = 2;
       context.stroke();
     }
-    if (this.held) {
-      const way = ride(this.held);
-      this.part(this.held.part, [...added(at.tip, turned(way.at, at.yaw)), at.yaw + way.yaw], 1, { next: true });
+    for (const pick of this.held) {
+      const way = ride(pick);
+      this.part(pick.part, [...added(at.tip, turned(way.at, at.yaw)), at.yaw + way.yaw], 1, { next: true });
     }
     const now = doing(t), kind = now.pick >= 0 ? scene.parts[scene.picks[now.pick].part].kind : -1;
     const jaws = kind >= 0 && scene.kinds[kind].jaws.length ? scene.kinds[kind].jaws : scene.arm.jaws;

@@ -81,13 +81,19 @@ function doing(t) {
   return { pick: low, phase: PHASES[k], step: k };
 }
 
+/** The pick being set down after later ones at a time; undefined for none. */
+function settingDown(t) {
+  const down = scene.downs.find((one) => one[1] <= t && t < one[5]);
+  return down && scene.picks[down[0]];
+}
+
 /** How a part rides in the gripper: its place and yaw in the tool frame, found when it is gripped. */
 function ride(pick) {
   if (pick.ride) return pick.ride;
   const part = scene.parts[pick.part], t = pick.edges[3], tool = pose(jointsAt(t));
   const at = added(part.at, shift(t));
   pick.ride = { at: turned([at[0] - tool.tip[0], at[1] - tool.tip[1]], -tool.yaw), yaw: part.at[2] - tool.yaw };
-  const end = pose(jointsAt(pick.edges[7]));
+  const end = pose(jointsAt(pick.released));
   pick.left = [...added(end.tip, turned(pick.ride.at, end.yaw)), end.yaw + pick.ride.yaw];
   return pick.ride;
 }

@@ -79,15 +79,19 @@ class Desk {
 
   sentence() {
     const { pick, phase, step } = doing(this.t);
+    const down = settingDown(this.t);
     let told;
-    if (phase === "waiting" && scene.waits.some(([a, b]) => a <= this.t && this.t < b)) told = "Goes where the next part is to come.";
+    if (down) told = `Sets part ${scene.parts[down.part].no} down in ${scene.places[down.place].name} ${down.slot + 1}.`;
+    else if (phase === "waiting" && scene.waits.some(([a, b]) => a <= this.t && this.t < b)) told = "Goes where the next part is to come.";
     else if (pick < 0) told = this.t >= (scene.picks.at(-1)?.edges[8] ?? scene.start) && scene.picks.length ? "The last pick is done." : "The arm waits.";
     else {
       const part = scene.parts[scene.picks[pick].part], name = `part ${part.no} (${kindOf(part)})`;
+      const kept = scene.picks[pick].kept;
       const place = `${scene.places[scene.picks[pick].place].name} ${scene.picks[pick].slot + 1}`;
       if (phase === "waiting") told = this.t >= scene.picks[pick].decided ? `Waits for ${name}.` : "Waits.";
       else told = [`Lifts off, ${name} is next.`, `Goes across to ${name}.`, `Goes down on ${name}.`, `Grips ${name}${travel ? ", moving with it" : ""}.`,
-        `Lifts ${name}.`, `Carries ${name} across to ${place}.`, `Sets ${name} down in ${place}.`, `Lets go of ${name}.`][step];
+        `Lifts ${name}.`, kept ? `Keeps ${name} and picks on.` : `Carries ${name} across to ${place}.`,
+        kept ? `Keeps ${name} and picks on.` : `Sets ${name} down in ${place}.`, `Lets go of ${name}.`][step];
       told = `Pick ${pick + 1} of ${scene.picks.length}. ${told}`;
     }
     const chosen = scene.parts[this.chosen];

@@ -43,7 +43,7 @@ def picks(subject: Subject) -> Markup:
         rows.append([
             jump(f"{n}", cycle.grasp_start_s, subject, pick.part.number), pick.part.number,
             named(pick.part.kind, subject.kinds), subject.clock(pick.decided_s), subject.clock(cycle.grasp_start_s),
-            subject.clock(cycle.release_start_s), f"{cycle.release_end_s - cycle.depart_s:.3f}", f"{at[0]:.1f}",
+            subject.clock(pick.release_start_s), f"{pick.busy_s:.3f}", f"{at[0]:.1f}",
             f"{at[1]:.1f}", f"{float(degrees(cycle.hold.yaw)):.1f}", ELBOW[cycle.hold.elbow], place_of(pick),
             pick.looked_at])
     return table("Picks, in their order", head, rows, "picks") if rows else tag("p", "Nothing was picked.")

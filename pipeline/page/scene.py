@@ -28,6 +28,7 @@ def scene(subject: Subject) -> str:
         "belt": _belt(subject), "kinds": _kinds(subject), "places": _places(subject),
         "keepouts": [{"name": k.name, "at": _flat(k.polygon_mm)} for k in subject.setting.cell.keepouts],
         "parts": _parts(subject), "picks": _picks(subject), "motion": _motion(subject),
+        "downs": _downs(subject),
         "waits": [[_t(subject, way.depart_s), _t(subject, way.end_s)] for way in subject.run.waits],
         "view": _view(subject),
         "frames": frames(subject),
@@ -114,8 +115,15 @@ def _picks(subject: Subject) -> list[dict[str, Any]]:
                  c.release_start_s, c.release_end_s)  # fmt: skip
         told.append({"part": row[pick.part.number], "decided": _t(subject, pick.decided_s),
                      "edges": [_t(subject, edge) for edge in edges], "place": places.index(pick.place),
-                     "slot": pick.slot, "view": pick.looked_at})  # fmt: skip
+                     "slot": pick.slot, "view": pick.looked_at, "released": _t(subject, pick.release_start_s),
+                     "kept": int(pick.set_down is not None)})  # fmt: skip
     return told
+
+
+def _downs(subject: Subject) -> list[list[float | None]]:
+    """Index and edges (depart, across, there, release start and end) of picks set down after later ones, in time."""
+    told = [(k, pick.set_down) for k, pick in enumerate(subject.run.picks) if pick.set_down]
+    return [[k, *(_t(subject, edge) for edge in down.edges)] for k, down in sorted(told, key=lambda d: d[1].there_s)]
 
 
 def _motion(subject: Subject) -> dict[str, Any] | None:

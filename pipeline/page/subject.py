@@ -7,8 +7,9 @@ from typing import Any
 from pipeline.account.phases import Phase, phases_of
 from pipeline.account.windows import PartWindow, windows_of
 from pipeline.grasp import Refusal
-from pipeline.replay import Pick, Run, Setting
+from pipeline.replay import Run, Setting
 from pipeline.study import Seen
+from pipeline.trip import Pick
 
 LATEST_AS_GIVEN_S = 1e5  # later clocks are shown from the first frame on
 

@@ -79,6 +79,9 @@ class Timeline {
       free = e[8];
     });
     if (free < end) box(free, scene.end, "waiting");
+    for (const [, ...e] of scene.downs) {
+      if (e[4] > start && e[0] < end) ["up", "across", "down", "release"].forEach((name, i) => box(e[i], e[i + 1], name));
+    }
     for (const [a, b] of scene.waits) if (b > start && a < end) box(a, b, "across");
   }
 

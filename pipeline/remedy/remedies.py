@@ -40,7 +40,9 @@ def remedies(setting: Setting, run: Run, most_parts: int = MOST_PARTS,
 
 
 def with_remedies(setting: Setting, run: Run) -> Run:
-    """The run with the remedy of each miss beside its reason."""
+    """The run with the remedy of each miss beside its reason; as it is where the tool has several grippers."""
+    if len(setting.graspings) > 1:
+        return run
     told = remedies(setting, run)
     fates = tuple(fate and replace(fate, remedy=told[part.number] or "")
                   for part, fate in zip(run.parts, run.fates, strict=True))

@@ -10,7 +10,7 @@ from itertools import islice
 import numpy as np
 from numpy.typing import NDArray
 
-from pipeline.arm import Arm
+from pipeline.arm import gripper_arms
 from pipeline.cell import Cell
 from pipeline.follow import Known, Part
 from pipeline.grasp import Grasping, Holds, Refusal
@@ -147,7 +147,7 @@ class Trials:
         return holds, *tried.neighbours.room(k, part.xy_mm, holds, others, self.xyyaw[others])
 
     def _tried(self, cell: Cell) -> _Tried:
-        arm = Arm(cell.arm, cell.tool)
+        arm = gripper_arms(cell.arm, cell.tool)[0]
         mover = Mover(cell, arm, self.set.belt)
         if lift_limits(cell, arm) == self._lifts:  # else worked out anew, which takes a while
             mover.lift = self.set.mover.lift
