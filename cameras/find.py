@@ -35,7 +35,7 @@ ROUND_DOWN, ROUND_UP = 0.22, 0.725  # circles are met by chance: how much more m
 LEAST_ROUGH = 0.6  # score of a rough placement worth fitting
 PROMISING = 0.45
 SETTLED = 0.92
-WORTH_TURNING, TURNED_RAD = 0.55, 0.2
+NEARLY_ROUND, WORTH_TURNING, WELL_TURNED, TURNED_RAD = 0.15, 0.55, 0.85, 0.2  # spread of radii; shares; a turned start
 STEP_SHARE, STEP_NOISE = 0.12, 2.5  # of the edge map's threshold and noise: the least step the fit takes for an edge
 OVERLAP = 0.2
 UNKNOWN_SHARE = 0.25
@@ -73,6 +73,7 @@ class _Kind:
     first_rad: float
     steps: int
     step_rad: float
+    nearly_round: bool
 
 
 @dataclass(frozen=True)
@@ -200,7 +201,7 @@ class PartFinder:
         """The fit from a start; where it is no good one, the best of it and of starts turned by a little more."""
         at = (float(start[0]), float(start[1]))
         fit = fit_pose(grey, view, kind.template, (*at, yaw), least, PROMISING)
-        if fit is None or kind.steps == 1 or not WORTH_TURNING < fit.share < SETTLED:
+        if fit is None or not kind.nearly_round or not WORTH_TURNING < fit.share < WELL_TURNED:
             return fit
         turn = min(TURNED_RAD, 0.25 * kind.steps * kind.step_rad)
         others = (fit_pose(grey, view, kind.template, (*at, yaw + way * turn), least, PROMISING) for way in (-1.0, 1.0))
@@ -260,7 +261,14 @@ def _kind(part: TaughtPart, down: bool) -> _Kind:
     period = 2.0 * np.pi / max(part.turns, 1)
     steps = 1 if part.turns == 0 else max(round(period / TURN_STEP_RAD), 1)
     return _Kind(part.name, down, template, coarse_points(template.points), *_deepest(template.outline), part.model,
-                 part.model.yaw_rad if part.turns == 0 else 0.0, steps, period / steps)  # fmt: skip
+                 part.model.yaw_rad if part.turns == 0 else 0.0, steps, period / steps,
+                 steps > 1 and _spread(template.outline) < NEARLY_ROUND)  # fmt: skip
+
+
+def _spread(outline: FloatArray) -> float:
+    """Standard deviation of a polygon's distances from its middle, as a share of their mean."""
+    radius = np.linalg.norm(outline - outline.mean(axis=0), axis=1)
+    return float(radius.std() / radius.mean())
 
 
 def _deepest(outline: FloatArray) -> tuple[FloatArray, float]:
