@@ -145,6 +145,8 @@ def followed(tray: Tray, order: IntArray, time_share: float = 1.0, bounded: bool
     done = _follow(cost, order)
     picked, late = order[done[order]], order[~done[order]]
     ways = walked(cost, picked, np.zeros(len(tray.slots), np.int64), len(tray.out) - 1)
+    if np.isfinite(cost.left_s):  # the soonest end may grip the last part too late
+        ways = _walked_in_time(tray, picked)
     contact_s, free_s = along(tray.out, tray.carry, ways)
     bound = bounded and len(picked) > 0 and not len(late)
     told = TrayOrder(
@@ -173,6 +175,26 @@ def walked(cost: Tray, order: IntArray, used: IntArray, at: int) -> tuple[tuple[
         at, counts[q] = int(to[r]), counts[q] + 1
         ways.append((int(hold[h]), at))
     return tuple(ways)
+
+
+def _walked_in_time(tray: Tray, order: IntArray) -> tuple[tuple[int, int], ...]:
+    """As `walked` from where the arm is, every part gripped before the tray is taken away; the order can be had so."""
+    due = tray.left_s - tray.grasp_s + HAIR
+    at, reach, counts, steps = np.array([len(tray.out) - 1]), np.zeros(1), np.zeros(len(tray.slots), np.int64), []
+    for part in order:
+        q = tray.queue[part]
+        to = np.arange(tray.slots[q, counts[q]], tray.slots[q, counts[q] + 1])
+        hold = np.arange(tray.begins[part], tray.begins[part + 1])
+        contact = reach[:, None] + tray.out[np.ix_(at, hold)]
+        came, soonest = contact.argmin(axis=0), contact.min(axis=0)
+        free = np.where(soonest <= due, soonest, np.inf)[:, None] + tray.carry[np.ix_(hold, to)]
+        steps.append((hold, to, came, free.argmin(axis=0)))
+        at, reach, counts[q] = to, free.min(axis=0), counts[q] + 1
+    ways, r = [], int(np.argmin(reach))
+    for hold, to, came, by in reversed(steps):
+        ways.append((int(hold[by[r]]), int(to[r])))
+        r = int(came[by[r]])
+    return tuple(reversed(ways))
 
 
 def along(out: FloatArray, carry: FloatArray, ways: Sequence[tuple[int, int]], start: int = -1) -> tuple[

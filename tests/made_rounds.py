@@ -91,7 +91,8 @@ def _crane(size, random, seed):
 
 def _tilted(size, random, seed):
     """A drill over a tilted board: up costs more than down."""
-    right, up = (random.integers(0, 1000, (size, 2))[:, None] - random.integers(0, 1000, (size, 2))[None]).T
+    at = random.integers(0, 1000, (size, 2))
+    right, up = (at[:, None] - at[None]).T
     return np.maximum(np.where(right > 0, 2 * right, -right), np.where(up > 0, 3 * up, -up))
 
 
