@@ -218,11 +218,11 @@ def test_broken_off_it_goes_on_where_it_was(tmp_path: Path) -> None:
         process = subprocess.Popen([sys.executable, "-c", MAIN, *words, "--jobs", "1"], stderr=subprocess.PIPE,
                                    start_new_session=True, preexec_fn=heard)
         until = time.monotonic() + 120
-        while len(list(out.glob("points/*.json"))) < points and time.monotonic() < until and process.poll() is None:
+        while len(list(out.glob("points/[!.]*.json"))) < points and time.monotonic() < until and process.poll() is None:
             time.sleep(0.005)
         os.killpg(process.pid, with_signal)
         told = process.communicate(timeout=60)[1].decode()
-        return process.returncode, told, {path.name: path.stat().st_mtime_ns for path in out.glob("points/*.json")}
+        return process.returncode, told, {path.name: path.stat().st_mtime_ns for path in out.glob("points/[!.]*.json")}
 
     status, said, first = broken_off(signal.SIGINT, 3)
     assert status == 130
@@ -235,7 +235,7 @@ def test_broken_off_it_goes_on_where_it_was(tmp_path: Path) -> None:
     told = sanderling(*words, "--jobs", "1")
     assert told.status == 0
     assert f"{20 - len(second)} run, {len(second)} done before" in told.out
-    assert second.items() <= {path.name: path.stat().st_mtime_ns for path in out.glob("points/*.json")}.items()
+    assert second.items() <= {path.name: path.stat().st_mtime_ns for path in out.glob("points/[!.]*.json")}.items()
     rows = (out / "sweep.csv").read_text().splitlines()
     assert len(rows) == 21
     assert all((out / name).stat().st_size > 5000 for name in ("curve_belt-speed.png", "missed_belt-speed.png"))
