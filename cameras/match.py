@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from cameras.edges import MOST_SAMPLES, OUTSIDE, edge_along
 from cameras.model import Model
+from cameras.symmetry import turned
 from cameras.view import project, slopes
 
 FloatArray = NDArray[np.float64]
@@ -71,8 +72,7 @@ def template_of(model: Model, down: bool) -> Template:
     outline = model.outline_mm[::-1] * np.array([1.0, -1.0]) if down else model.outline_mm.copy()
     centred = down or model.turns != 1  # a symmetric part's points were centred on its grip point, whatever the height
     away = np.zeros(2) if centred else model.away.copy()
-    cosine, sine = np.cos(model.yaw_rad), np.sin(model.yaw_rad)
-    shifted = np.zeros(2) if down or model.turns == 1 else np.array([[cosine, -sine], [sine, cosine]]) @ model.away
+    shifted = np.zeros(2) if down or model.turns == 1 else turned(model.away, model.yaw_rad)
     own = np.maximum(OWN_SHARE * np.array(sigmas), 0.02)
     return Template(np.ascontiguousarray(points), np.array(heights), own, sigmas[1], shifted, away,
                     np.ascontiguousarray(outline), model.turns == 0)  # fmt: skip

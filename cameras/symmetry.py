@@ -33,7 +33,7 @@ class Frame(Protocol):
 
 
 def turned(points: FloatArray, angle: float) -> FloatArray:
-    """Points (n, 2) turned about the origin."""
+    """Points (n, 2), or one (2,), turned about the origin."""
     cosine, sine = np.cos(angle), np.sin(angle)
     return np.asarray(points @ np.array([[cosine, sine], [-sine, cosine]]))
 
@@ -61,7 +61,7 @@ def voted_plan(
     for h in np.linspace(0.0, top_mm, VOTED_HEIGHTS):
         at = (frame.to_pixels(grid, h) - corner).reshape(*x.shape, 2).astype(np.float32)
         one = cv2.remap(thick, at[..., 0], at[..., 1], cv2.INTER_LINEAR)
-        pixels_mm2 = abs(_area(at[[0, 0, -1, -1], [0, -1, -1, 0]])) / (side[-1] - side[0]) ** 2
+        pixels_mm2 = abs(area(at[[0, 0, -1, -1], [0, -1, -1, 0]])) / (side[-1] - side[0]) ** 2
         votes: NDArray[Any] = np.zeros_like(one)
         for k in range(count):
             middle = (len(side) - 1) / 2.0
@@ -78,7 +78,8 @@ def voted_plan(
     return np.asarray(plan), height
 
 
-def _area(polygon: NDArray[Any]) -> float:
+def area(polygon: NDArray[Any]) -> float:
+    """Area of a polygon (n, 2), positive where it runs counter-clockwise."""
     x, y = np.asarray(polygon, dtype=np.float64).T
     return 0.5 * float(np.sum(x * np.roll(y, -1) - y * np.roll(x, -1)))
 

@@ -13,7 +13,7 @@ from cameras.edges import MOST_SAMPLES, edge_along, edge_map, noise_of
 from cameras.faults import InputFault
 from cameras.model import MOST_CONTOURS, Contour, Model
 from cameras.outline import rough_outline
-from cameras.symmetry import alike_under_turn, edge_height, off_centre, repeated, turns_seen, wall_heights
+from cameras.symmetry import alike_under_turn, area, edge_height, off_centre, repeated, turns_seen, wall_heights
 from cameras.view import CameraMap
 
 FloatArray = NDArray[np.float64]
@@ -127,7 +127,7 @@ def _outline(
     near, far = frame.from_pixels(pixels, heights[0]), frame.from_pixels(pixels, heights[1])
     plan = np.where((outward(near) @ frame.away() > 0.0)[:, None], far, near)
     polygon = even(plan, 0.4, 0.25)
-    if _area(polygon) < 0.0:
+    if area(polygon) < 0.0:
         polygon = polygon[::-1]
     points = even(polygon, SPACING_MM)
     normals = outward(points)
@@ -135,11 +135,6 @@ def _outline(
     own = steps[nearest]
     usual = np.convolve(np.concatenate([own[-2:], own, own[:2]]), np.full(5, 0.2), "valid")
     return Contour(points, normals, usual, heights[1], sigma), polygon
-
-
-def _area(polygon: FloatArray) -> float:
-    x, y = polygon.T
-    return 0.5 * float(np.sum(x * np.roll(y, -1) - y * np.roll(x, -1)))
 
 
 def _inner(grey: Grey, polygon: FloatArray, frame: GripFrame, taught: Taught) -> tuple[Contour, ...]:

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
 from cameras.model import Contour, Model
+from cameras.symmetry import turned
 from cameras.teach import GripFrame, Taught, teach
 from cameras.view import CameraMap
 
@@ -57,8 +58,7 @@ def _outline_offset(first: Model, other: Model) -> FloatArray:
     """How far (2,) another view's plan lies from the first's, in the grip frame."""
     if first.turns == 1:
         return _offset(np.column_stack([first.outline.points_mm, first.outline.normals]), other.outline_mm)
-    cosine, sine = np.cos(first.yaw_rad), np.sin(first.yaw_rad)  # symmetric plans were centred, each by its own shift
-    return np.asarray((other.shift_mm - first.shift_mm) @ np.array([[cosine, -sine], [sine, cosine]]))
+    return turned(other.shift_mm - first.shift_mm, -first.yaw_rad)  # symmetric plans were centred, each by its shift
 
 
 def _every(contours: Sequence[Contour]) -> FloatArray:

@@ -144,9 +144,10 @@ def followed(tray: Tray, order: IntArray, time_share: float = 1.0, bounded: bool
     cost = judged(tray, time_share)
     done = _follow(cost, order)
     picked, late = order[done[order]], order[~done[order]]
-    ways = walked(cost, picked, np.zeros(len(tray.slots), np.int64), len(tray.out) - 1)
     if np.isfinite(cost.left_s):  # the soonest end may grip the last part too late
         ways = _walked_in_time(tray, picked)
+    else:
+        ways = walked(cost, picked, np.zeros(len(tray.slots), np.int64), len(tray.out) - 1)
     contact_s, free_s = along(tray.out, tray.carry, ways)
     bound = bounded and len(picked) > 0 and not len(late)
     told = TrayOrder(
