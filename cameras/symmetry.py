@@ -17,6 +17,8 @@ PLAN_MM = 0.15
 ROUND_TURNS = 24
 ALIKE_MM = 0.35
 MOST_TURNS = 12
+ALIKE_SHARE, ALIKE_REACH = 0.24, 0.025  # copies that look alike are apart by less: of what any copies are, of the reach
+ROUND_REACH = 0.043  # any copies of a circle are apart by less, of its reach
 HEIGHT_STEPS = 25
 SEEN_SIGMA_MM = 0.2  # light and chamfers shift edges by as much
 PRIOR, PRIOR_SIGMA = 0.5, 0.3  # of the height of the top face
@@ -105,16 +107,18 @@ def _rim(shape: NDArray[np.uint8], step: float) -> NDArray[np.bool_]:
 
 
 def _misses(seen: FloatArray, turns: int) -> float:
-    """Robust mean distance of points from their turned copies, across the edge."""
-    tree = cKDTree(seen)
-    count = turns or ROUND_TURNS
-    missed = []
+    """Robust mean of squared distances of points from their turned copies, across the edge."""
+    return float(np.mean(np.minimum(_apart(seen, turns), 1.5) ** 2))
+
+
+def _apart(points: FloatArray, turns: int) -> FloatArray:
+    """How far (copies, n) each point of a closed line's copies, turned about the origin, lies from that line."""
+    tree, count, apart = cKDTree(points), turns or ROUND_TURNS, []
     for k in range(1, count):
-        copy = turned(seen, 2.0 * np.pi * k / count)
-        apart, at = (np.asarray(one) for one in tree.query(copy, k=2))
-        missed.append(_to_line(copy, seen[at[:, 0]], seen[at[:, 1]], apart[:, 0]))
-    every = np.concatenate(missed)
-    return float(np.mean(np.minimum(every, 1.5) ** 2))
+        copy = turned(points, 2.0 * np.pi * k / count)
+        near, at = (np.asarray(one) for one in tree.query(copy, k=2))
+        apart.append(_to_line(copy, points[at[:, 0]], points[at[:, 1]], near[:, 0]))
+    return np.array(apart)
 
 
 def _to_line(points: FloatArray, first: FloatArray, second: FloatArray, apart: FloatArray) -> FloatArray:
@@ -224,15 +228,20 @@ def alike_under_turn(first: FloatArray, second: FloatArray, mirrored: bool = Fal
 
 
 def turns_seen(polygon: FloatArray) -> int:
-    """How many yaws the outline alone looks alike at: 0 for a circle, 1 for none but itself."""
-    centred = polygon - polygon.mean(axis=0)
-    radius = np.linalg.norm(centred, axis=1)
-    tree = cKDTree(centred)
-    limit = max(0.02 * float(radius.max()), 0.2)
+    """How many yaws the outline alone, in its grip frame, looks alike at: 0 for a circle, 1 for none but itself.
 
-    def alike(count: int) -> bool:
-        return float(np.percentile(tree.query(turned(centred, 2 * np.pi / count))[0], 90)) < limit
+    What half of it says counts, as shadows and light spoil some of many an outline: a lug or notch may escape it.
+    """
+    middle = polygon.mean(axis=0)
+    reach = float(np.max(np.linalg.norm(polygon - middle, axis=1)))
 
-    if np.ptp(radius) < 2.0 * limit:
+    def apart(turns: int) -> FloatArray:
+        centred = (polygon - start - off_centre(polygon - start, turns) for start in (middle, np.zeros(2)))
+        return min((_apart(one, turns) for one in centred), key=np.median)
+
+    circle = float(np.sqrt(np.mean(apart(0) ** 2)))
+    if circle < ALIKE_SHARE * ROUND_REACH * reach:
         return 0
-    return max((count for count in range(1, MOST_TURNS + 1) if count == 1 or alike(count)), default=1)
+    least = min(ALIKE_SHARE * float(np.median(apart(0))), ALIKE_REACH * reach)
+    alike = [turns for turns in range(2, MOST_TURNS + 1) if np.median(apart(turns)) < least]
+    return max(alike, default=0 if circle < ROUND_REACH * reach else 1)

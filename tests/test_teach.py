@@ -54,6 +54,31 @@ def test_symmetry_is_proposed_from_the_outline(outline, turns):
     assert taught(outline, turns).proposed_turns == turns
 
 
+def lobed(waves_mm: dict[int, float], shaded_deg: tuple[float, float] = (0.0, 0.0)) -> np.ndarray:
+    """A circle of 14 mm with waves, so many a turn; between two angles its shadow is taken for it."""
+    angle = np.linspace(0.0, 2.0 * np.pi, 720, endpoint=False)
+    radius = 14.0 + sum(size * np.cos(count * angle + 0.3) for count, size in waves_mm.items())
+    shaded = (angle > np.radians(shaded_deg[0])) & (angle < np.radians(shaded_deg[1]))
+    radius = np.where(shaded, 17.5, radius)
+    return radius[:, None] * np.column_stack([np.cos(angle), np.sin(angle)])
+
+
+@pytest.mark.parametrize(
+    ("outline", "turns"),
+    [
+        (lobed({6: 2.0}, (200.0, 260.0)), 6),  # spoilt on a sixth of it
+        (lobed({5: 2.0}), 5),
+        (lobed({2: 0.2, 3: 0.3, 5: 0.2}), 0),  # a rim that the light spoils
+        (lobed({2: 1.5}), 2),  # an oval
+        (SQUARE * np.array([1.0, 0.85]), 2),  # nearly a square
+        (PLATE, 1),
+        (np.array([[-20, -8], [20, -8], [20, 8], [8, 8], [8, 2], [-20, 2]], float), 1),
+    ],
+)
+def test_symmetry_is_what_most_of_the_outline_shows(outline, turns):
+    assert turns_seen(even(outline, 0.4)) == turns
+
+
 def test_sides_are_told_by_outline_or_by_inner_edges_or_not_at_all(plate):
     assert plate.side_told
     assert not plate.mirrored_alike
