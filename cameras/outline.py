@@ -16,7 +16,7 @@ NOISE_FACTOR = 3.0
 LEAST_SLOPE = 2.0
 LONGEST_BRIDGE_PX = 9
 SHADOW_RATIO = 0.88
-LEAST_VOTED = 0.55  # of what the lines enclose less shadows: a voted outline
+LEAST_VOTED, LEAST_OF_BLOB = 0.55, 0.2  # of what the lines enclose less shadows, and of all that is no belt: a voted plan
 LEAST_LEFT, LEAST_SHADOW = 0.5, 0.02  # of what the lines enclose
 SOFTER = 0.75
 
@@ -46,7 +46,8 @@ def rough_outline(window: Grey, blob: Mask, corner: FloatArray, frame: Frame, to
     lines[cv2.dilate(blob, np.ones((5, 5), np.uint8)) == 0] = 0
     mask = _without_shadow(window, _enclosed(lines, blob), lines, blob)
     if turns not in (1, 2):  # two copies make no majority
-        plan, height = voted_plan(lines, corner, frame, top_mm, turns, LEAST_VOTED * float(mask.sum()))
+        least = max(LEAST_VOTED * float(mask.sum()), LEAST_OF_BLOB * float(blob.sum()))
+        plan, height = voted_plan(lines, corner, frame, top_mm, turns, least)
         if len(plan):
             return frame.to_pixels(plan, height)
     outlines, _ = cv2.findContours(mask, cv2.RETR_EXTERNAL, cv2.CHAIN_APPROX_NONE)

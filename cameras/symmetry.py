@@ -69,7 +69,7 @@ def voted_plan(
             middle = (len(side) - 1) / 2.0
             turn = cv2.getRotationMatrix2D((middle, middle), 360.0 * k / count, 1.0)
             votes += cv2.warpAffine(one, turn, (len(side), len(side)))
-        for need in {2: (1.5,), 3: (2.4, 1.5)}.get(count, (0.75 * count, 0.55 * count, 0.4 * count)):
+        for need in {2: (1.5,), 3: (2.4, 1.5)}.get(count, (0.75 * count, 0.55 * count, 0.4 * count, 0.25 * count)):
             shape = _enclosing((votes >= need).astype(np.uint8), step)
             if float(shape.sum()) * step * step * pixels_mm2 < least_px:
                 continue
