@@ -16,7 +16,7 @@ NOISE_FACTOR = 3.0
 LEAST_SLOPE = 2.0
 LONGEST_BRIDGE_PX = 9
 SHADOW_RATIO = 0.88
-LEAST_VOTED, LEAST_OF_BLOB = 0.55, 0.2  # of what the lines enclose less shadows, and of all that is no belt: a voted plan
+LEAST_VOTED, LEAST_OF_BLOB = 0.55, 0.2  # of what is enclosed less shadows, and of all that is no belt: a voted plan
 LEAST_LEFT, LEAST_SHADOW = 0.5, 0.02  # of what the lines enclose
 SOFTER = 0.75
 
