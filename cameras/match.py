@@ -20,7 +20,8 @@ FloatArray = NDArray[np.float64]
 
 HIT_PX = 1.6
 AGAINST = 0.6  # worth of an edge that is lighter on the other side than when taught
-INNER_AT_FIRST = 0.3  # weight of inner edges while the outline is still sought; heights are held then
+INNER_AT_FIRST, INNER_AT_LAST = 0.3, 2.0  # weight of inner edges: while the outline is still sought, and heights are
+# held; and then, as light from a side shifts a chamfered outline more than edges inside
 INNER_SHARE, INNER_MOST, INNER_WORTH = 0.55, 0.85, 0.6  # more of the inner edges than this speaks for the side up
 PIXEL_SIGMA = 0.25
 DOWN_LIGHTER, DOWN_DARKER, DOWN_SIGMA = 0.92, 0.75, 0.12  # of the height: of the outline of a part turned over
@@ -251,9 +252,9 @@ def fit_pose(image: NDArray[np.uint8], view: FloatArray, template: Template, sta
 
     if settled(9.0, 4.0, 3, 6, INNER_AT_FIRST) < promising:
         return None
-    settled(3.5, 2.5, 1, 2, 1.0)
+    settled(3.5, 2.5, 1, 2, INNER_AT_LAST)
     unit = CORRELATED * _scatter(out) ** 2
-    if settled(2.5, 2.5, 1, 3, 1.0) < 0.0 or np.hypot(pose[0] - start[0], pose[1] - start[1]) > 6.0:
+    if settled(2.5, 2.5, 1, 3, INNER_AT_LAST) < 0.0 or np.hypot(pose[0] - start[0], pose[1] - start[1]) > 6.0:
         return None
     outline = template.points[:, 5] == 0.0
     seen = out[:, 3] > 0.0
