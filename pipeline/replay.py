@@ -1,10 +1,10 @@
 """The replay: the clock, what is known when, what the arm does, what becomes of each part.
 
-With several grippers a pick may begin a trip of several (see `pipeline.trip`).
+With several grippers a pick may begin a trip of several (see `pipeline.trip`), at a tray with the parts nearest by.
 """
 
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -21,7 +21,7 @@ from pipeline.motion.across import SHAPES
 from pipeline.motion.cycle import Cycle, Mover, Transfer
 from pipeline.permit import Permit
 from pipeline.places import Filling, Place
-from pipeline.policy import Arrival, Policy
+from pipeline.policy import Arrival, Nearest, Policy
 from pipeline.scene import SceneBuilder
 from pipeline.trip import Chosen, Pick, Trip, alone, closed, held_on
 from pipeline.watch import Watch
@@ -97,7 +97,7 @@ def replay(setting: Setting, policy: Policy, name: str, horizon: int,
            tick: Callable[[float], None] = lambda now: None, at_once: int = 1) -> Run:
     """Replay a recording under one policy. tick is told the time the replay has come to.
 
-    at_once: most parts the arm holds together; no more than there are grippers, and one on a tray.
+    at_once: most parts the arm holds together; no more than there are grippers.
     """
     return _Clock(setting, policy, name, horizon, tick, at_once).run()
 
@@ -114,18 +114,31 @@ def replay_ahead(setting: Setting, policy: Policy, name: str, horizon: int,
     return replace(plain, notes=(note,))
 
 
-def replay_trips(setting: Setting, policy: Policy, name: str, horizon: int, single: Run) -> Run:
-    """Replay with all grippers; where `single`, with the first one alone, picks more parts or weight, that run, and a
-    note in it."""
-    if setting.cell.belt is None:
-        return replace(single, notes=(*single.notes, "a tray is emptied with the first gripper alone"))
-    trips = replay(setting, policy, name, horizon, at_once=len(setting.graspings))
-    if _worth(setting, trips) >= _worth(setting, single) - 1e-9 and len(trips.picks) >= len(single.picks):
+def replay_trips(setting: Setting, policies: Sequence[Policy], name: str, horizon: int, single: Run) -> Run:
+    """Replay with all grippers, by whichever of the policies does best; where `single`, with the first gripper alone,
+    does better, that run, and a note in it.
+
+    Better is more weight, then more parts; and, of a tray, an earlier end.
+    """
+    many = len(setting.graspings)
+    runs = [replay(setting, policy, name, horizon, at_once=many) for policy in policies]
+    trips = max(runs, key=lambda run: (_worth(setting, run), len(run.picks), -_last_s(run)))
+    enough = _worth(setting, trips) >= _worth(setting, single) - 1e-9 and len(trips.picks) >= len(single.picks)
+    more = len(trips.picks) > len(single.picks)
+    if enough and (more or setting.cell.belt is not None or _last_s(trips) <= _last_s(single)):
         return trips
-    note = (f"with {len(setting.graspings)} grippers {len(trips.picks)} parts of weight {_worth(setting, trips):g} "
-            f"would be picked, with the first one alone {len(single.picks)} of {_worth(setting, single):g}: this run "
-            "is with the first one alone")
+    note = (f"with {many} grippers {_told(setting, trips)} would be picked, with the first one alone "
+            f"{_told(setting, single)}: this run is with the first one alone")
     return replace(single, notes=(*single.notes, note))
+
+
+def _told(setting: Setting, run: Run) -> str:
+    return f"{len(run.picks)} parts of weight {_worth(setting, run):g} by {_last_s(run):.2f} s"
+
+
+def _last_s(run: Run) -> float:
+    """When the last part is set down."""
+    return max((pick.release_end_s for pick in run.picks), default=np.inf)
 
 
 def _worth(setting: Setting, run: Run) -> float:
@@ -138,8 +151,9 @@ class _Clock:
     def __init__(self, setting: Setting, policy: Policy, name: str, horizon: int,
                  tick: Callable[[float], None], at_once: int) -> None:
         self.set, self.policy, self.name, self.horizon, self.tick = setting, policy, name, horizon, tick
+        self.within_trip = policy if setting.cell.belt else Nearest()  # a tray's order is one of single picks
         self.watch = Watch(setting.cell, setting.recording, setting.belt, setting.parts)
-        used = setting.graspings[:1 if setting.cell.belt is None else at_once]
+        used = setting.graspings[:at_once]
         self.builders = [SceneBuilder(setting.cell, self.watch, grasping, setting.legs, setting.outlines,
                                       setting.least_score) for grasping in used]
         self.permits = tuple(Permit(setting.mover, grasping) for grasping in used)
@@ -207,7 +221,7 @@ class _Clock:
         begun = time.perf_counter()
         for _ in range(MOST_TRIES):
             scene = self.builders[gripper].scene(now, start, self.filling, self.horizon, banned)
-            picked = self.policy.choose(scene.choice) if scene else None
+            picked = (self.within_trip if gripper else self.policy).choose(scene.choice) if scene else None
             if scene is None or picked is None:
                 break
             one, hold, drop_joints, drop_pose = scene.grasp(picked.node)

@@ -20,7 +20,7 @@ from pipeline.cell import MOST_ON_TRAY, Cell
 from pipeline.finding import calibration_of, found_in
 from pipeline.follow import Followed, follow
 from pipeline.map_share import with_map_share
-from pipeline.policy import MOST_LOOKED_AT, POLICIES, Policy, policy_named
+from pipeline.policy import MOST_LOOKED_AT, POLICIES, Nearest, Policy, policy_named
 from pipeline.replay import LEAST_SCORE, Run, Setting, replay, replay_ahead, replay_trips
 
 FloatArray = NDArray[np.float64]
@@ -128,7 +128,10 @@ def run(setting: Setting, order: str, horizon: int, tick: Callable[[float], None
     if order == "lookahead":
         horizon = min(horizon, MOST_ON_TRAY if setting.cell.belt is None else MOST_LOOKED_AT)
     single = (replay_ahead if order == "lookahead" else replay)(setting, policy, order, horizon, tick)
-    return single if len(setting.graspings) == 1 else replay_trips(setting, policy, order, horizon, single)
+    if len(setting.graspings) == 1:
+        return single
+    ways = (policy, Nearest()) if order == "lookahead" and setting.cell.belt is None else (policy,)
+    return replay_trips(setting, ways, order, horizon, single)
 
 
 def _read(cell: Cell, folder: Path, source: Source) -> Recording:

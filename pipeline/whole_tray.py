@@ -61,8 +61,11 @@ class WholeTray(Decision):
 
 
 def whole_tray(setting: Setting, by_travel: bool, horizon: int, run: Run) -> WholeTray | None:
-    """How the tray of a run's first pick was ordered; None where nothing was picked or few parts lay there."""
+    """How the tray of a run's first pick was ordered; None where nothing was picked, few parts lay there, or several
+    were picked a trip."""
     if setting.cell.belt is not None or not run.picks or run.picks[0].looked_at <= MOST_LOOKED_AT:
+        return None
+    if any(pick.set_down for pick in run.picks):
         return None
     first = run.picks[0]
     scene = builder_of(setting).scene(first.decided_s, first.cycle.start_joints,

@@ -22,8 +22,9 @@ from checked_run import (
     windows,
 )
 from some_arms import changed
-from some_streams import Stream, belt, scattered, tray
+from some_streams import Stream, belt, scattered
 from test_legs import ENDLESS
+from test_tray_order import strewn
 from test_whole_runs import written
 
 from pipeline.arm import Arm, gripper_arms
@@ -205,15 +206,40 @@ def test_the_first_gripper_alone_is_used_where_trips_pick_less() -> None:
     setting = crowded(number=6, **CELLS["two"]).setting()
     single = replay(setting, Arrival(), "arrival", 6)
     doubled = replace(single, picks=single.picks * 2)
-    done = replay_trips(setting, Arrival(), "arrival", 6, doubled)
+    done = replay_trips(setting, (Arrival(),), "arrival", 6, doubled)
     assert done.picks == doubled.picks
     assert "with 2 grippers" in done.notes[-1]
     assert "first one alone" in done.notes[-1]
 
 
-def test_a_tray_is_emptied_one_by_one_and_says_so() -> None:
-    laid = [replace(one, y_mm=20.0 * k - 40.0, first=0) for k, one in enumerate(scattered(3, 4, 30.0))]
-    done = run(tray(laid, 1, **CELLS["two"]).setting(), "lookahead", 8)
-    assert len(done.picks) == 4
-    assert all(pick.set_down is None for pick in done.picks)
-    assert "first gripper alone" in done.notes[-1]
+@pytest.mark.parametrize(("grippers", "number", "apart_mm"), [(TWO, 40, 30.0), (FOUR, 60, 26.0)])
+def test_a_tray_is_emptied_in_trips_that_hold_from_their_files(
+    grippers: list[list[float]], number: int, apart_mm: float, tmp_path: Path
+) -> None:
+    stream = strewn(number, apart_mm, tool__grippers=grippers)
+    stream = replace(stream, times_s=np.array([0.0, 300.0]), counts=np.zeros(2, int))
+    out = written(stream, tmp_path, "lookahead")
+    files = Files(tmp_path, out)
+    assert [line for check in (limits, start, fates, windows, slots) for line in check(files)] == []
+    assert len(files.picks) >= number - 1  # one lies where the first gripper comes too near the stretched arm
+    followed(files, stream)
+    straight(files)
+    filled(files)
+    assert held(files) >= 2
+
+
+def test_a_tray_is_emptied_no_later_than_with_one_gripper() -> None:
+    """By each order; and where trips would end later, with the first gripper alone, and a note."""
+    for order in ("arrival", "nearest", "lookahead"):
+        ends = []
+        for grippers in ([[0.0, 0.0, 0.0]], [[0.0, 0.0, 0.0]] * 2):
+            done = run(strewn(30, 30.0, tool__grippers=grippers).setting(), order, 200)
+            assert len(done.picks) == 30
+            ends.append(max(pick.release_end_s for pick in done.picks))
+        assert ends[1] < ends[0]
+    setting = strewn(20, 30.0, tool__grippers=TWO).setting()
+    single = replay(setting, Arrival(), "arrival", 200)
+    sooner = replace(single, picks=single.picks[:1] * len(single.picks))
+    done = replay_trips(setting, (Arrival(),), "arrival", 200, sooner)
+    assert done.picks == sooner.picks
+    assert "first one alone" in done.notes[-1]
