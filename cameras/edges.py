@@ -55,7 +55,7 @@ def noise_of(grey: NDArray[np.uint8]) -> float:
 
     The upper fifth, where something else is seen, is left out (a trimmed mean, as a median of whole numbers is coarse).
     """
-    top, bottom = grey[:-1:3].astype(np.int16), grey[1::3].astype(np.int16)
+    top, bottom = grey[:-1:8].astype(np.int16), grey[1::8].astype(np.int16)
     twist = np.abs(np.diff(top, axis=1) - np.diff(bottom, axis=1))
     count = np.bincount(twist.ravel(), minlength=1)
     kept = np.minimum(np.cumsum(count), 0.8 * twist.size)

@@ -15,6 +15,7 @@ from cameras.blobs import Blobs, blobs_of
 from cameras.edges import CELL_PX, EdgeMap, edge_map
 from cameras.match import Fit, Template, fit_pose, template_of
 from cameras.model import Model
+from cameras.rivals import best
 from cameras.search import TURN_STEP_RAD, coarse_points, peaks, placements, room_for
 from cameras.sightings import Sightings
 from cameras.view import CameraMap, Views, unproject, views_of
@@ -37,8 +38,6 @@ PROMISING = 0.45
 SETTLED = 0.92
 NEARLY_ROUND, WORTH_TURNING, WELL_TURNED, TURNED_RAD = 0.15, 0.55, 0.85, 0.2  # spread of radii; shares; a turned start
 STEP_SHARE, STEP_NOISE = 0.12, 2.5  # of the edge map's threshold and noise: the least step the fit takes for an edge
-OVERLAP = 0.2
-NEARLY_AS_GOOD, MORE, INSIDE, ON_PATCH = 0.2, 1.1, 0.8, 0.9  # worth less; shares of cells: a rival that explains more
 UNKNOWN_SHARE = 0.25
 UNKNOWN_LEAST_MM2 = 25.0
 RIM_WEAKEST, RIM_USUAL = 1.6, 1.85  # thresholds of the edge map, at the rim of a thing
@@ -128,7 +127,7 @@ class PartFinder:
         placed: list[_Placed] = []
         for patch, place in enumerate(_places(camera, views, blobs)):
             placed += self._on_patch(grey, views, edges, blobs, patch, place)
-        kept = _best(placed, blobs)
+        kept = [placed[k] for k in best(blobs, [(one.fit.worth, one.polygon_px) for one in placed])]
         return _sightings([one for one in kept if not one.cut], self._unknown(kept, edges, blobs, camera))
 
     def _views_for(self, camera: CameraMap, shape: tuple[int, int]) -> Views:
@@ -288,45 +287,6 @@ def _has_rim(outline: NDArray[np.int64], edges: EdgeMap) -> bool:
     wide = cv2.dilate(edges.strength, np.ones((3, 3), np.uint8))
     rim = wide[outline[:, 1], outline[:, 0]] / edges.least
     return bool(np.percentile(rim, 25) >= RIM_WEAKEST and np.median(rim) >= RIM_USUAL)
-
-
-def _best(placed: list[_Placed], blobs: Blobs) -> list[_Placed]:
-    """Placements in order of worth, those left out that overlap a better one.
-
-    Nor is one kept that leaves much of its patch unexplained, where a rival nearly as good explains it and fits in.
-    """
-    order = sorted(placed, key=lambda one: -one.fit.worth)
-    cover = [_covered(one, blobs.label.shape) for one in order]
-    taken, kept = np.zeros(blobs.label.shape, np.uint8), list[int]()
-    for k, own in enumerate(cover):
-        if _free(own, taken):
-            taken |= own
-            kept.append(k)
-    for place, k in enumerate(kept):
-        others = np.zeros_like(taken)
-        for other in kept:
-            if other != k:
-                others |= cover[other]
-        for rival in range(k + 1, len(order)):
-            if order[rival].fit.worth < order[k].fit.worth - NEARLY_AS_GOOD:
-                break
-            own = cover[rival]
-            on_patch = int((own & (blobs.label > 0)).sum())
-            if (on_patch > MORE * cover[k].sum() and on_patch > ON_PATCH * own.sum() and _free(own, others)
-                    and (own & cover[k]).sum() > INSIDE * cover[k].sum()):
-                kept[place] = rival
-                break
-    return [order[k] for k in kept]
-
-
-def _covered(one: _Placed, shape: tuple[int, int]) -> NDArray[np.uint8]:
-    own = np.zeros(shape, np.uint8)
-    cv2.fillPoly(own, [np.round((one.polygon_px - 1.5) / CELL_PX).astype(np.int32)], 1)
-    return own
-
-
-def _free(own: NDArray[np.uint8], taken: NDArray[np.uint8]) -> bool:
-    return bool((own & taken).sum() <= OVERLAP * own.sum())
 
 
 def _sightings(kept: list[_Placed], unknown: list[tuple[FloatArray, FloatArray]]) -> Sightings:
