@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cameras.blobs import Blobs, blobs_of
+from cameras.coarser import Coarser, coarser
 from cameras.edges import CELL_PX, EdgeMap, edge_map
 from cameras.match import Fit, Template, fit_pose, template_of
 from cameras.model import Model
@@ -27,7 +28,7 @@ DEFAULT_SCORE = 0.7
 MOST_PEAKS = 40
 DEPTH_SHARE, DEPTH_SLACK = 0.7, 2.0  # of a part's depth, what the patch under its middle has at the least; cells less
 SLACK_CELLS, BEYOND_CELLS = 3, 24
-TRIED_ON_ONE, TRIED_ON_MORE = 6, 5
+TRIED_ON_ONE, TRIED_ON_MORE, CELLS_A_MM2 = 6, 5, 0.5
 LEAST_INNER, LEAST_INNER_TOLD = 0.4, 0.3  # share of inner edges without which nothing says that a part lies the right
 # side up; and where the outline tells as well
 FLAT_DOWN = -0.05  # the underside's edges are not quite those that were taught
@@ -108,9 +109,9 @@ class PartFinder:
         self.kinds = [_kind(part, down) for part in self.parts for down in (False, True)
                       if part.model.side_told or not down]
         areas = [cv2.contourArea(part.model.outline_mm.astype(np.float32)) for part in self.parts]
-        self.least_cells = 0.5 * min(areas, default=100.0)
+        self.smallest_mm2 = min(areas, default=100.0)
         self.highest_mm = max((part.height_mm for part in self.parts), default=10.0)
-        self._views: Views | None = None
+        self._views: tuple[Views, Coarser] | None = None
         self._camera: CameraMap | None = None
         self._shape = (0, 0)
 
@@ -119,20 +120,22 @@ class PartFinder:
         grey = grey_of(image)
         if grey.shape[0] < 32 or grey.shape[1] < 32:
             return Sightings.joined(())
-        views = self._views_for(camera, grey.shape)
+        views, coarse = self._views_for(camera, grey.shape)
         if not len(views.places_mm):
             return Sightings.joined(())
+        grey = coarse.seen(grey)
         edges = edge_map(grey)
         blobs = blobs_of(edges)
         placed: list[_Placed] = []
-        for patch, place in enumerate(_places(camera, views, blobs)):
+        for patch, place in enumerate(_places(coarse, views, blobs)):
             placed += self._on_patch(grey, views, edges, blobs, patch, place)
         kept = [placed[k] for k in best(blobs, [(one.fit.worth, one.polygon_px) for one in placed])]
-        return _sightings([one for one in kept if not one.cut], self._unknown(kept, edges, blobs, camera))
+        return _sightings([one for one in kept if not one.cut], self._unknown(kept, edges, blobs, coarse))
 
-    def _views_for(self, camera: CameraMap, shape: tuple[int, int]) -> Views:
+    def _views_for(self, camera: CameraMap, shape: tuple[int, int]) -> tuple[Views, Coarser]:
         if self._views is None or self._camera is not camera or self._shape != shape:
-            self._views = views_of(camera, self.surface_mm, self.highest_mm, shape)
+            coarse = coarser(camera, self.surface_mm, shape, self.smallest_mm2)
+            self._views = views_of(coarse, self.surface_mm, self.highest_mm, coarse.shape), coarse
             self._camera, self._shape = camera, shape
         return self._views
 
@@ -143,7 +146,7 @@ class PartFinder:
         affine = np.ascontiguousarray(views.coefficients[place][:, 1:3]) / CELL_PX
         least = max(STEP_SHARE * edges.least, STEP_NOISE * edges.noise)
         rough = self._rough(edges, blobs, patch, affine)
-        most = TRIED_ON_ONE + TRIED_ON_MORE * int(blobs.cells[patch] / self.least_cells)
+        most = TRIED_ON_ONE + TRIED_ON_MORE * int(blobs.cells[patch] / (CELLS_A_MM2 * self.smallest_mm2))
         placed: list[_Placed] = []
         tried = 0
         for score, u, v, yaw, _, number in rough:
