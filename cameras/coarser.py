@@ -44,18 +44,22 @@ class Coarser:
         return np.asarray(found, dtype=np.uint8)
 
 
-def coarser(camera: CameraMap, surface_mm: float, shape: tuple[int, int], smallest_mm2: float) -> Coarser:
+def coarser(camera: CameraMap, surface_mm: float, shape: tuple[int, int], area_mm2: float) -> Coarser:
     """The camera with pixels of the usual size, unless they are as coarse anyway or the smallest part needs finer ones.
 
-    shape (rows, columns) of its image.  smallest_mm2: area of the smallest part.
+    shape (rows, columns) of its image.  area_mm2: of the smallest part.
     """
     rows, columns = shape
-    middle = np.array([[columns / 2, rows / 2], [columns / 2 + 1, rows / 2], [columns / 2, rows / 2 + 1]])
-    at = camera.to_cell(middle, surface_mm)
-    pixel_mm = float(np.sqrt(abs(np.linalg.det(at[1:] - at[0]))))
-    across_px = 2.0 * float(np.sqrt(smallest_mm2 / np.pi)) / max(pixel_mm, 1e-9)
-    wanted = max(pixel_mm / USUAL_MM, LEAST_ACROSS_PX / max(across_px, 1e-9))
+    size_mm = pixel_mm(camera, surface_mm, shape)
+    wanted = max(size_mm / USUAL_MM, LEAST_ACROSS_PX * size_mm / (2.0 * float(np.sqrt(area_mm2 / np.pi)) + 1e-9))
     if not wanted < WORTHWHILE:  # also where the camera does not see the surface
         return Coarser(camera, np.ones(2), shape)
     less = (max(round(rows * wanted), 32), max(round(columns * wanted), 32))
     return Coarser(camera, np.array([less[1] / columns, less[0] / rows]), less)
+
+
+def pixel_mm(camera: CameraMap, surface_mm: float, shape: tuple[int, int]) -> float:
+    """How large a pixel in the middle of the image (rows, columns) is on the surface; NaN where it is not seen."""
+    middle = 0.5 * np.array([shape[1], shape[0]]) + np.array([[0.0, 0.0], [1.0, 0.0], [0.0, 1.0]])
+    at = camera.to_cell(middle, surface_mm)
+    return float(np.sqrt(abs(np.linalg.det(at[1:] - at[0]))))

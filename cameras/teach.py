@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from cameras.blobs import blobs_of
 from cameras.chain import even, outward, snapped
+from cameras.coarser import coarser, pixel_mm
 from cameras.edges import MOST_SAMPLES, edge_along, edge_map, noise_of
 from cameras.faults import InputFault
 from cameras.model import MOST_CONTOURS, Contour, Model
@@ -23,6 +24,7 @@ SPACING_MM = 0.8
 LEAST_INNER_MM = 4.0
 LEAST_INNER_SLOPE, INNER_NOISE = 20.0, 14.0  # of a 3 x 3 Sobel filter; of the image's noise
 MARGIN_PX = 14
+PART_OF_BLOB = 0.6  # the rest is shadow
 UNKNOWN_TOP, UNKNOWN_SIGMA = 0.65, 0.22  # of the height, where one view cannot tell it
 UNKNOWN_INNER = 0.85
 
@@ -71,6 +73,10 @@ def teach(grey: Grey, camera: CameraMap, surface_mm: float, taught: Taught, file
     """
     frame = GripFrame(camera, surface_mm, taught.pose)
     window, corner, blob = _window(grey, frame, taught, file)
+    area_mm2 = PART_OF_BLOB * float(blob.sum()) * pixel_mm(camera, surface_mm, grey.shape) ** 2
+    coarse = coarser(camera, surface_mm, grey.shape, area_mm2)
+    if coarse.shape != grey.shape:
+        return teach(coarse.seen(grey), coarse, surface_mm, taught, file)
     chain = rough_outline(window, blob, corner, frame, taught.height_mm, taught.turns)
     if len(chain) < 8:
         raise InputFault(file, "--tool", "no outline can be told from the belt",

@@ -11,6 +11,7 @@ from hypothesis import strategies as st
 from scenes import HOLE, PLATE, Laid, Pinhole, Scene, disc
 
 from cameras.blobs import blobs_of
+from cameras.coarser import Coarser, coarser
 from cameras.edges import edge_map, noise_of
 from cameras.find import PartFinder, TaughtPart
 from cameras.model import load_model
@@ -126,6 +127,37 @@ def test_what_is_seen_does_not_depend_on_what_was_seen_before(finder):
     again = finder.find(image, scene.camera)
     assert np.array_equal(first.xy_mm, again.xy_mm)
     assert np.array_equal(first.sigma_mm, again.sigma_mm)
+
+
+@pytest.mark.parametrize("finer", [1.6, 3.0])
+def test_finer_images_show_the_same_parts(finer):
+    """Taught from and found in images of many more pixels than are needed, as blurred as the usual ones."""
+    def fine(scene):
+        shape = round(800 * finer), round(1024 * finer)
+        image = cv2.resize(scene.image(), shape[::-1], interpolation=cv2.INTER_CUBIC)
+        return image, Coarser(scene.camera, np.array([shape[1] / 1024, shape[0] / 800]), shape)
+
+    kinds = []
+    for make, name, turns in ((plate, "plate", 1), (ring, "ring", 0)):
+        laid = make(TAUGHT_AT)
+        model = teach(*fine(Scene([laid])), 0.0, Taught(name, laid.height_mm, turns, TAUGHT_AT))
+        kinds.append(TaughtPart(name, model, laid.height_mm, turns))
+    parts = [plate((-60.0, 30.0, 0.3)), ring((10.0, -20.0, 0.0)), plate((60.0, 40.0, 2.0)), ring((34.1, -20.0, 0.0))]
+    image, camera = fine(Scene(parts))
+    seen = PartFinder(kinds, 0.0).find(image, camera)
+    nearest = matched(seen, parts)
+    assert [str(seen.kind[k]) for k in nearest] == ["plate", "ring", "plate", "ring"]
+    for part, k in zip(parts, nearest, strict=True):
+        assert np.linalg.norm(seen.xy_mm[k] - part.pose[:2]) < 0.3
+
+
+def test_tiny_parts_keep_their_pixels():
+    """A disc of 10 mm has 40 pixels across where a pixel is 0.25 mm: no fewer."""
+    camera = Pinhole(height_mm=600.0)
+    assert coarser(camera, 0.0, (800, 1024), 78.5).shape == (800, 1024)
+    rows, columns = coarser(Coarser(camera, np.full(2, 3.0), (2400, 3072)), 0.0, (2400, 3072), 2000.0).shape
+    assert 600 < rows < 700
+    assert 800 < columns < 900
 
 
 def test_colour_images_are_taken_as_grey(finder):
