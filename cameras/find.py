@@ -12,10 +12,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cameras.blobs import Blobs, blobs_of
-from cameras.coarser import Coarser, coarser
 from cameras.edges import CELL_PX, EdgeMap, edge_map
 from cameras.match import Fit, Template, fit_pose, template_of
 from cameras.model import Model
+from cameras.resized import Resized, resized
 from cameras.rivals import best
 from cameras.search import TURN_STEP_RAD, coarse_points, peaks, placements, room_for
 from cameras.sightings import Sightings
@@ -111,7 +111,7 @@ class PartFinder:
         areas = [cv2.contourArea(part.model.outline_mm.astype(np.float32)) for part in self.parts]
         self.smallest_mm2 = min(areas, default=100.0)
         self.highest_mm = max((part.height_mm for part in self.parts), default=10.0)
-        self._views: tuple[Views, Coarser] | None = None
+        self._views: tuple[Views, Resized] | None = None
         self._camera: CameraMap | None = None
         self._shape = (0, 0)
 
@@ -120,22 +120,22 @@ class PartFinder:
         grey = grey_of(image)
         if grey.shape[0] < 32 or grey.shape[1] < 32:
             return Sightings.joined(())
-        views, coarse = self._views_for(camera, grey.shape)
+        views, seen_by = self._views_for(camera, grey.shape)
         if not len(views.places_mm):
             return Sightings.joined(())
-        grey = coarse.seen(grey)
+        grey = seen_by.seen(grey)
         edges = edge_map(grey)
         blobs = blobs_of(edges)
         placed: list[_Placed] = []
-        for patch, place in enumerate(_places(coarse, views, blobs)):
+        for patch, place in enumerate(_places(seen_by, views, blobs)):
             placed += self._on_patch(grey, views, edges, blobs, patch, place)
         kept = [placed[k] for k in best(blobs, [(one.fit.worth, one.polygon_px) for one in placed])]
-        return _sightings([one for one in kept if not one.cut], self._unknown(kept, edges, blobs, coarse))
+        return _sightings([one for one in kept if not one.cut], self._unknown(kept, edges, blobs, seen_by))
 
-    def _views_for(self, camera: CameraMap, shape: tuple[int, int]) -> tuple[Views, Coarser]:
+    def _views_for(self, camera: CameraMap, shape: tuple[int, int]) -> tuple[Views, Resized]:
         if self._views is None or self._camera is not camera or self._shape != shape:
-            coarse = coarser(camera, self.surface_mm, shape, self.smallest_mm2)
-            self._views = views_of(coarse, self.surface_mm, self.highest_mm, coarse.shape), coarse
+            seen_by = resized(camera, self.surface_mm, shape, self.smallest_mm2)
+            self._views = views_of(seen_by, self.surface_mm, self.highest_mm, seen_by.shape), seen_by
             self._camera, self._shape = camera, shape
         return self._views
 

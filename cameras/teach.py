@@ -9,11 +9,11 @@ from numpy.typing import NDArray
 
 from cameras.blobs import blobs_of
 from cameras.chain import even, outward, snapped
-from cameras.coarser import coarser, pixel_mm
 from cameras.edges import MOST_SAMPLES, edge_along, edge_map, noise_of
 from cameras.faults import InputFault
 from cameras.model import MOST_CONTOURS, Contour, Model
 from cameras.outline import rough_outline
+from cameras.resized import pixel_mm, resized
 from cameras.symmetry import alike_under_turn, area, edge_height, off_centre, repeated, turns_seen, wall_heights
 from cameras.view import CameraMap
 
@@ -71,12 +71,14 @@ def teach(grey: Grey, camera: CameraMap, surface_mm: float, taught: Taught, file
 
     grey (rows, columns).  surface_mm: height of what the part lies on.  file: named in faults.
     """
-    frame = GripFrame(camera, surface_mm, taught.pose)
-    window, corner, blob = _window(grey, frame, taught, file)
+    blob = _window(grey, GripFrame(camera, surface_mm, taught.pose), taught, file)[2]
     area_mm2 = PART_OF_BLOB * float(blob.sum()) * pixel_mm(camera, surface_mm, grey.shape) ** 2
-    coarse = coarser(camera, surface_mm, grey.shape, area_mm2)
-    if coarse.shape != grey.shape:
-        return teach(coarse.seen(grey), coarse, surface_mm, taught, file)
+    usual = resized(camera, surface_mm, grey.shape, area_mm2)
+    return _taught(usual.seen(grey), GripFrame(usual, surface_mm, taught.pose), taught, file)
+
+
+def _taught(grey: Grey, frame: GripFrame, taught: Taught, file: str) -> Model:
+    window, corner, blob = _window(grey, frame, taught, file)
     chain = rough_outline(window, blob, corner, frame, taught.height_mm, taught.turns)
     if len(chain) < 8:
         raise InputFault(file, "--tool", "no outline can be told from the belt",

@@ -11,10 +11,10 @@ from hypothesis import strategies as st
 from scenes import HOLE, PLATE, Laid, Pinhole, Scene, disc
 
 from cameras.blobs import blobs_of
-from cameras.coarser import Coarser, coarser
 from cameras.edges import edge_map, noise_of
 from cameras.find import PartFinder, TaughtPart
 from cameras.model import load_model
+from cameras.resized import Resized, resized
 from cameras.teach import Taught, teach
 from cameras.view import project, unproject, views_of
 
@@ -129,13 +129,14 @@ def test_what_is_seen_does_not_depend_on_what_was_seen_before(finder):
     assert np.array_equal(first.sigma_mm, again.sigma_mm)
 
 
-@pytest.mark.parametrize("finer", [1.6, 3.0])
-def test_finer_images_show_the_same_parts(finer):
-    """Taught from and found in images of many more pixels than are needed, as blurred as the usual ones."""
+@pytest.mark.parametrize("finer", [0.6, 1.6, 3.0])
+def test_finer_and_coarser_images_show_the_same_parts(finer):
+    """Taught from and found in images of more pixels than are needed, as blurred as the usual ones; or of fewer."""
+
     def fine(scene):
         shape = round(800 * finer), round(1024 * finer)
-        image = cv2.resize(scene.image(), shape[::-1], interpolation=cv2.INTER_CUBIC)
-        return image, Coarser(scene.camera, np.array([shape[1] / 1024, shape[0] / 800]), shape)
+        image = cv2.resize(scene.image(), shape[::-1], interpolation=cv2.INTER_AREA if finer < 1 else cv2.INTER_CUBIC)
+        return image, Resized(scene.camera, np.array([shape[1] / 1024, shape[0] / 800]), shape)
 
     kinds = []
     for make, name, turns in ((plate, "plate", 1), (ring, "ring", 0)):
@@ -154,8 +155,8 @@ def test_finer_images_show_the_same_parts(finer):
 def test_tiny_parts_keep_their_pixels():
     """A disc of 10 mm has 40 pixels across where a pixel is 0.25 mm: no fewer."""
     camera = Pinhole(height_mm=600.0)
-    assert coarser(camera, 0.0, (800, 1024), 78.5).shape == (800, 1024)
-    rows, columns = coarser(Coarser(camera, np.full(2, 3.0), (2400, 3072)), 0.0, (2400, 3072), 2000.0).shape
+    assert resized(camera, 0.0, (800, 1024), 78.5).shape == (800, 1024)
+    rows, columns = resized(Resized(camera, np.full(2, 3.0), (2400, 3072)), 0.0, (2400, 3072), 2000.0).shape
     assert 600 < rows < 700
     assert 800 < columns < 900
 

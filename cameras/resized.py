@@ -1,7 +1,7 @@
-"""Fine images made coarser before parts are looked for.
+"""Images brought to pixels of the usual size before parts are looked for.
 
 Light and chamfers shift edges by tenths of a millimetre however fine the pixels are, and a blurred edge spreads over
-more of them: what counts as an edge, and how far off it may lie, is said in pixels of the usual size.
+more of them, over fewer where they are coarse: what counts as an edge, and how far off it may lie, is said in pixels.
 """
 
 from dataclasses import dataclass
@@ -17,12 +17,13 @@ FloatArray = NDArray[np.float64]
 
 USUAL_MM = 0.3  # a pixel
 LEAST_ACROSS_PX = 80.0  # the smallest part, as a disc of its area
-WORTHWHILE = 0.8
+COARSER, FINER, MOST_FINER = 0.8, 1.25, 2.0  # changes worth the resampling, and the largest
+MOST_PIXELS = 4e6  # of an image made finer
 
 
 @dataclass(frozen=True)
-class Coarser:
-    """A camera whose image is seen in `shape` (rows, columns). scale (2,): coarser pixels for each of its own, u, v."""
+class Resized:
+    """A camera whose image is seen in `shape` (rows, columns). scale (2,): pixels for each of its own, u, v."""
 
     camera: CameraMap
     scale: FloatArray
@@ -37,25 +38,31 @@ class Coarser:
         return (self.camera.to_pixel(points_mm) + 0.5) * self.scale - 0.5
 
     def seen(self, grey: NDArray[np.uint8]) -> NDArray[np.uint8]:
-        """The image (rows, columns) in its coarser shape."""
+        """The camera's image (rows, columns) in that shape."""
         if grey.shape == self.shape:
             return grey
-        found: NDArray[Any] = cv2.resize(grey, self.shape[::-1], interpolation=cv2.INTER_AREA)
+        way = cv2.INTER_AREA if self.shape[0] < grey.shape[0] else cv2.INTER_CUBIC
+        found: NDArray[Any] = cv2.resize(grey, self.shape[::-1], interpolation=way)
         return np.asarray(found, dtype=np.uint8)
 
 
-def coarser(camera: CameraMap, surface_mm: float, shape: tuple[int, int], area_mm2: float) -> Coarser:
-    """The camera with pixels of the usual size, unless they are as coarse anyway or the smallest part needs finer ones.
+def resized(camera: CameraMap, surface_mm: float, shape: tuple[int, int], area_mm2: float) -> Resized:
+    """The camera with pixels of about the usual size; not made coarser than the smallest part allows.
 
     shape (rows, columns) of its image.  area_mm2: of the smallest part.
     """
     rows, columns = shape
     size_mm = pixel_mm(camera, surface_mm, shape)
-    wanted = max(size_mm / USUAL_MM, LEAST_ACROSS_PX * size_mm / (2.0 * float(np.sqrt(area_mm2 / np.pi)) + 1e-9))
-    if not wanted < WORTHWHILE:  # also where the camera does not see the surface
-        return Coarser(camera, np.ones(2), shape)
-    less = (max(round(rows * wanted), 32), max(round(columns * wanted), 32))
-    return Coarser(camera, np.array([less[1] / columns, less[0] / rows]), less)
+    wanted = size_mm / USUAL_MM
+    if wanted < 1.0:
+        across_px = 2.0 * float(np.sqrt(area_mm2 / np.pi)) / size_mm
+        wanted = min(max(wanted, LEAST_ACROSS_PX / max(across_px, 1e-9)), 1.0)
+    else:
+        wanted = min(wanted, MOST_FINER, max(float(np.sqrt(MOST_PIXELS / (rows * columns))), 1.0))
+    if not (wanted < COARSER or wanted > FINER):  # also where the camera does not see the surface
+        return Resized(camera, np.ones(2), shape)
+    made = (max(round(rows * wanted), 32), max(round(columns * wanted), 32))
+    return Resized(camera, np.array([made[1] / columns, made[0] / rows]), made)
 
 
 def pixel_mm(camera: CameraMap, surface_mm: float, shape: tuple[int, int]) -> float:
