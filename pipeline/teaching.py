@@ -16,6 +16,7 @@ from pipeline.cell import Cell, PartCell
 
 FloatArray = NDArray[np.float64]
 ENLARGED = 5
+MEASURED = 0.25  # of the height: heights from several images are that sure at the least
 
 
 def part_of(cell: Cell, name: str) -> PartCell:
@@ -63,11 +64,16 @@ def poses_when_seen(
     return [pose_when_seen(cell, tool, one, touch_counts) for one in each]
 
 
-def remarks(cell: Cell, model: Model) -> list[str]:
-    """What the teacher should know: symmetry seen, whether sides can be told, kinds that look alike."""
+def remarks(cell: Cell, model: Model, images: int = 1) -> list[str]:
+    """What the teacher should know: symmetry seen, how well heights are known from so many images, whether sides can be
+    told, kinds that look alike."""
     seen = {0: "round", 1: "1"}.get(model.proposed_turns, str(model.proposed_turns))
     given = "round" if model.turns == 0 else str(model.turns)
     lines = [f"symmetry: {given}" + ("" if seen == given else f", by the cell file; the outline alone shows {seen}")]
+    sure_mm = 1.96 * model.outline.height_sigma_mm
+    lines.append(f"the edges of its outline lie {model.outline.height_mm:.1f} mm up, +- {sure_mm:.1f} mm (95 %)")
+    if images > 1 and sure_mm > MEASURED * model.height_mm:
+        lines.append("warning: the images hardly measure that; take one with the part farther along the belt")
     if model.side_told:
         by = "inner edges" if model.mirrored_alike else "outline"
         lines.append(f"the wrong side can be told from the right one by its {by}")

@@ -3,13 +3,14 @@
 import numpy as np
 import pytest
 from scenes import HOLE, PLATE, Laid, Scene, disc
+from some_arms import changed
 from some_sightings import CELL, HEADING
 
 from cameras.faults import InputFault
 from cameras.find import PartFinder, TaughtPart
 from cameras.teach import Taught, teach
 from cameras.teach_views import TeachingView, teach_views
-from pipeline.teaching import poses_when_seen
+from pipeline.teaching import poses_when_seen, remarks
 
 PLACES = ((-95.0, 55.0), (5.0, 0.0), (100.0, -60.0))
 YAW = 0.6
@@ -62,3 +63,10 @@ def test_each_image_has_its_counts():
     assert np.allclose(np.array(second[:2]) - first[:2], 2000 * 0.05 * HEADING)
     with pytest.raises(InputFault, match="one for each image"):
         poses_when_seen(CELL, "100,50,30", [1000.0], 5000.0, 2)
+
+
+@pytest.mark.parametrize(("places", "warned"), [(PLACES, False), (((5.0, 0.0), (7.0, 1.0)), True)])
+def test_images_that_measure_no_height_are_remarked_on(places, warned):
+    model = teach_views(views(PLATE, 25.0, places=places), 0.0)
+    assert any("hardly measure" in line for line in remarks(changed(), model, len(places))) == warned
+    assert not any("hardly measure" in line for line in remarks(changed(), model))

@@ -54,7 +54,7 @@ def teach(
         text.write_text(model.as_json(), encoding="utf-8")
         model_picture(views[0].grey, view, whole, model, poses[0], drawn)
     print(f"{len(model.outline.steps)} outline points, {len(model.inner)} inner edges -> {out}, {shown}")
-    for line in remarks(whole, model):
+    for line in remarks(whole, model, len(images)):
         print(line)
 
 
