@@ -175,6 +175,8 @@ class _Clock:
         while np.isfinite(now) and tries < MOST_RETRIES:
             self.tick(now)
             one = self._decide(now, self.joints, now)
+            for gripper in range(1, len(self.permits)):  # what the first can't have now, another may
+                one = one or (None if self.turned_down else self._decide(now, self.joints, now, gripper))
             pick = one.pick if one else None
             news, later = self.watch.next_news(now), self.watch.next_frame(now)
             tries = 0 if pick or np.isfinite(later) else tries + 1
@@ -246,14 +248,14 @@ class _Clock:
             done, last = trip, trip.chosen[-1].pick
             self.filling.fill(last.place)
             self.watch.gripped[last.part.number - 1] = True
-            trip = self._longer(trip) if len(trip.chosen) < len(self.permits) else None
+            trip = self._longer(trip) if last.gripper + 1 < len(self.permits) else None
         self.picks += done.picks
         self.joints, self.free_s = done.end_joints, done.end_s
         return self.free_s
 
     def _longer(self, trip: Trip) -> Trip | None:
         """The trip with another pick before anything is set down; None where there is none, or it loses by it."""
-        gripper = len(trip.chosen)
+        gripper = trip.chosen[-1].pick.gripper + 1
         kept = held_on(trip.chosen[-1], self.permits[gripper - 1])
         if kept is None:
             return None

@@ -221,11 +221,19 @@ def test_a_tray_is_emptied_in_trips_that_hold_from_their_files(
     out = written(stream, tmp_path, "lookahead")
     files = Files(tmp_path, out)
     assert [line for check in (limits, start, fates, windows, slots) for line in check(files)] == []
-    assert len(files.picks) >= number - 1  # one lies where the first gripper comes too near the stretched arm
+    assert len(files.picks) == number
     followed(files, stream)
     straight(files)
     filled(files)
     assert held(files) >= 2
+
+
+def test_what_the_first_gripper_cannot_have_another_picks() -> None:
+    """One part lies where the first of four would bring the arm too near its stretched pose."""
+    setting = strewn(60, 26.0, tool__grippers=FOUR).setting()
+    assert len(replay(setting, Arrival(), "arrival", 200).picks) == 59
+    done = run(setting, "arrival", 200)
+    assert len(done.picks) == 60
 
 
 def test_a_tray_is_emptied_no_later_than_with_one_gripper() -> None:
