@@ -83,6 +83,7 @@ class SceneBuilder:
         """
         state = self.belt.known_at(now)
         frame = self.watch.look(now, state.travel_mm)
+        self._holds = {k: self._holds[k] for k in self.watch.lying if k in self._holds}
         candidates: list[Candidate] = []
         for k in self.watch.waiting():
             one = None if k in self.refusals else self._candidate(k, frame, filling)
