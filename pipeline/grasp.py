@@ -134,11 +134,12 @@ class Grasping:
         poses, grips = self._tool_poses(part, xy_mm, yaw, along)
         yaws = poses[:, 0, 3]
         lanes = turned(self.arm, self.arm.inverse(poses).swapaxes(1, 2), yaws[:, None, None], 0)  # (y, 2, m, 4)
-        ways = [(y, elbow, turn) for y, elbow in np.ndindex(len(yaws), 2) for turn in self._turns(lanes[y, elbow, :, 3])]
+        ways = [(y, elbow, turn) for y, elbow in np.ndindex(len(yaws), 2)
+                for turn in self._turns(lanes[y, elbow, :, 3])]
         which, elbows, turns = np.array(ways).T
         joints = self.arm.with_j4_turn(lanes[which, elbows], turns[:, None])
         usable = self._usable(joints.reshape(-1, 4)).reshape(joints.shape[:2])
-        able = usable[:, self._inside].any(axis=1)
+        able = np.asarray(usable[:, self._inside].any(axis=1))
         if not able.any():
             shortest = _Shortfall(self)
             for lane in joints[:, self._inside]:
@@ -146,7 +147,7 @@ class Grasping:
             return shortest.refusal(poses[:, self._inside], along[self._inside])
         at = poses[:, 0, :2] - (along[0] - xy_mm @ self.heading) * self.heading
         holds = tuple(Hold(at[y], float(yaws[y]), float(poses[y, 0, 2]), elbow, turn, self.gripper)
-                      for (y, elbow, turn), has in zip(ways, able, strict=True) if has)
+                      for (y, elbow, turn), has in zip(ways, able.tolist(), strict=True) if has)
         return Holds(holds, grips[which[able]], joints[able], usable[able], along)
 
     def _tool_poses(self, part: PartCell, xy_mm: FloatArray, yaw: float,

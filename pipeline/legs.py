@@ -94,11 +94,11 @@ class Legs:
         if still:  # a standing part outside the window can't be had
             closes = np.where((nodes.enters_mm > 0) | (nodes.leaves_mm < 0), -np.inf, closes)
         contact, finish = (np.empty((len(starts), len(nodes), len(start_s))) for _ in range(2))
-        ends = (np.ascontiguousarray(joints[..., TURNING]) for joints in (starts, lane, nodes.drop))
+        rests, passed, slots = (np.ascontiguousarray(joints[..., TURNING]) for joints in (starts, lane, nodes.drop))
         _leg_times(
-            *ends, speed, usable, _firsts(nodes), t_at, out, back, opens, closes, self._tables, self._limits,
-            self.mover.motion.grasp_s, self.mover.motion.release_s, self.mover.singular, still, start_s, contact,
-            finish,
+            rests, passed, slots, speed, usable, _firsts(nodes), t_at, out, back, opens, closes, self._tables,
+            self._limits, self.mover.motion.grasp_s, self.mover.motion.release_s, self.mover.singular, still, start_s,
+            contact, finish,
         )  # fmt: skip
         return LegTimes(start_s, start_of + 1, contact, finish)
 

@@ -35,7 +35,7 @@ class Samples:
 
     def between(self, begin: int, end: int) -> tuple[FloatArray, FloatArray]:
         """Times (m,) and joints (m, 4), rad and mm, of the samples from one number up to another."""
-        t = np.arange(self._first + begin, min(self._first + end, self._end)) * self._step_s
+        t = np.asarray(np.arange(self._first + begin, min(self._first + end, self._end)) * self._step_s, np.float64)
         joints = np.empty((len(t), 4))
         if len(t):
             departs = np.array([move.depart_s for move in self._moves])

@@ -20,63 +20,75 @@ from pipeline.order.task import BoolArray, FloatArray, IntArray, Task
 
 Records = NDArray[np.void]
 HAIR = 1e-9
-MOST_ITEMS = 62  # bits of a memory
+MOST_ITEMS = 100
 MOST_BUCKETS = 2000
 POOL = 1 << 20  # walks that may be kept at once
-WORK = 26_000_000  # legs looked at, about, in all
+WORK = 18_000_000  # legs looked at, about, in all
 STAGES = ((3, 0.4), (8, 0.6))  # neighbours remembered, and the share of the work
 TURNS = 60  # of the ascent in each stage
 LENGTH, PATIENCE, SHRINK = 0.5, 4, 0.6  # of its steps at first; turns without a better bound, then it shrinks so much
 
 WALK = np.dtype([
-    ("memory", "i8"), ("time", "f8"), ("cost", "f8"), ("parent", "i4"), ("listed", "i4"), ("chain", "i4"), ("last", "i2"),
+    ("time", "f8"), ("cost", "f8"), ("parent", "i4"), ("listed", "i4"), ("chain", "i4"), ("last", "i2"),
+    ("memory", "i2"),
 ], align=True)
-"""memory: the items not to be done again, near the last one; listed: next of the same stretch of time; chain: next of
-those that are alike in it."""
+"""memory: bit k set where the k-th neighbour of the last item must not be done again; listed: next of the same stretch
+of time; chain: next of those that are alike in it."""
 
-_WALKS, _IDS, _SLOTS = rows_of(WALK), numba.int32[::1], numba.int32[:, :, ::1]
+_WALKS, _IDS, _TABLE = rows_of(WALK), numba.int32[::1], numba.int16[:, :, ::1]
+_PAIR = numba.types.Tuple((numba.float64, numba.int64))  # type: ignore[no-untyped-call]
 _ROW, _MATRIX, _NEAR, _MAY = numba.float64[::1], numba.float64[:, ::1], numba.int64[:, ::1], numba.boolean[:, ::1]
 
 
-@compiled(numba.int64(numba.int64, numba.int64[::1]))
-def _index(memory: int, near: IntArray) -> int:
-    """A memory as a number below 2^g, by the g neighbours of an item."""
-    index = 0
-    for bit in range(len(near)):
-        index |= ((memory >> (near[bit] - 1)) & 1) << bit
-    return index
+@compiled(numba.void(_NEAR, _MAY, _TABLE))
+def _remember(near: IntArray, may: BoolArray, memory_after: NDArray[np.int16]) -> None:
+    """Fill in the memory at an item that follows another with a memory of its own; -1: it may not follow."""
+    nodes, remembered = near.shape
+    bit = np.full((nodes, nodes), -1)
+    for node in range(nodes):
+        for k in range(remembered):
+            bit[node, near[node, k]] = k
+    for at in range(nodes):
+        for node in range(1, nodes):
+            for memory in range(memory_after.shape[2]):
+                back = bit[at, node] >= 0 and memory >> bit[at, node] & 1
+                after = 1 << bit[node, at] if bit[node, at] >= 0 else 0
+                for k in range(remembered):
+                    if memory >> k & 1 and bit[node, near[at, k]] >= 0:
+                        after |= 1 << bit[node, near[at, k]]
+                memory_after[at, node, memory] = after if may[at, node] and not back else -1
 
 
 @compiled(numba.boolean(_MATRIX, numba.int64, numba.int64, numba.float64))
-def _forgone(least: FloatArray, node: int, index: int, cost: float) -> bool:
+def _forgone(least: FloatArray, node: int, memory: int, cost: float) -> bool:
     """Whether a walk that ended here in an earlier stretch of time, and remembers no more, costs no more."""
-    part = index
+    part = memory
     while True:
         if least[node, part] <= cost:
             return True
         if part == 0:
             return False
-        part = (part - 1) & index
+        part = (part - 1) & memory
 
 
-@compiled(numba.boolean(_WALKS, _SLOTS, _IDS, _IDS, numba.int64, numba.int64, numba.int64, numba.int64))
+@compiled(numba.boolean(_WALKS, numba.int32[:, :, ::1], _IDS, _IDS, numba.int64, numba.int64, numba.boolean))
 def _put(
-    pool: Records, slots: NDArray[np.int32], heads: NDArray[np.int32], tails: NDArray[np.int32], new: int, index: int,
-    bucket: int, now: int,
+    pool: Records, slots: NDArray[np.int32], heads: NDArray[np.int32], tails: NDArray[np.int32], new: int, bucket: int,
+    later: bool,
 ) -> bool:
-    """Put a walk filled in among its like of a stretch of time, unless it is needless; whether its record is used."""
-    node = pool[new].last
-    other = slots[bucket, node, index]
+    """Put a walk filled in among its like of a stretch of time, unless it is needless; whether its record is used.
+    later: none of the stretch has been gone on with."""
+    walk = pool[new]
+    other = slots[bucket, walk.last, walk.memory]
     while other >= 0:
-        if pool[other].time <= pool[new].time and pool[other].cost <= pool[new].cost:
+        if pool[other].time <= walk.time and pool[other].cost <= walk.cost:
             return False
-        if bucket > now and pool[other].time >= pool[new].time and pool[other].cost >= pool[new].cost:
-            pool[other].time, pool[other].cost = pool[new].time, pool[new].cost
-            pool[other].parent = pool[new].parent
+        if later and pool[other].time >= walk.time and pool[other].cost >= walk.cost:
+            pool[other].time, pool[other].cost, pool[other].parent = walk.time, walk.cost, walk.parent
             return False
         other = pool[other].chain
-    pool[new].chain, slots[bucket, node, index] = slots[bucket, node, index], new
-    pool[new].listed = -1
+    pool[new].chain, pool[new].listed = slots[bucket, walk.last, walk.memory], -1
+    slots[bucket, walk.last, walk.memory] = new
     if tails[bucket] >= 0:
         pool[tails[bucket]].listed = new
     else:
@@ -85,15 +97,16 @@ def _put(
     return True
 
 
-@compiled(numba.types.Tuple((numba.float64, numba.int64))(
-    _MATRIX, _MATRIX, numba.boolean, _ROW, _ROW, _MAY, _NEAR, numba.int64[::1], _ROW, numba.float64, _WALKS, _SLOTS,
-    numba.int64[::1]))
+@compiled(_PAIR(
+    _MATRIX, _MATRIX, numba.boolean, _ROW, _ROW, numba.boolean[::1], _TABLE, _ROW, numba.float64, _WALKS,
+    numba.int32[:, :, ::1], numba.int64[::1], numba.int64))
 def best_walk(
-    go: FloatArray, cost: FloatArray, waits: bool, early: FloatArray, late: FloatArray, may: BoolArray, near: IntArray,
-    near_set: IntArray, price: FloatArray, step: float, pool: Records, slots: NDArray[np.int32], visits: IntArray,
+    go: FloatArray, cost: FloatArray, waits: bool, early: FloatArray, late: FloatArray, may_end: BoolArray,
+    memory_after: NDArray[np.int16], price: FloatArray, step: float, pool: Records, slots: NDArray[np.int32],
+    visits: IntArray, most: int,
 ) -> tuple[float, int]:
     """The least value of a walk from start to end with the prices of its items, and how many walks were gone on with
-    (-1: there was no room for all); fills how often the best one does each item.
+    (-1: there are more than `most`, or no room for all); fills how often the best one does each item.
 
     step: length of a stretch of time, no longer than any leg, so that walks are worked off stretch by stretch.
     """
@@ -101,40 +114,36 @@ def best_walk(
     slots[:] = -1
     heads, tails = np.full(buckets, -1, np.int32), np.full(buckets, -1, np.int32)
     least = np.full((nodes, slots.shape[2]), np.inf)
-    pool[0].memory, pool[0].time, pool[0].cost, pool[0].parent, pool[0].listed, pool[0].last = 0, 0.0, 0.0, -1, -1, 0
+    pool[0].time, pool[0].cost, pool[0].parent, pool[0].listed, pool[0].last, pool[0].memory = 0.0, 0.0, -1, -1, 0, 0
     heads[0], used, made, best, end = 0, 1, 0, np.inf, -1
     for now in range(buckets):
         walk = heads[now]
         while walk >= 0:
             at, memory, time, spent = pool[walk].last, pool[walk].memory, pool[walk].time, pool[walk].cost
-            if at == 0 or not _forgone(least, at, _index(memory, near[at]), spent):
+            if at == 0 or not _forgone(least, at, memory, spent):
                 made += 1
-                if at > 0:
-                    memory |= 1 << (at - 1)
-                    value = spent + (time + go[at, 0] if waits else cost[at, 0])
-                    if may[at, 0] and value < best:
-                        best, end = value, walk
+                value = spent + (time + go[at, 0] if waits else cost[at, 0])
+                if at > 0 and may_end[at] and value < best:
+                    best, end = value, walk
                 for node in range(1, nodes):
+                    after = memory_after[at, node, memory]
                     then = max(time + go[at, node], early[node])
-                    if not may[at, node] or memory >> (node - 1) & 1 or then > late[node]:
+                    if after < 0 or then > late[node]:
                         continue
                     whole = spent + price[node] + (0.0 if waits else cost[at, node])
-                    kept = memory & near_set[node]
-                    index = _index(kept, near[node])
-                    if least[node, index] <= whole or least[node, 0] <= whole:
+                    if least[node, after] <= whole or least[node, 0] <= whole:
                         continue
-                    if used >= len(pool):
+                    if used >= len(pool) or made > most:
                         return -np.inf, -1
-                    pool[used].memory, pool[used].time, pool[used].cost = kept, then, whole
-                    pool[used].parent, pool[used].last = walk, node
-                    used += _put(pool, slots, heads, tails, used, index, min(int(then / step), buckets - 1), now)
+                    pool[used].time, pool[used].cost, pool[used].parent = then, whole, walk
+                    pool[used].last, pool[used].memory = node, after
+                    bucket = min(int(then / step), buckets - 1)
+                    used += _put(pool, slots, heads, tails, used, bucket, bucket > now)
             walk = pool[walk].listed
         walk = heads[now]
         while walk >= 0:  # those of later stretches are later: here they can be no better
-            at = pool[walk].last
-            if at > 0:
-                index = _index(pool[walk].memory, near[at])
-                least[at, index] = min(least[at, index], pool[walk].cost)
+            at, memory = pool[walk].last, pool[walk].memory
+            least[at, memory] = min(least[at, memory], pool[walk].cost)
             walk = pool[walk].listed
     visits[:] = 0
     while end > 0:
@@ -179,15 +188,17 @@ def _climbed(
 ) -> tuple[float, FloatArray]:
     """The best bound over prices that start as given and climb, and the prices it was found at."""
     near = np.ascontiguousarray(ground.nearest[:, :remembered])
-    near_set = (np.int64(1) << (near - 1)).sum(axis=1)
     slots = np.empty((ground.buckets, len(price), 1 << remembered), np.int32)
+    memory_after = np.empty((len(price), len(price), 1 << remembered), np.int16)
+    _remember(near, ground.may, memory_after)
     visits, way = np.zeros(len(price), np.int64), np.zeros(len(price))
     best, kept, length, stale, work = 0.0, price, LENGTH, 0, 0
     for _ in range(TURNS):
         if work > most or perf_counter() > until:
             break
-        value, made = best_walk(task.go, task.cost, task.waits, task.early, ground.late, ground.may, near, near_set,
-                                price, ground.step, pool, slots, visits)
+        value, made = best_walk(task.go, task.cost, task.waits, task.early, ground.late, ground.may[:, 0].copy(),
+                                memory_after, price, ground.step, pool, slots, visits,
+                                int((most - work) / len(price)))
         if made < 0:
             break
         bound, over = value - float(price.sum()), visits - 1.0
@@ -218,5 +229,6 @@ def _ground(task: Task, upper: float) -> _Ground | None:
     np.fill_diagonal(apart, np.inf)
     apart[:, 0] = np.inf
     step, last = float(legs.min()), float(late[1:].max())
-    buckets = int(last / step) + 1 if step > 0 else MOST_BUCKETS + 1
-    return _Ground(late, may, np.argsort(apart, axis=1, kind="stable"), step, buckets) if buckets <= MOST_BUCKETS else None
+    if last >= MOST_BUCKETS * step:
+        return None
+    return _Ground(late, may, np.argsort(apart, axis=1, kind="stable"), step, int(last / step) + 1)
