@@ -115,7 +115,8 @@ def best_walk(
     heads, tails = np.full(buckets, -1, np.int32), np.full(buckets, -1, np.int32)
     least = np.full((nodes, slots.shape[2]), np.inf)
     pool[0].time, pool[0].cost, pool[0].parent, pool[0].listed, pool[0].last, pool[0].memory = 0.0, 0.0, -1, -1, 0, 0
-    heads[0], used, made, best, end = 0, 1, 0, np.inf, -1
+    heads[0], tails[0] = 0, 0
+    used, made, best, end = 1, 0, np.inf, -1
     for now in range(buckets):
         walk = heads[now]
         while walk >= 0:
@@ -174,6 +175,7 @@ def walk_bound(task: Task, upper: float, until: float) -> float:
         return 0.0
     best, leave, enter = priced_round(np.where(ground.may, task.cost, np.inf), upper)
     price, pool = leave + enter, np.empty(POOL, WALK)
+    price[0] = 0.0  # every walk begins and ends there once
     for remembered, share in STAGES:
         if best >= upper * (1 - HAIR):
             break
