@@ -24,8 +24,9 @@ MOST_ITEMS = 100
 MOST_BUCKETS = 2000
 POOL = 1 << 20  # walks that may be kept at once
 WORK = 18_000_000  # legs looked at, about, in all
-STAGES = ((3, 0.4), (8, 0.6))  # neighbours remembered, and the share of the work
-TURNS = 60  # of the ascent in each stage
+REMEMBERED = 5  # neighbours
+TURNS = 60  # of the ascent
+CLOSE = 0.01  # where the tree's bound is so near the value, walks seldom come nearer in the time
 LENGTH, PATIENCE, SHRINK = 0.5, 4, 0.6  # of its steps at first; turns without a better bound, then it shrinks so much
 
 WALK = np.dtype([
@@ -174,33 +175,28 @@ def walk_bound(task: Task, upper: float, until: float) -> float:
     if ground is None:
         return 0.0
     best, leave, enter = priced_round(np.where(ground.may, task.cost, np.inf), upper)
-    price, pool = leave + enter, np.empty(POOL, WALK)
-    price[0] = 0.0  # every walk begins and ends there once
-    for remembered, share in STAGES:
-        if best >= upper * (1 - HAIR):
-            break
-        bound, price = _climbed(task, ground, upper, price, pool, min(remembered, len(price) - 2), share * WORK, until)
-        best = max(best, bound)
+    if best < upper * (1 - CLOSE):
+        price = leave + enter
+        price[0] = 0.0  # every walk begins and ends there once
+        best = max(best, _climbed(task, ground, upper, price, until))
     return min(best, upper)
 
 
-def _climbed(
-    task: Task, ground: _Ground, upper: float, price: FloatArray, pool: Records, remembered: int, most: float,
-    until: float,
-) -> tuple[float, FloatArray]:
-    """The best bound over prices that start as given and climb, and the prices it was found at."""
-    near = np.ascontiguousarray(ground.nearest[:, :remembered])
+def _climbed(task: Task, ground: _Ground, upper: float, price: FloatArray, until: float) -> float:
+    """The best bound over prices that start as given and climb."""
+    remembered = min(REMEMBERED, len(price) - 2)
+    near, pool = np.ascontiguousarray(ground.nearest[:, :remembered]), np.empty(POOL, WALK)
     slots = np.empty((ground.buckets, len(price), 1 << remembered), np.int32)
     memory_after = np.empty((len(price), len(price), 1 << remembered), np.int16)
     _remember(near, ground.may, memory_after)
     visits, way = np.zeros(len(price), np.int64), np.zeros(len(price))
     best, kept, length, stale, work = 0.0, price, LENGTH, 0, 0
     for _ in range(TURNS):
-        if work > most or perf_counter() > until:
+        if work > WORK or perf_counter() > until:
             break
         value, made = best_walk(task.go, task.cost, task.waits, task.early, ground.late, ground.may[:, 0].copy(),
                                 memory_after, price, ground.step, pool, slots, visits,
-                                int((most - work) / len(price)))
+                                (WORK - work) // len(price))
         if made < 0:
             break
         bound, over = value - float(price.sum()), visits - 1.0
@@ -213,7 +209,7 @@ def _climbed(
             price, length, stale = kept, length * SHRINK, 0
         way = 0.5 * way + 0.5 * over
         price = price + length * max(upper - bound, 1e-3 * upper) / max(float(way @ way), HAIR) * way
-    return best, kept
+    return best
 
 
 def _ground(task: Task, upper: float) -> _Ground | None:
