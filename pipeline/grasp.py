@@ -132,25 +132,23 @@ class Grasping:
         still = self.cell.belt is None
         along = np.array([xy_mm @ self.heading]) if still else self.lane_mm
         poses, grips = self._tool_poses(part, xy_mm, yaw, along)
-        solved = self.arm.inverse(poses)  # (y, m, 2, 4)
         yaws = poses[:, 0, 3]
-        found: list[tuple[Hold, int, FloatArray, NDArray[np.bool_]]] = []
-        shortest = _Shortfall(self)
-        for y, elbow in np.ndindex(len(yaws), 2):
-            lane = turned(self.arm, solved[y, :, elbow], float(yaws[y]), 0)
-            for turn in self._turns(lane[:, 3]):
-                joints = self.arm.with_j4_turn(lane, np.array(turn))
-                usable = self._usable(joints)
-                if usable[self._inside].any():
-                    at = poses[y, 0, :2] - (along[0] - xy_mm @ self.heading) * self.heading
-                    hold = Hold(at, float(yaws[y]), float(poses[y, 0, 2]), elbow, int(turn), self.gripper)
-                    found.append((hold, int(grips[y]), joints, usable))
-                else:
-                    shortest.look(joints[self._inside])
-        if not found:
+        lanes = turned(self.arm, self.arm.inverse(poses).swapaxes(1, 2), yaws[:, None, None], 0)  # (y, 2, m, 4)
+        ways = [(y, elbow, turn) for y, elbow in np.ndindex(len(yaws), 2)
+                for turn in self._turns(lanes[y, elbow, :, 3])]
+        which, elbows, turns = np.array(ways).T
+        joints = self.arm.with_j4_turn(lanes[which, elbows], turns[:, None])
+        usable = self._usable(joints.reshape(-1, 4)).reshape(joints.shape[:2])
+        able = np.asarray(usable[:, self._inside].any(axis=1))
+        if not able.any():
+            shortest = _Shortfall(self)
+            for lane in joints[:, self._inside]:
+                shortest.look(lane)
             return shortest.refusal(poses[:, self._inside], along[self._inside])
-        holds, which, joints_of, usable_of = zip(*found, strict=True)
-        return Holds(holds, np.array(which), np.stack(joints_of), np.stack(usable_of), along)
+        at = poses[:, 0, :2] - (along[0] - xy_mm @ self.heading) * self.heading
+        holds = tuple(Hold(at[y], float(yaws[y]), float(poses[y, 0, 2]), elbow, turn, self.gripper)
+                      for (y, elbow, turn), has in zip(ways, able.tolist(), strict=True) if has)
+        return Holds(holds, grips[which[able]], joints[able], usable[able], along)
 
     def _tool_poses(self, part: PartCell, xy_mm: FloatArray, yaw: float,
                     along: FloatArray) -> tuple[FloatArray, NDArray[np.int64]]:

@@ -16,12 +16,13 @@ from pipeline.motion.across import TURNING
 from pipeline.motion.cycle import Mover
 from pipeline.motion.flip import flip_time
 from pipeline.motion.lift import Lift
-from pipeline.move_time import rest_to_moving_kernel
+from pipeline.move_time import rest_to_moving_kernel, rest_to_moving_most
 
 FloatArray = NDArray[np.float64]
 STILL_MM_S = 1.0  # below this speed a belt is planned for as standing
 START_TIMES = 96
 LEAST_STEP_S = 0.04
+HAIR_S = 1e-9
 
 
 @dataclass(frozen=True)
@@ -83,8 +84,7 @@ class Legs:
         start_s = np.linspace(now, now + step * START_TIMES, START_TIMES + 1) if later else np.full(1, now)
         places, start_of = np.unique(np.round(nodes.drop, 9), axis=0, return_inverse=True)
         starts = np.concatenate([start[None], places]) if later else start[None]
-        heights = self.mover.arm.forward(starts)[:, 2]
-        out = np.array([[self._table(z, hold) for hold in nodes.hold_mm] for z in heights], np.int64)
+        out = self._lifts_between(self.mover.arm.forward(starts)[:, 2], nodes.hold_mm, there=True)
         back = np.array([self._table(*pair) for pair in zip(nodes.hold_mm, nodes.drop_mm, strict=True)], np.int64)
         lane, usable, t_at, still = self._passing(nodes, now, belt.speed_mm_s)
         speed = self._lane_speeds(lane, 0.0 if still else belt.speed_mm_s)
@@ -94,11 +94,11 @@ class Legs:
         if still:  # a standing part outside the window can't be had
             closes = np.where((nodes.enters_mm > 0) | (nodes.leaves_mm < 0), -np.inf, closes)
         contact, finish = (np.empty((len(starts), len(nodes), len(start_s))) for _ in range(2))
+        rests, passed, slots = (np.ascontiguousarray(joints[..., TURNING]) for joints in (starts, lane, nodes.drop))
         _leg_times(
-            np.ascontiguousarray(starts[:, TURNING]), out, np.ascontiguousarray(lane[:, :, TURNING]), speed, usable,
-            t_at, np.ascontiguousarray(nodes.drop[:, TURNING]), back, opens, closes, self._tables, self._limits,
-            self.mover.motion.grasp_s, self.mover.motion.release_s, self.mover.singular, still, start_s, contact,
-            finish,
+            rests, passed, slots, speed, usable, _firsts(nodes), t_at, out, back, opens, closes, self._tables,
+            self._limits, self.mover.motion.grasp_s, self.mover.motion.release_s, self.mover.singular, still, start_s,
+            contact, finish,
         )  # fmt: skip
         return LegTimes(start_s, start_of + 1, contact, finish)
 
@@ -106,14 +106,11 @@ class Legs:
         """Legs where nothing moves: s from leaving each rest (a, 4) to contact with each hold (b, 4), tip at hold_mm
         (b,): (a, b); and from contact until the arm is free at each rest: (b, a). inf: can't be had."""
         heights = self.mover.arm.forward(rests)[:, 2]
-        lows, low = np.unique(np.round(heights, 6), return_inverse=True)
-        grips, grip = np.unique(np.round(hold_mm, 6), return_inverse=True)
         ends = np.ascontiguousarray(rests[:, TURNING]), np.ascontiguousarray(holds[:, TURNING])
         legs = []
         for there in (True, False):
-            table = np.array([[self._table(*((z, g) if there else (g, z))) for g in grips] for z in lows], np.int64)
-            legs.append(_still_legs(*ends, np.ascontiguousarray(table[low][:, grip]), self._tables, self._limits,
-                                    self.mover.singular))
+            lifts = self._lifts_between(heights, hold_mm, there)
+            legs.append(_still_legs(*ends, lifts, self._tables, self._limits, self.mover.singular))
         motion = self.mover.motion
         return legs[0], np.ascontiguousarray(legs[1].T) + motion.grasp_s + motion.release_s
 
@@ -146,6 +143,13 @@ class Legs:
         velocity[:2] = speed * self.mover.belt.heading
         return np.ascontiguousarray(self.mover.arm.rates(lane, velocity)[..., TURNING])
 
+    def _lifts_between(self, rest_mm: FloatArray, hold_mm: FloatArray, there: bool) -> NDArray[np.int64]:
+        """Rows (a, b) of the tables of the lifts from each height of rest (a,) to each on a part (b,), or back."""
+        rests, rest = np.unique(rest_mm, return_inverse=True)
+        grips, grip = np.unique(hold_mm, return_inverse=True)
+        rows = np.array([[self._table(*((z, g) if there else (g, z))) for g in grips] for z in rests], np.int64)
+        return np.ascontiguousarray(rows[rest][:, grip])
+
     def _table(self, from_mm: float, to_mm: float) -> int:
         """Row of the tables of the lift between two heights."""
         key = (round(float(from_mm), 6), round(float(to_mm), 6))
@@ -155,6 +159,13 @@ class Legs:
             self._tables = np.concatenate([self._tables.reshape(-1, *row.shape), row[None]])
             self._lifts[key] = len(self._tables) - 1
         return self._lifts[key]
+
+
+def _firsts(nodes: Nodes) -> NDArray[np.int64]:
+    """The first grasp (g,) that is on the part in the same way as each: the way to it takes as long."""
+    seen: dict[tuple[bytes, ...], int] = {}
+    ways = zip(nodes.hold_mm, nodes.lane, nodes.usable, nodes.ahead_mm, strict=True)
+    return np.array([seen.setdefault(tuple(one.tobytes() for one in way), b) for b, way in enumerate(ways)], np.int64)
 
 
 @njit("UniTuple(float64, 2)(float64[:, ::1], float64)", cache=True)
@@ -175,13 +186,25 @@ def _lift_times(table: FloatArray, across: float) -> tuple[float, float]:
 
 @njit("float64(float64[::1], float64[::1], float64[::1], float64[:, ::1], float64)", cache=True)
 def _across(start: FloatArray, end: FloatArray, speed: FloatArray, limits: FloatArray, singular: float) -> float:
-    """Least time from rest at start (3,) to a part at end (3,) with a speed (3,)."""
-    longest = flip_time(start[1], end[1], singular)
+    """Least time from rest at start (3,) to a part at end (3,) with a speed (3,). The joint that may take longest is
+    looked at first; the others mostly can't take as long."""
+    most, slowest = (0.0, 0.0, 0.0), 0
     for j in range(3):
-        needed = rest_to_moving_kernel(end[j] - start[j], speed[j], limits[0, j], limits[1, j], limits[2, j])
-        if not needed <= 1e9:
+        way = end[j] - start[j]
+        if not (abs(speed[j]) <= limits[0, j] and np.isfinite(way)):
             return np.inf
-        longest = max(longest, needed)
+        this = rest_to_moving_most(way, speed[j], limits[0, j], limits[1, j], limits[2, j])
+        most = (this if j == 0 else most[0], this if j == 1 else most[1], this if j == 2 else most[2])
+        if this > most[slowest]:
+            slowest = j
+    longest = flip_time(start[1], end[1], singular)
+    for turn in range(3):
+        j = (slowest + turn) % 3
+        if most[j] > longest - HAIR_S:
+            needed = rest_to_moving_kernel(end[j] - start[j], speed[j], limits[0, j], limits[1, j], limits[2, j])
+            if not needed <= 1e9:
+                return np.inf
+            longest = max(longest, needed)
     return longest
 
 
@@ -239,21 +262,21 @@ def _past(t_at: FloatArray, k: int, start: float, still: bool) -> bool:
 
 
 @njit(
-    "void(float64[:, ::1], int64[:, ::1], float64[:, :, ::1], float64[:, :, ::1], boolean[:, ::1], float64[:, ::1], "
-    "float64[:, ::1], int64[::1], float64[::1], float64[::1], float64[:, :, ::1], float64[:, ::1], float64, float64, "
-    "float64, boolean, float64[::1], float64[:, :, ::1], float64[:, :, ::1])",
+    "void(float64[:, ::1], float64[:, :, ::1], float64[:, ::1], float64[:, :, ::1], boolean[:, ::1], int64[::1], "
+    "float64[:, ::1], int64[:, ::1], int64[::1], float64[::1], float64[::1], float64[:, :, ::1], float64[:, ::1], "
+    "float64, float64, float64, boolean, float64[::1], float64[:, :, ::1], float64[:, :, ::1])",
     cache=True,
     nogil=True,
 )
 def _leg_times(
-    starts: FloatArray, out: NDArray[np.int64], lane: FloatArray, speed: FloatArray, usable: NDArray[np.bool_],
-    t_at: FloatArray, slot: FloatArray, back: NDArray[np.int64], opens: FloatArray, closes: FloatArray,
-    tables: FloatArray, limits: FloatArray, grasp_s: float, release_s: float, singular: float, still: bool,
-    start_s: FloatArray, contact: FloatArray, finish: FloatArray,
+    starts: FloatArray, lane: FloatArray, slot: FloatArray, speed: FloatArray, usable: NDArray[np.bool_],
+    first: NDArray[np.int64], t_at: FloatArray, out: NDArray[np.int64], back: NDArray[np.int64], opens: FloatArray,
+    closes: FloatArray, tables: FloatArray, limits: FloatArray, grasp_s: float, release_s: float, singular: float,
+    still: bool, start_s: FloatArray, contact: FloatArray, finish: FloatArray,
 ) -> None:  # fmt: skip
     """Fill contact and finish (a, g, k)."""
     g, m = t_at.shape
-    carry, departs, arrives = np.empty(m), np.empty(m), np.empty(m)
+    carry, ways = np.empty(m), np.full((2, g, len(starts), m), np.nan)  # ways: when each departs and arrives
     for b in range(g):
         for k in range(m):
             carry[k] = np.inf
@@ -261,12 +284,11 @@ def _leg_times(
                 carry[k] = _carry(lane[b], speed[b], usable[b], t_at[b], slot[b], t_at[b, k], tables[back[b]], limits,
                                   grasp_s, release_s, singular)
         for a in range(len(starts)):
-            table = tables[out[a, b]]
+            departs, arrives = ways[0, first[b], a], ways[1, first[b], a]
             for k in range(m):
-                departs[k] = arrives[k] = np.nan
-                if usable[b, k] and not _past(t_at[b], k, start_s[0], still):
+                if first[b] == b and usable[b, k] and not _past(t_at[b], k, start_s[0], still):
                     across = _across(starts[a], lane[b, k], speed[b, k], limits, singular)
-                    rise, total = _lift_times(table, across)
+                    rise, total = _lift_times(tables[out[a, b]], across)
                     departs[k] = t_at[b, k] - across - rise
                     arrives[k] = departs[k] + total
             point = 0

@@ -111,3 +111,11 @@ def rest_to_moving_kernel(distance: float, end_speed: float, speed: float, accel
         if excess == 0 or high - low <= 1e-15 * high:
             break
     return float(_two_ramps(root, end, side, accel, jerk)[1])
+
+
+@njit("float64(float64, float64, float64, float64, float64)", cache=True)
+def rest_to_moving_most(distance: float, end_speed: float, speed: float, accel: float, jerk: float) -> float:
+    """No less than `rest_to_moving_kernel`, in a tenth of its time: come to rest where one ramp leads to the end."""
+    way, end = (distance, end_speed) if end_speed >= 0 else (-distance, -end_speed)
+    direct = _ramp(end, accel, jerk)
+    return float(_axis_time(way - end * direct / 2, speed, accel, jerk) + direct)

@@ -23,6 +23,7 @@ TRAVEL_SHARE = 0.06
 FAR_S = 1e6
 MOST_STATES = 2_000_000
 STATES_PER_MS = 2000  # so a budget in ms gives the same answer on any machine; one core looks at 2,000 to 7,500
+MS_A_PART = 0.8  # in view: to work out its grasps and legs, about, on one core
 MOST_LOOKED_AT = 14  # parts: the exact look-ahead doubles its work with each
 
 
@@ -112,7 +113,8 @@ class Lookahead:
 
     Each leg's joint travel counts as TRAVEL_SHARE of its time when ends are compared: where the arm has to wait for a
     part anyway, or two sequences end together, the one that moves less is taken. A tray of more than
-    MOST_LOOKED_AT parts is ordered whole, once, within one budget.
+    MOST_LOOKED_AT parts is ordered whole, once, within one budget. Of a budget one half is for sequences; the other
+    is for grasps and legs, and bounds how many parts are looked at together (`parts_within`).
     """
 
     def __init__(self, objective: str = "picks", budget_ms: float | None = None) -> None:
@@ -121,7 +123,7 @@ class Lookahead:
         self._best_sequence = best_pick_sequence
         self._kept: tuple[Tray, TrayOrder, Tray] | None = None  # as it is, its order, and with what that counts as cost
         self.by_travel, self.budget_ms = objective == "travel", budget_ms
-        self.budget_states = MOST_STATES if budget_ms is None else max(int(budget_ms * STATES_PER_MS), 1)
+        self.budget_states = MOST_STATES if budget_ms is None else max(int(budget_ms / 2 * STATES_PER_MS), 1)
 
     def choose(self, choice: Choice) -> Picked | None:
         """See Policy."""
@@ -179,6 +181,11 @@ def _of_tray(choice: Choice, node: int, ends_s: float, tray: Tray, order: TrayOr
     begun = len(row_of) == len(order.order)
     return Picked(node, (node,), weight, ends_s, float(choice.weights.sum()),
                   choice.now_s + order.bound_s if begun and order.bound_s else -np.inf, order.steps)
+
+
+def parts_within(horizon: int, budget_ms: float | None) -> int:
+    """How many of `horizon` parts can be looked at together in half a budget: by count, so the same on any machine."""
+    return horizon if budget_ms is None else min(horizon, max(int(budget_ms / 2 / MS_A_PART), 1))
 
 
 POLICIES = ("arrival", "nearest", "lookahead")

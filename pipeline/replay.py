@@ -3,8 +3,10 @@
 With several grippers a pick may begin a trip of several (see `pipeline.trip`), at a tray with the parts nearest by.
 """
 
+import gc
 import time
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -145,6 +147,18 @@ def _worth(setting: Setting, run: Run) -> float:
     return sum(setting.cell.parts[pick.part.kind].weight for pick in run.picks)
 
 
+@contextmanager
+def _uncollected() -> Iterator[None]:
+    """Leave garbage until the arm moves: to look through all that an hour's run keeps takes longer than to decide."""
+    was = gc.isenabled()
+    gc.disable()
+    try:
+        yield
+    finally:
+        if was:
+            gc.enable()
+
+
 class _Clock:
     """The run of one replay."""
 
@@ -216,6 +230,7 @@ class _Clock:
         height = max(motion.travel_mm, motion.clear_height_mm)
         return self.set.grasping.above(at, height, self.arm.home)
 
+    @_uncollected()
     def _decide(self, now: float, start: FloatArray, free_s: float, gripper: int = 0) -> Chosen | None:
         """The next pick as it would be carried out from rest at start (4,), from what is known now."""
         banned: set[tuple[int, int]] = set()

@@ -83,6 +83,7 @@ class SceneBuilder:
         """
         state = self.belt.known_at(now)
         frame = self.watch.look(now, state.travel_mm)
+        self._holds = {k: self._holds[k] for k in self.watch.lying if k in self._holds}
         candidates: list[Candidate] = []
         for k in self.watch.waiting():
             one = None if k in self.refusals else self._candidate(k, frame, filling)
@@ -132,6 +133,8 @@ class SceneBuilder:
         if k in self._holds:
             at, turn, holds = self._holds[k]
             moved, more = xy - at, yaw - turn
+            if not moved.any() and more == 0:
+                return holds
             if np.hypot(*moved) < MOVED_MM and abs(more) < TURNED_RAD:
                 return replace(holds, holds=tuple(replace(h, at_mm=h.at_mm + moved, yaw=h.yaw + more)
                                                   for h in holds.holds))

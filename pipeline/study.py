@@ -20,7 +20,7 @@ from pipeline.cell import MOST_ON_TRAY, Cell
 from pipeline.finding import calibration_of, found_in
 from pipeline.follow import Followed, follow
 from pipeline.map_share import with_map_share
-from pipeline.policy import MOST_LOOKED_AT, POLICIES, Nearest, Policy, policy_named
+from pipeline.policy import MOST_LOOKED_AT, POLICIES, Nearest, Policy, parts_within, policy_named
 from pipeline.replay import LEAST_SCORE, Run, Setting, replay, replay_ahead, replay_trips
 
 FloatArray = NDArray[np.float64]
@@ -121,12 +121,19 @@ def policy_of(setting: Setting, order: str, budget_ms: float = 0.0) -> Policy:
     return policy_named(order, setting.cell.order.objective, budget_ms or setting.cell.order.budget_ms)
 
 
+def horizon_of(setting: Setting, order: str, horizon: int, budget_ms: float = 0.0) -> int:
+    """How many parts an order looks at together: no more than it can, on a belt within its budget."""
+    if order != "lookahead":
+        return horizon
+    if setting.cell.belt is None:
+        return min(horizon, MOST_ON_TRAY)
+    return parts_within(min(horizon, MOST_LOOKED_AT), budget_ms or setting.cell.order.budget_ms)
+
+
 def run(setting: Setting, order: str, horizon: int, tick: Callable[[float], None] = lambda now: None,
         budget_ms: float = 0.0) -> Run:
     """Replay under one order. Raises InputFault for an order there is none of."""
-    policy = policy_of(setting, order, budget_ms)
-    if order == "lookahead":
-        horizon = min(horizon, MOST_ON_TRAY if setting.cell.belt is None else MOST_LOOKED_AT)
+    policy, horizon = policy_of(setting, order, budget_ms), horizon_of(setting, order, horizon, budget_ms)
     single = (replay_ahead if order == "lookahead" else replay)(setting, policy, order, horizon, tick)
     if len(setting.graspings) == 1:
         return single

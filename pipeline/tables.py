@@ -13,7 +13,7 @@ from numpy.typing import ArrayLike, NDArray
 from cameras.recording import Recording
 from pipeline.motion.across import TURNING
 from pipeline.replay import Run
-from pipeline.trajectory import sampled
+from pipeline.trajectory import Samples
 from pipeline.trip import Pick
 
 FloatArray = NDArray[np.float64]
@@ -76,11 +76,10 @@ def _pick_row(n: int, pick: Pick, run: Run) -> list[object]:
 
 def write_trajectory(path: Path, run: Run) -> None:
     """trajectory.csv: joints every 4 ms from the first move to the last."""
-    t, joints = sampled(run)
-    table = np.column_stack([t, joints * FILE_UNITS])
     with open(path, "w", newline="", encoding="utf-8") as file:
         file.write(TRAJECTORY + "\n")
-        np.savetxt(file, table, fmt=("%.3f", "%.6f", "%.6f", "%.6f", "%.6f"), delimiter=",")
+        for t, joints in Samples(run).pieces():
+            np.savetxt(file, np.column_stack([t, joints * FILE_UNITS]), fmt=("%.3f", *4 * ("%.6f",)), delimiter=",")
 
 
 def summary(run: Run, horizon: int, find_s: Sequence[float], more: dict[str, Any] | None = None) -> dict[str, Any]:

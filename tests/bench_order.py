@@ -11,6 +11,8 @@ from pathlib import Path
 
 import networkx as nx
 import numpy as np
+from made_windows import KINDS as WINDOW_KINDS
+from made_windows import made_windows
 from published_orders import read_best_known, read_optima, read_tsplib, read_windowed
 
 from pipeline.order import best_order
@@ -63,6 +65,25 @@ def bench_windows(folder, objective, column):
                 proven, dropping = proven + best.proven, dropping + bool(best.dropped)
         print(f"{family:<22}{len(gaps):>6}{proven:>8}{dropping:>10}{np.mean(gaps):>12.3f}{max(gaps):>8.3f}"
               f"{np.mean(seconds):>9.1f}{max(seconds):>8.1f}")
+    print()
+
+
+def bench_made_windows():
+    """Earliest finish under wide windows: gap to the own bound, and how far a longer search with other seeds gets."""
+    print(f"{'made windows':<16}{'':>5}{'proven':>8}{'dropping':>10}{'own gap %':>11}{'worst':>8}{'beaten by %':>13}"
+          f"{'s mean':>8}{'worst':>8}")
+    for kind in WINDOW_KINDS:
+        rows, proven, dropping = [], 0, 0
+        for count in (20, 28, 36, 44):
+            for instance in range(3):
+                task = made_windows(kind, count, instance)
+                best, taken = timed(lambda task=task: best_order(*task, close=True))
+                others = [] if best.proven else [best_order(*task, close=True, seed=seed).value for seed in (1, 2)]
+                proven, dropping = proven + best.proven, dropping + bool(best.dropped)
+                rows.append((100 * best.gap, 100 * (best.value / min([best.value, *others]) - 1), taken))
+        gap, beaten, seconds = np.array(rows).T
+        print(f"{kind:<16}{len(rows):>5}{proven:>8}{dropping:>10}{gap.mean():>11.2f}{gap.max():>8.2f}{beaten.max():>13.3f}"
+              f"{seconds.mean():>8.2f}{seconds.max():>8.2f}", flush=True)
     print()
 
 
@@ -128,5 +149,6 @@ if __name__ == "__main__":
         bench_rounds(kept)
         bench_windows(kept, "finish", "best_makespan")
         bench_windows(kept, "travel", "best_travel")
+    bench_made_windows()
     bench_made_rounds()
     bench_lookahead()

@@ -292,7 +292,7 @@ def test_interrupted_it_ends_with_130_and_leaves_nothing(stream: Path, monkeypat
     def broken_off(*_: object) -> None:
         raise KeyboardInterrupt
 
-    monkeypatch.setattr("pipeline.tables.sampled", broken_off)
+    monkeypatch.setattr("pipeline.tables.Samples", broken_off)
     told = replayed(stream, "--trajectory")
     assert told.status == 130
     assert not list((stream / "out").glob(".*")), "nothing half written"

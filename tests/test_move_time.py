@@ -8,7 +8,7 @@ from hypothesis import strategies as st
 from some_arms import changed
 
 from pipeline.arm import Arm
-from pipeline.move_time import axis_time, move_time, rest_to_moving_time
+from pipeline.move_time import axis_time, move_time, rest_to_moving_most, rest_to_moving_time
 
 SPEED, ACCEL, JERK = st.floats(0.05, 40), st.floats(0.5, 1000), st.floats(10, 60_000)  # SI: rad, m
 WAY = st.one_of(st.floats(-6.5, 6.5), st.floats(-1e-3, 1e-3)).filter(lambda way: abs(way) > 1e-9 or way == 0)
@@ -39,6 +39,16 @@ def test_rest_to_moving_takes_what_ruckig_takes(
     end = share * speed
     assert rest_to_moving_time(way, end, speed, accel, jerk) == pytest.approx(
         ruckig_time([way], [end], [speed], [accel], [jerk]), abs=1e-6)
+
+
+@given(WAY, SHARE, SPEED, ACCEL, JERK)
+def test_no_joint_takes_longer_than_it_may_take_at_most(
+    way: float, share: float, speed: float, accel: float, jerk: float
+) -> None:
+    """What lets a leg pass over its quicker joints; and with no speed at the end it is the time itself."""
+    most = rest_to_moving_most(way, share * speed, speed, accel, jerk)
+    assert most >= float(rest_to_moving_time(way, share * speed, speed, accel, jerk)) - 1e-9
+    assert rest_to_moving_most(way, 0.0, speed, accel, jerk) == pytest.approx(float(axis_time(way, speed, accel, jerk)))
 
 
 @given(st.lists(st.floats(0, 1).map(lambda share: round(share, 9)), min_size=8, max_size=8))

@@ -12,6 +12,7 @@ from published_orders import read_best_known, read_optima, read_tsplib, read_win
 from pipeline.order import best_order
 from pipeline.order.bound import round_bound, whole_bound
 from pipeline.order.exact import search
+from pipeline.order.relaxed import walk_bound
 from pipeline.order.task import checked_task
 
 
@@ -95,6 +96,35 @@ def test_a_search_cut_short_keeps_its_bound_below_the_best(seed, objective, time
         assert short.floor <= whole.value + 1e-9
         assert whole_bound(problem, whole.value * 1.05) <= whole.value + 1e-9
         assert short.nodes is None or short.value >= whole.value - 1e-9
+
+
+@settings(max_examples=80, deadline=None)
+@given(st.integers(0, 10**6), st.integers(3, 9), st.sampled_from(["finish", "travel"]), st.booleans(), st.booleans(),
+       st.sampled_from([1.0, 1.05, 1.5]))
+def test_the_bound_of_walks_is_below_every_order(seed, n, objective, close, blocked, slack):
+    """Whatever value is to be beaten, with precedence, service and windows of all widths."""
+    legs, _, service, _, after = task(seed, n, timed=False, blocked=blocked, weighed=False, gaps=0.1)
+    early = np.random.default_rng(seed).uniform(0, 60, n)
+    windows = np.stack([early, early + np.random.default_rng(seed + 1).uniform(0, 150, n)], axis=1)
+    problem = checked_task(legs + 1.0, windows, service, None, after, objective, close)
+    best = search(problem, strict=True, width=1 << 16)
+    if best.nodes is not None:
+        assert walk_bound(problem, slack * best.value, np.inf) <= best.value + 1e-9
+
+
+@pytest.mark.parametrize("seed", range(5))
+def test_walks_prove_what_a_tree_cannot(seed):
+    """Four narrow windows among wide ones force ways to and fro that no tree sees."""
+    random, n = np.random.default_rng(seed), 12
+    at = random.integers(0, 100, (n + 1, 2))
+    early = np.where(np.arange(n) % 3 == 0, random.uniform(0, 500, n), 0.0)
+    windows = np.stack([early, early + np.where(early > 0, 60.0, 900.0)], axis=1)
+    legs = np.hypot(*(at[:, None] - at).transpose(2, 0, 1)) + 1.0
+    problem = checked_task(legs, windows, None, None, None, "travel", True)
+    best = search(problem, strict=True, width=1 << 16)
+    assert not best.cut
+    assert walk_bound(problem, best.value, np.inf) > 0.999 * best.value
+    assert seed != 4 or whole_bound(problem, best.value) < 0.75 * best.value
 
 
 @settings(max_examples=25, deadline=None)

@@ -15,7 +15,7 @@ from pipeline.plan_graph import START, decision_graph, write_graph
 from pipeline.plots.decision import plot_decision
 from pipeline.policy import Arrival, Lookahead, Nearest
 from pipeline.replay import replay
-from pipeline.study import policy_of
+from pipeline.study import policy_of, run
 
 CROWD = belt(scattered(13, 9, 25), 20, 110.0, places=ENDLESS)
 PAIR = belt([Laid(280.0, -450.0, 0.0), Laid(303.0, -452.0, 90.0)], 12, 60.0)  # the second frees the first
@@ -142,3 +142,13 @@ def test_a_small_budget_gives_the_best_so_far_and_says_how_good_it_is(crowd: Dec
     assert hasty[0].states < crowd.picked.states
     assert hasty[0].weight <= whole.weight <= hasty[0].weight_bound + 1e-9
     assert policy_of(setting, "lookahead").choose(choice) == crowd.picked
+
+
+def test_a_budget_bounds_how_many_parts_are_looked_at() -> None:
+    """Grasps and legs take time too: within 4 ms there is none for more than two parts, whatever the machine."""
+    setting = CROWD.setting()
+    hasty, whole = (run(setting, "lookahead", 8, budget_ms=budget) for budget in (4.0, 0.0))
+    assert max(pick.looked_at for pick in hasty.picks) == 2
+    assert max(pick.looked_at for pick in whole.picks) > 2
+    again = run(setting, "lookahead", 8, budget_ms=4.0)
+    assert [pick.picked for pick in again.picks] == [pick.picked for pick in hasty.picks]

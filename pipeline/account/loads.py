@@ -1,12 +1,13 @@
 """How near the joints come to their limits."""
 
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
 
 from pipeline.replay import Run
-from pipeline.trajectory import sampled
+from pipeline.trajectory import Samples
 
 FloatArray = NDArray[np.float64]
 STEP_S = 0.002
@@ -35,14 +36,23 @@ class Loads:
 
 def loads_of(run: Run) -> Loads | None:
     """The loads of a run; None where the arm never moved."""
-    times, joints = sampled(run, STEP_S)
-    if len(times) < 3:
+    samples, limits = Samples(run, STEP_S), run.mover.arm.limits
+    count = len(samples) - 2  # no difference at either end
+    if count < 1:
         return None
-    limits = run.mover.arm.limits
-    speed = np.abs(joints[2:] - joints[:-2]) / (2 * STEP_S) / limits.speed
-    accel = np.abs(joints[2:] - 2 * joints[1:-1] + joints[:-2]) / STEP_S**2 / limits.accel
-    inner = times[1:-1]
-    edges = np.unique(np.linspace(0, len(inner), min(BINS, len(inner)) + 1).astype(int)[:-1])
-    return Loads(inner[edges], np.maximum.reduceat(speed, edges), np.maximum.reduceat(accel, edges),
-                 np.stack([joints.min(axis=0), joints.max(axis=0)], axis=1), speed.max(axis=0), accel.max(axis=0),
-                 inner[speed.argmax(axis=0)], inner[accel.argmax(axis=0)])
+    edges = np.unique(np.linspace(0, count, min(BINS, count) + 1).astype(int))
+    times, speeds, accels, low, high = (list[FloatArray]() for _ in range(5))
+    when = np.zeros((2, 4, len(edges) - 1))
+    for k, (begin, end) in enumerate(pairwise(edges)):
+        t, joints = samples.between(begin, end + 2)
+        speed = np.abs(joints[2:] - joints[:-2]) / (2 * STEP_S) / limits.speed
+        accel = np.abs(joints[2:] - 2 * joints[1:-1] + joints[:-2]) / STEP_S**2 / limits.accel
+        times.append(t[1])
+        for told, one in ((speeds, speed.max(axis=0)), (accels, accel.max(axis=0)), (low, joints.min(axis=0)),
+                          (high, joints.max(axis=0))):
+            told.append(one)
+        when[:, :, k] = t[1 + speed.argmax(axis=0)], t[1 + accel.argmax(axis=0)]
+    speed, accel = np.stack(speeds), np.stack(accels)
+    speed_at, accel_at = (at[np.arange(4), most.argmax(axis=0)] for at, most in zip(when, (speed, accel), strict=True))
+    return Loads(np.array(times), speed, accel, np.stack([np.min(low, axis=0), np.max(high, axis=0)], axis=1),
+                 speed.max(axis=0), accel.max(axis=0), speed_at, accel_at)

@@ -81,7 +81,7 @@ def plan(
     from pipeline.decision import first_decision
     from pipeline.outputs import write_decision, write_run
     from pipeline.remedy import with_remedies
-    from pipeline.study import one_frame, policy_of, run, setting
+    from pipeline.study import horizon_of, one_frame, policy_of, run, setting
     from pipeline.whole_tray import whole_tray
 
     whole = load_cell(cell)
@@ -90,7 +90,8 @@ def plan(
     order, horizon = order or whole.order.policy, horizon or whole.horizon
     done = with_remedies(chosen, run(chosen, order, horizon, budget_ms=budget_ms))
     decision = (whole_tray(chosen, order == "lookahead" and whole.order.objective == "travel", horizon, done)
-                or first_decision(chosen, policy_of(chosen, order, budget_ms), horizon, done))
+                or first_decision(chosen, policy_of(chosen, order, budget_ms),
+                                  horizon_of(chosen, order, horizon, budget_ms), done))
     figures = write_run(out, seen, chosen, done, horizon, True, detections is None and located is None)
     show_table("Plan", ("pick", "part", "kind", "x mm", "y mm", "grip s", "release s", "to", "elbow"),
                [(n, pick.part.number, pick.part.kind, *(f"{v:.0f}" for v in _gripped_mm(chosen, pick)),

@@ -298,12 +298,13 @@ class _Leg:
         return self.move.duration + max(0.0, self.rise_s - lift.rise_s(self.move.duration))
 
 
-def turned(arm: Arm, joints: FloatArray, yaw: float, turn: int) -> FloatArray:
-    """Joints (n, 4) with J4 unwrapped along J1 and J2 and shifted by whole turns, so that it never jumps on a lane."""
+def turned(arm: Arm, joints: FloatArray, yaw: FloatArray | float, turn: int) -> FloatArray:
+    """Joints (..., 4) that hold yaws (...), J4 unwrapped along J1 and J2 and shifted by whole turns, so that it never
+    jumps on a lane."""
     q = joints.copy()
     _, b, _ = arm.headings(q)
-    q[:, 3] = arm.sense[3] * (yaw - arm.tool_yaw - b) + 2 * np.pi * turn
-    q[:, 2] += quill(arm, 0.0, q[:, 3]) - quill(arm, 0.0, joints[:, 3])
+    q[..., 3] = arm.sense[3] * (yaw - arm.tool_yaw - b) + 2 * np.pi * turn
+    q[..., 2] += quill(arm, 0.0, q[..., 3]) - quill(arm, 0.0, joints[..., 3])
     return q
 
 

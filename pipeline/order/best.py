@@ -9,6 +9,7 @@ from numpy.typing import ArrayLike
 
 from pipeline.order.bound import part_bound, whole_bound
 from pipeline.order.exact import MOST_ITEMS, search
+from pipeline.order.relaxed import walk_bound
 from pipeline.order.rounds import best_round
 from pipeline.order.ruin import improve_order
 from pipeline.order.task import Task, checked_task
@@ -112,9 +113,12 @@ def _solved(task: Task, seed: int, until: float) -> _Best:
         best, floor, searched = _searched(task, best, QUICK, until)
     if not searched and not alone:
         best = _improved(task, best, floor, 1, seed, until)
-    if not searched and not best.proven and n <= MOST_ITEMS:
-        best, floor, searched = _searched(task, best, (1 << 16) if n <= SMALL else LABELS // n, until)
-    if not searched:
+        if best.whole and n > SMALL:
+            floor = max(floor, walk_bound(task, best.value, until))
+    if not (searched or best.judged(floor, searched).proven) and n <= MOST_ITEMS:
+        best, other, searched = _searched(task, best, (1 << 16) if n <= SMALL else LABELS // n, until)
+        floor = max(floor, other)
+    if not (searched or best.judged(floor, searched).proven):
         floor = max(floor, whole_bound(task, best.value)) if best.whole else 0.0
         best = _improved(task, best, floor, BEATS, seed + BEATS, until)
         floor = max(floor, whole_bound(task, best.value)) if best.whole else part_bound(task, best.lost)

@@ -2,6 +2,7 @@
 
 import base64
 import hashlib
+from collections.abc import Callable, Iterator
 from importlib.resources import files
 from pathlib import Path
 from typing import Any
@@ -18,27 +19,26 @@ SCRIPTS = ("data.js", "canvas.js", "above.js", "camera.js", "timeline.js", "desk
 
 def write_page(path: Path, seen: Seen, setting: Setting, run: Run, figures: dict[str, Any]) -> None:
     """Write the report of one run. figures: as in summary.json."""
-    path.write_text(page_of(Subject(seen, setting, run, figures)), encoding="utf-8")
+    with open(path, "w", encoding="utf-8") as file:
+        file.writelines(_pieces(Subject(seen, setting, run, figures)))
 
 
-def page_of(subject: Subject) -> str:
-    """The report as HTML."""
-    sections = [
-        ("desk", "The run, moment by moment", desk.desk(subject)),
-        ("misses", "Why parts were missed", misses.misses(subject)),
-        ("pace", "Throughput over time", measures.pace(subject)),
-        ("choices", "How good the decisions were", measures.choices(subject)),
-        ("reach", "Where the arm can grip, and did", reach.reach(subject)),
-        ("cycle", "Where the time of a cycle goes", measures.cycle(subject)),
-        ("joints", "Joints against their limits", measures.joints(subject)),
-        ("accuracy", "How well places are known", accuracy.accuracy(subject)),
-        ("lists", "Picks", listings.picks(subject)),
-        ("all-parts", "Parts", listings.parts(subject)),
-        ("cell", "The cell file", cautions.cell_file(subject)),
-        ("cautions", "Cautions", cautions.cautions()),
+def _pieces(subject: Subject) -> Iterator[str]:
+    """The report piece by piece: that of an hour's run is long, and no more than a section is held at once."""
+    sections: list[tuple[str, str, Callable[[Subject], Markup | None]]] = [
+        ("desk", "The run, moment by moment", desk.desk),
+        ("misses", "Why parts were missed", misses.misses),
+        ("pace", "Throughput over time", measures.pace),
+        ("choices", "How good the decisions were", measures.choices),
+        ("reach", "Where the arm can grip, and did", reach.reach),
+        ("cycle", "Where the time of a cycle goes", measures.cycle),
+        ("joints", "Joints against their limits", measures.joints),
+        ("accuracy", "How well places are known", accuracy.accuracy),
+        ("lists", "Picks", listings.picks),
+        ("all-parts", "Parts", listings.parts),
+        ("cell", "The cell file", cautions.cell_file),
+        ("cautions", "Cautions", lambda _: cautions.cautions()),
     ]
-    main = [tag("section", tag("h2", title, id_=f"{name}-title"), content, id_=name, aria_labelledby=f"{name}-title")
-            for name, title, content in sections if content is not None]  # fmt: skip
     style, script = _kept(STYLES), _kept(SCRIPTS)
     name = subject.setting.cell.name or "cell"
     top = tag("head", tag("meta", charset="utf-8"), tag("meta", http_equiv="Content-Security-Policy",
@@ -46,9 +46,14 @@ def page_of(subject: Subject) -> str:
               tag("meta", name="viewport", content="width=device-width, initial-scale=1"),
               tag("meta", name="color-scheme", content="light dark"), tag("title", f"{name}: replay"),
               tag("link", rel="icon", href="data:,"), tag("style", style))  # fmt: skip
-    body = tag("body", tag("a", "Skip to the desk", href="#desk", class_="skip"),
-               tag("header", head.head(subject)), tag("main", *main), tag("script", script))
-    return joined(Markup("<!doctype html>\n"), tag("html", top, "\n", body, lang="en"), "\n")
+    yield f'<!doctype html>\n<html lang="en">{top}\n<body>'
+    yield joined(tag("a", "Skip to the desk", href="#desk", class_="skip"), tag("header", head.head(subject)))
+    yield "<main>"
+    for at, title, told in sections:
+        content = told(subject)
+        if content is not None:
+            yield tag("section", tag("h2", title, id_=f"{at}-title"), content, id_=at, aria_labelledby=f"{at}-title")
+    yield f"</main>{tag('script', script)}</body></html>\n"
 
 
 def _kept(names: tuple[str, ...]) -> Markup:
