@@ -23,6 +23,7 @@ from pipeline.permit import Permit
 from pipeline.places import Filling, Place
 from pipeline.policy import Arrival, Nearest, Policy
 from pipeline.scene import SceneBuilder
+from pipeline.tray_trips import TrayTrips
 from pipeline.trip import Chosen, Pick, Trip, alone, closed, held_on
 from pipeline.watch import Watch
 
@@ -151,13 +152,16 @@ class _Clock:
     def __init__(self, setting: Setting, policy: Policy, name: str, horizon: int,
                  tick: Callable[[float], None], at_once: int) -> None:
         self.set, self.policy, self.name, self.horizon, self.tick = setting, policy, name, horizon, tick
-        self.within_trip = policy if setting.cell.belt else Nearest()  # a tray's order is one of single picks
         self.watch = Watch(setting.cell, setting.recording, setting.belt, setting.parts)
         used = setting.graspings[:at_once]
         self.builders = [SceneBuilder(setting.cell, self.watch, grasping, setting.legs, setting.outlines,
                                       setting.least_score) for grasping in used]
         self.permits = tuple(Permit(setting.mover, grasping) for grasping in used)
         self.filling = Filling(tuple(setting.grasping.places.values()))
+        self.further = (policy if setting.cell.belt else Nearest()).choose  # a tray's order is one of single picks
+        self.ordered = isinstance(policy, TrayTrips)
+        if isinstance(policy, TrayTrips):
+            self.further, policy.filling = policy.further, self.filling
         self.arm = setting.grasping.arm
         self.joints = np.array(self.arm.home)
         self.waits: list[Transfer] = []
@@ -221,7 +225,7 @@ class _Clock:
         begun = time.perf_counter()
         for _ in range(MOST_TRIES):
             scene = self.builders[gripper].scene(now, start, self.filling, self.horizon, banned)
-            picked = (self.within_trip if gripper else self.policy).choose(scene.choice) if scene else None
+            picked = (self.further if gripper else self.policy.choose)(scene.choice) if scene else None
             if scene is None or picked is None:
                 break
             one, hold, drop_joints, drop_pose = scene.grasp(picked.node)
@@ -260,7 +264,7 @@ class _Clock:
         cycle = kept.pick.cycle
         after = self._decide(cycle.grasp_end_s, cycle.end_joints, cycle.release_end_s, gripper)
         longer = closed((*trip.chosen[:-1], kept, after), self.permits) if after else None
-        return longer if longer and longer.rate >= trip.rate else None
+        return longer if longer and (self.ordered or longer.rate >= trip.rate) else None
 
     def _fates(self) -> tuple[Refusal | None, ...]:
         picked = {pick.part.number for pick in self.picks}

@@ -98,7 +98,7 @@ class SceneBuilder:
         along = np.array([one.xy_mm @ self.belt.heading + state.travel_mm for one in candidates])
         choice = Choice(now, nodes, weights, along, blocked,
                         lambda later: self.legs.times(start, now, nodes, state, later),
-                        lambda: self._travel(start, nodes), np.array([one.part.number for one in candidates]),
+                        lambda: self._travel(start, nodes), np.array([one.part.number for one in candidates]), start,
                         lambda: self._trays.tray(candidates, node_of, blocked, weights, start, now, filling))
         return Scene(tuple(candidates), node_of, choice, not self.grasping.arm.offset_mm.any())
 

@@ -1,0 +1,136 @@
+"""A rule for trays and tools with several grippers: all parts that lie there are ordered in trips, once."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pipeline.follow import Part
+from pipeline.grasp import Grasping, Refusal
+from pipeline.legs import Legs
+from pipeline.motion.cycle import ABOVE_MM, quill
+from pipeline.places import Filling
+from pipeline.policy import Choice, Picked, nearest_of
+from pipeline.trip_order import FAR_S, TripLegs, TripOrder, trip_order
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+LEG_S = 1e-3  # legs' times and the motion agree to so much
+
+
+@dataclass(frozen=True)
+class _Ways:
+    """Joints (w, 4) and heights (w,) of the ways to be somewhere, and the first one (n+1,) of each of n things."""
+
+    joints: FloatArray
+    z_mm: FloatArray
+    begins: IntArray
+
+
+class TrayTrips:
+    """Takes the next part of the order, by the grasp made soonest. numbers: of the parts ordered last."""
+
+    def __init__(self, graspings: Sequence[Grasping], legs: Legs, parts: Sequence[Part],
+                 budget_ms: float | None = None) -> None:
+        self.graspings, self.legs, self.budget_ms = graspings, legs, budget_ms
+        self.parts = {part.number: part for part in parts}
+        self.filling = Filling(tuple(graspings[0].places.values()))
+        self.numbers: tuple[int, ...] = ()
+        self.order: TripOrder | None = None
+        self._trips: list[list[int]] = []
+        self._trip: list[int] = []
+
+    def choose(self, choice: Choice) -> Picked | None:
+        """The first part of the next trip, see Policy."""
+        if not set(choice.numbers.tolist()) <= set(self.numbers):
+            self._plan(choice)
+        left = set(choice.numbers.tolist())
+        for trip in self._trips:
+            self._trip = [number for number in trip if number in left]
+            picked = self.further(choice)
+            if picked is not None:
+                return picked
+        return None
+
+    def further(self, choice: Choice) -> Picked | None:
+        """The next part of the trip that was begun; None where it is to end."""
+        left = set(choice.numbers.tolist())
+        for number in self._trip:
+            if number in left:
+                picked = nearest_of(choice, number)
+                if picked is not None:
+                    return picked
+        return None
+
+    def _plan(self, choice: Choice) -> None:
+        self.numbers = tuple(choice.numbers.tolist())
+        legs = trip_legs(self.graspings, self.legs, [self.parts[number] for number in self.numbers],
+                         choice.start, self.filling)
+        self.order = trip_order(legs, self.budget_ms)
+        self._trips = [[self.numbers[k] for k in trip] for trip in self.order.trips]
+
+
+def trip_legs(graspings: Sequence[Grasping], legs: Legs, parts: Sequence[Part], start: FloatArray,
+              filling: Filling) -> TripLegs:
+    """Least times of still parts by several grippers, for an arm at rest at start (4,)."""
+    kinds = [graspings[0].cell.parts[part.kind] for part in parts]
+    names = sorted({kind.places[0] for kind in kinds})
+    queue = np.array([names.index(kind.places[0]) for kind in kinds])
+    first = np.concatenate([[0], np.cumsum(np.bincount(queue))[:-1]])
+    motion, holds = legs.mover.motion, [_holds(one, parts) for one in graspings]
+    stands = [_stands(one, parts, names, queue, filling) for one in graspings]
+    begin = _least(legs, _Ways(start[None], legs.mover.arm.forward(start[None])[:, 2], np.array([0, 1])), holds[0])[0]
+    back = _least(legs, stands[0], holds[0])[0]
+    carry = [_least(legs, stand, hold)[1] for stand, hold in zip(stands, holds, strict=True)]
+    on = [_least(legs, _ready(legs, one), other)[0] + motion.grasp_s for one, other in zip(holds, holds[1:], strict=False)]
+    down = [_least(legs, other, one)[0] + motion.release_s for one, other in zip(stands, stands[1:], strict=False)]
+    n = len(parts)
+    return TripLegs(queue, first, begin[0], back, np.array(on).reshape(-1, n, n), np.array(carry),
+                    np.array(down).reshape(-1, n, n))
+
+
+def _least(legs: Legs, ends: _Ways, holds: _Ways) -> tuple[FloatArray, FloatArray]:
+    """Least s from each of a ends to contact with each of n holds (a, n), and from contact to release (n, a)."""
+    out, carry = legs.still(ends.joints, holds.joints, holds.z_mm)
+    made = np.full((len(ends.begins) - 1, len(holds.begins) - 1), FAR_S), np.full(
+        (len(holds.begins) - 1, len(ends.begins) - 1), FAR_S)
+    for times, least, rows, columns in ((out, made[0], ends, holds), (carry, made[1], holds, ends)):
+        across, along = np.diff(rows.begins) > 0, np.diff(columns.begins) > 0
+        if across.any() and along.any():
+            lines = np.minimum.reduceat(times, rows.begins[:-1][across], axis=0)
+            least[np.ix_(across, along)] = np.minimum.reduceat(lines, columns.begins[:-1][along], axis=1)
+    return np.minimum(made[0], FAR_S), np.minimum(made[1], FAR_S)
+
+
+def _ready(legs: Legs, holds: _Ways) -> _Ways:
+    """Where the arm rests after it has gripped a part it keeps, with the lift to there counted in the height."""
+    motion, joints = legs.mover.motion, holds.joints.copy()
+    height = max(motion.travel_mm, motion.clear_height_mm) + ABOVE_MM
+    joints[:, 2] = quill(legs.mover.arm, height, joints[:, 3])
+    return _Ways(joints, np.full(len(joints), height), holds.begins)
+
+
+def _holds(grasping: Grasping, parts: Sequence[Part]) -> _Ways:
+    found = [grasping.holds(part.kind, part.known.xy_mm[-1], float(part.known.yaw_rad[-1])) for part in parts]
+    joints = [np.zeros((0, 4)) if isinstance(one, Refusal) else one.joints[one.usable[:, 0], 0] for one in found]
+    heights = [np.zeros(0) if isinstance(one, Refusal) else np.array([hold.z_mm for hold in one.holds])[one.usable[:, 0]]
+               for one in found]
+    return _Ways(np.concatenate(joints), np.concatenate(heights), _begins(joints))
+
+
+def _stands(grasping: Grasping, parts: Sequence[Part], names: Sequence[str], queue: IntArray,
+            filling: Filling) -> _Ways:
+    ways = []
+    for k, name in enumerate(names):
+        kinds = sorted({part.kind for part, q in zip(parts, queue, strict=True) if q == k})
+        grips = [(kind, grip) for kind in kinds for grip in range(len(grasping.grips(grasping.cell.parts[kind])))]
+        slots = filling.coming(name, int((queue == k).sum()))
+        ways += [np.concatenate([grasping.drops(kind, grip, name, slot).joints for kind, grip in grips])
+                 for slot in slots] + [np.zeros((0, 4))] * (int((queue == k).sum()) - len(slots))
+    joints = np.concatenate(ways)
+    return _Ways(joints, grasping.arm.forward(joints)[:, 2], _begins(ways))
+
+
+def _begins(ways: Sequence[FloatArray]) -> IntArray:
+    return np.concatenate([[0], np.cumsum([len(one) for one in ways])])
