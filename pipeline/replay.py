@@ -127,10 +127,21 @@ def replay_trips(setting: Setting, policies: Sequence[Policy], name: str, horizo
     enough = _worth(setting, trips) >= _worth(setting, single) - 1e-9 and len(trips.picks) >= len(single.picks)
     more = len(trips.picks) > len(single.picks)
     if enough and (more or setting.cell.belt is not None or _last_s(trips) <= _last_s(single)):
-        return trips
+        return _with_gap(trips, policies)
     note = (f"with {many} grippers {_told(setting, trips)} would be picked, with the first one alone "
             f"{_told(setting, single)}: this run is with the first one alone")
-    return replace(single, notes=(*single.notes, note))
+    return _with_gap(replace(single, notes=(*single.notes, note)), policies)
+
+
+def _with_gap(run: Run, policies: Sequence[Policy]) -> Run:
+    """The run, and in its notes how much sooner a tray could have been empty at most, where that is known."""
+    for one in policies:
+        bound = one.bound(run.picks) if isinstance(one, TrayTrips) else -np.inf
+        if isinstance(one, TrayTrips) and np.isfinite(bound):
+            gap = (_last_s(run) - bound) / (_last_s(run) - one.planned_s)
+            note = f"no trips into the same slots end before {bound:.2f} s: a gap of {100 * gap:.1f} % at most"
+            return replace(run, notes=(*run.notes, note))
+    return run
 
 
 def _told(setting: Setting, run: Run) -> str:

@@ -1,5 +1,6 @@
 """A rule for trays and tools with several grippers: all parts that lie there are ordered in trips, once."""
 
+import itertools
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -12,6 +13,7 @@ from pipeline.legs import Legs
 from pipeline.motion.cycle import ABOVE_MM, quill
 from pipeline.places import Filling
 from pipeline.policy import Choice, Picked, nearest_of
+from pipeline.trip import Pick
 from pipeline.trip_order import FAR_S, TripLegs, TripOrder, trip_order
 
 FloatArray = NDArray[np.float64]
@@ -29,7 +31,10 @@ class _Ways:
 
 
 class TrayTrips:
-    """Takes the next part of the order, by the grasp made soonest. numbers: of the parts ordered last."""
+    """Takes the next part of the order, by the grasp done soonest.
+
+    numbers: of the parts ordered last, at planned_s; order: their order.
+    """
 
     def __init__(self, graspings: Sequence[Grasping], legs: Legs, parts: Sequence[Part],
                  budget_ms: float | None = None) -> None:
@@ -38,6 +43,7 @@ class TrayTrips:
         self.filling = Filling(tuple(graspings[0].places.values()))
         self.numbers: tuple[int, ...] = ()
         self.order: TripOrder | None = None
+        self.planned_s = -np.inf
         self._trips: list[list[int]] = []
         self._trip: list[int] = []
 
@@ -45,30 +51,49 @@ class TrayTrips:
         """The first part of the next trip, see Policy."""
         if not set(choice.numbers.tolist()) <= set(self.numbers):
             self._plan(choice)
-        left = set(choice.numbers.tolist())
-        for trip in self._trips:
-            self._trip = [number for number in trip if number in left]
-            picked = self.further(choice)
+        for k, trip in enumerate(self._trips):
+            picked = _first_able(choice, trip)
             if picked is not None:
+                self._trip = [*trip, *(number for one in self._trips[:k] for number in one)]
                 return picked
         return None
 
     def further(self, choice: Choice) -> Picked | None:
-        """The next part of the trip that was begun; None where it is to end."""
-        left = set(choice.numbers.tolist())
-        for number in self._trip:
-            if number in left:
-                picked = nearest_of(choice, number)
-                if picked is not None:
-                    return picked
-        return None
+        """The next part of the trip that was begun, or one that an earlier trip had to leave; None: it is to end."""
+        return _first_able(choice, self._trip)
+
+    def bound(self, picks: Sequence[Pick]) -> float:
+        """When no trips that bring these parts into these slots end sooner, in s; -inf where that isn't known."""
+        mine = {pick.part.number for pick in picks} == set(self.numbers)
+        if self.order is None or not mine or any(pick.place != self._place(pick.part) for pick in picks):
+            return -np.inf
+        return self.planned_s + self.order.bound_s - LEG_S * len(picks)
+
+    def _place(self, part: Part) -> str:
+        return self.graspings[0].cell.parts[part.kind].places[0]
 
     def _plan(self, choice: Choice) -> None:
-        self.numbers = tuple(choice.numbers.tolist())
+        seen = {int(number) for number in choice.numbers}
+        rows = {self.parts[number].first_row for number in seen}
+        others = {part.number for part in self.parts.values() if part.first_row in rows and self._for_others(part)}
+        self.numbers, self.planned_s = tuple(sorted(seen | others)), choice.now_s
         legs = trip_legs(self.graspings, self.legs, [self.parts[number] for number in self.numbers],
                          choice.start, self.filling)
         self.order = trip_order(legs, self.budget_ms)
         self._trips = [[self.numbers[k] for k in trip] for trip in self.order.trips]
+
+    def _for_others(self, part: Part) -> bool:
+        """Whether a part is one that the first gripper can't have, but another can."""
+        if part.kind not in self.graspings[0].cell.parts or part.side == "down":
+            return False
+        refused = [isinstance(one.holds(part.kind, part.xy_mm, part.yaw_rad), Refusal) for one in self.graspings]
+        return refused[0] and not all(refused)
+
+
+def _first_able(choice: Choice, numbers: Sequence[int]) -> Picked | None:
+    """The first of these parts that can be had, by the grasp done soonest."""
+    left = set(choice.numbers.tolist())
+    return next((one for number in numbers if number in left and (one := nearest_of(choice, number))), None)
 
 
 def trip_legs(graspings: Sequence[Grasping], legs: Legs, parts: Sequence[Part], start: FloatArray,
@@ -83,8 +108,8 @@ def trip_legs(graspings: Sequence[Grasping], legs: Legs, parts: Sequence[Part], 
     begin = _least(legs, _Ways(start[None], legs.mover.arm.forward(start[None])[:, 2], np.array([0, 1])), holds[0])[0]
     back = _least(legs, stands[0], holds[0])[0]
     carry = [_least(legs, stand, hold)[1] for stand, hold in zip(stands, holds, strict=True)]
-    on = [_least(legs, _ready(legs, one), other)[0] + motion.grasp_s for one, other in zip(holds, holds[1:], strict=False)]
-    down = [_least(legs, other, one)[0] + motion.release_s for one, other in zip(stands, stands[1:], strict=False)]
+    on = [_on(legs, one, other) for one, other in itertools.pairwise(holds)]
+    down = [_least(legs, other, one)[0] + motion.release_s for one, other in itertools.pairwise(stands)]
     n = len(parts)
     return TripLegs(queue, first, begin[0], back, np.array(on).reshape(-1, n, n), np.array(carry),
                     np.array(down).reshape(-1, n, n))
@@ -103,20 +128,22 @@ def _least(legs: Legs, ends: _Ways, holds: _Ways) -> tuple[FloatArray, FloatArra
     return np.minimum(made[0], FAR_S), np.minimum(made[1], FAR_S)
 
 
-def _ready(legs: Legs, holds: _Ways) -> _Ways:
-    """Where the arm rests after it has gripped a part it keeps, with the lift to there counted in the height."""
-    motion, joints = legs.mover.motion, holds.joints.copy()
+def _on(legs: Legs, holds: _Ways, others: _Ways) -> FloatArray:
+    """(n, n) s from contact with a part that is kept to contact with another: the arm comes to rest above the first."""
+    motion, joints, mover = legs.mover.motion, holds.joints.copy(), legs.mover
     height = max(motion.travel_mm, motion.clear_height_mm) + ABOVE_MM
-    joints[:, 2] = quill(legs.mover.arm, height, joints[:, 3])
-    return _Ways(joints, np.full(len(joints), height), holds.begins)
+    joints[:, 2] = quill(mover.arm, height, joints[:, 3])
+    ready = _Ways(joints, np.full(len(joints), height), holds.begins)
+    lows = np.unique(np.round(holds.z_mm, 6)).tolist()
+    lift_s = min((mover.lift(low, round(height, 6), True).total_s(0.0) for low in lows), default=0.0)
+    return np.minimum(_least(legs, ready, others)[0] + motion.grasp_s + lift_s, FAR_S)
 
 
 def _holds(grasping: Grasping, parts: Sequence[Part]) -> _Ways:
     found = [grasping.holds(part.kind, part.known.xy_mm[-1], float(part.known.yaw_rad[-1])) for part in parts]
     joints = [np.zeros((0, 4)) if isinstance(one, Refusal) else one.joints[one.usable[:, 0], 0] for one in found]
-    heights = [np.zeros(0) if isinstance(one, Refusal) else np.array([hold.z_mm for hold in one.holds])[one.usable[:, 0]]
-               for one in found]
-    return _Ways(np.concatenate(joints), np.concatenate(heights), _begins(joints))
+    every = np.concatenate(joints)
+    return _Ways(every, grasping.arm.forward(every)[:, 2], _begins(joints))
 
 
 def _stands(grasping: Grasping, parts: Sequence[Part], names: Sequence[str], queue: IntArray,

@@ -2,8 +2,8 @@
 
 Slots are filled in turn, so a part's slot follows from its place in the order; how the order is best cut into trips is
 worked out along it (order first, cut second: Beasley 1983). Orders start from "nearest next" and are improved by
-swapping, moving and turning round parts. The bound is an assignment of what follows each part and each slot, with a price
-on every change between picking and setting down, of which there are at least as many as full trips need (Lagrange).
+swapping, moving and turning round parts. The bound is an assignment of what follows each part and each slot, with a
+price on every change between picking and setting down, of which full trips have the fewest (Lagrangian relaxation).
 """
 
 from dataclasses import dataclass
@@ -43,7 +43,8 @@ class TripLegs:
 
 @dataclass(frozen=True)
 class TripOrder:
-    """trips: parts of each. finish_s: how long they take by the least times. bound_s: no trips of all parts take less."""
+    """trips: parts of each. finish_s: how long they take by the least times. bound_s: no trips of all parts take
+    less."""
 
     trips: tuple[tuple[int, ...], ...]
     finish_s: float
@@ -88,10 +89,8 @@ def _nearest(legs: TripLegs) -> IntArray:
     order, left, used, slot = np.empty(n, np.int64), np.ones(n, bool), np.zeros(len(legs.first), np.int64), -1
     for turn in range(n):
         gripper = turn % most
-        if gripper:
-            times = legs.on[gripper - 1, order[turn - 1]]
-        else:
-            times = legs.back[slot] if turn else legs.begin
+        begun = legs.back[slot] if turn else legs.begin
+        times = legs.on[gripper - 1, order[turn - 1]] if gripper else begun
         part = int(np.where(left, times, np.inf).argmin())
         order[turn], left[part] = part, False
         if gripper == 0:
@@ -136,7 +135,7 @@ def cut(queue, first, begin, back, on, carry, down, order, cuts) -> float:  # ty
     while at > 0:
         cuts[at - 1] = 1
         at, m = at - m, before[at, m]
-    return least
+    return float(least)
 
 
 @njit(f"float64({LEGS}, int64[::1], int64[::1], int64)", cache=True, nogil=True)

@@ -32,11 +32,12 @@ pipeline.finding pipeline.teaching pipeline.follow
 pipeline.motion
 pipeline.grasp pipeline.legs pipeline.map_share
 pipeline.neighbours
-pipeline.order pipeline.permit pipeline.watch pipeline.tray_steps
+pipeline.order pipeline.permit pipeline.watch pipeline.tray_steps pipeline.trip_order
 pipeline.tray_order pipeline.candidate
 pipeline.policy
 pipeline.trays
 pipeline.scene pipeline.trip
+pipeline.tray_trips
 pipeline.replay
 pipeline.trajectory pipeline.study pipeline.remedy
 pipeline.fit pipeline.trade_cycle pipeline.reach pipeline.score pipeline.budget
