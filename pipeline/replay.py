@@ -21,8 +21,8 @@ from pipeline.motion.across import SHAPES
 from pipeline.motion.cycle import Cycle, Mover, Transfer
 from pipeline.permit import Permit
 from pipeline.places import Filling, Place
-from pipeline.policy import Arrival, Nearest, Policy
-from pipeline.scene import SceneBuilder
+from pipeline.policy import Arrival, Nearest, Picked, Policy
+from pipeline.scene import Scene, SceneBuilder
 from pipeline.tray_trips import TrayTrips
 from pipeline.trip import Chosen, Pick, Trip, alone, closed, held_on
 from pipeline.watch import Watch
@@ -107,6 +107,8 @@ def replay_ahead(setting: Setting, policy: Policy, name: str, horizon: int,
                  tick: Callable[[float], None] = lambda now: None) -> Run:
     """Replay under a policy that looks ahead; where arrival picks more parts or weight, its run, and a note in it."""
     ahead = replay(setting, policy, name, horizon, tick)
+    if len(ahead.picks) == len(setting.parts):
+        return ahead
     plain = replay(setting, Arrival(), name, horizon)
     if _worth(setting, plain) <= _worth(setting, ahead) + 1e-9 and len(plain.picks) <= len(ahead.picks):
         return ahead
@@ -116,13 +118,17 @@ def replay_ahead(setting: Setting, policy: Policy, name: str, horizon: int,
 
 
 def replay_trips(setting: Setting, policies: Sequence[Policy], name: str, horizon: int, single: Run) -> Run:
-    """Replay with all grippers, by whichever of the policies does best; where `single`, with the first gripper alone,
-    does better, that run, and a note in it.
+    """Replay with all grippers, by the first of the policies that picks all no later than `single` (the run with the
+    first gripper alone), otherwise by the best one; where `single` does better, that run, and a note in it.
 
     Better is more weight, then more parts; and, of a tray, an earlier end.
     """
     many = len(setting.graspings)
-    runs = [replay(setting, policy, name, horizon, at_once=many) for policy in policies]
+    runs = list[Run]()
+    for policy in policies:
+        runs.append(replay(setting, policy, name, horizon, at_once=many))
+        if len(runs[-1].picks) == len(setting.parts) and _last_s(runs[-1]) <= _last_s(single):
+            break
     trips = max(runs, key=lambda run: (_worth(setting, run), len(run.picks), -_last_s(run)))
     enough = _worth(setting, trips) >= _worth(setting, single) - 1e-9 and len(trips.picks) >= len(single.picks)
     more = len(trips.picks) > len(single.picks)
@@ -235,8 +241,7 @@ class _Clock:
         self.turned_down = False
         begun = time.perf_counter()
         for _ in range(MOST_TRIES):
-            scene = self.builders[gripper].scene(now, start, self.filling, self.horizon, banned)
-            picked = (self.further if gripper else self.policy.choose)(scene.choice) if scene else None
+            scene, picked = self._chosen(now, start, gripper, banned)
             if scene is None or picked is None:
                 break
             one, hold, drop_joints, drop_pose = scene.grasp(picked.node)
@@ -253,6 +258,17 @@ class _Clock:
             banned |= scene.alike(picked.node)
         self.turned_down = bool(banned)
         return None
+
+    def _chosen(self, now: float, start: FloatArray, gripper: int,
+                banned: set[tuple[int, int]]) -> tuple[Scene | None, Picked | None]:
+        """What there is to choose from, and what is chosen; of a tray's order in trips what is next, if that can be."""
+        scene, picked = None, None
+        for only in (self.policy.wanted(gripper), ()) if isinstance(self.policy, TrayTrips) else ((),):
+            scene = self.builders[gripper].scene(now, start, self.filling, self.horizon, banned, only)
+            picked = (self.further if gripper else self.policy.choose)(scene.choice) if scene else None
+            if picked is not None:
+                break
+        return scene, picked
 
     def _carry_out(self, one: Chosen) -> float:
         """Let the pick happen, and those that follow before anything is set down; the time the arm is free again."""

@@ -18,6 +18,7 @@ from pipeline.trip_order import FAR_S, TripLegs, TripOrder, trip_order
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
+AHEAD = 3  # trips whose parts are looked at first
 LEG_S = 1e-3  # legs' times and the motion agree to so much
 
 
@@ -45,6 +46,7 @@ class TrayTrips:
         self.order: TripOrder | None = None
         self.planned_s = -np.inf
         self._trips: list[list[int]] = []
+        self._begun = 0
         self._trip: list[int] = []
 
     def choose(self, choice: Choice) -> Picked | None:
@@ -54,6 +56,7 @@ class TrayTrips:
         for k, trip in enumerate(self._trips):
             picked = _first_able(choice, trip)
             if picked is not None:
+                self._begun = k
                 self._trip = [*trip, *(number for one in self._trips[:k] for number in one)]
                 return picked
         return None
@@ -61,6 +64,11 @@ class TrayTrips:
     def further(self, choice: Choice) -> Picked | None:
         """The next part of the trip that was begun, or one that an earlier trip had to leave; None: it is to end."""
         return _first_able(choice, self._trip)
+
+    def wanted(self, gripper: int) -> frozenset[int]:
+        """Numbers of the parts that come next for a gripper; empty before anything is ordered."""
+        coming = self._trips[self._begun : self._begun + AHEAD]
+        return frozenset(self._trip if gripper else [number for trip in coming for number in trip])
 
     def bound(self, picks: Sequence[Pick]) -> float:
         """When no trips that bring these parts into these slots end sooner, in s; -inf where that isn't known."""
@@ -80,7 +88,7 @@ class TrayTrips:
         legs = trip_legs(self.graspings, self.legs, [self.parts[number] for number in self.numbers],
                          choice.start, self.filling)
         self.order = trip_order(legs, self.budget_ms)
-        self._trips = [[self.numbers[k] for k in trip] for trip in self.order.trips]
+        self._begun, self._trips = 0, [[self.numbers[k] for k in trip] for trip in self.order.trips]
 
     def _for_others(self, part: Part) -> bool:
         """Whether a part is one that the first gripper can't have, but another can."""
@@ -105,27 +113,26 @@ def trip_legs(graspings: Sequence[Grasping], legs: Legs, parts: Sequence[Part], 
     first = np.concatenate([[0], np.cumsum(np.bincount(queue))[:-1]])
     motion, holds = legs.mover.motion, [_holds(one, parts) for one in graspings]
     stands = [_stands(one, parts, names, queue, filling) for one in graspings]
-    begin = _least(legs, _Ways(start[None], legs.mover.arm.forward(start[None])[:, 2], np.array([0, 1])), holds[0])[0]
-    back = _least(legs, stands[0], holds[0])[0]
-    carry = [_least(legs, stand, hold)[1] for stand, hold in zip(stands, holds, strict=True)]
+    here = _Ways(start[None], legs.mover.arm.forward(start[None])[:, 2], np.array([0, 1]))
+    begin, back = _least(legs, here, holds[0]), _least(legs, stands[0], holds[0])
+    carry = [_least(legs, hold, stand) + motion.grasp_s + motion.release_s
+             for hold, stand in zip(holds, stands, strict=True)]
     on = [_on(legs, one, other) for one, other in itertools.pairwise(holds)]
-    down = [_least(legs, other, one)[0] + motion.release_s for one, other in itertools.pairwise(stands)]
+    down = [_least(legs, other, one) + motion.release_s for one, other in itertools.pairwise(stands)]
     n = len(parts)
     return TripLegs(queue, first, begin[0], back, np.array(on).reshape(-1, n, n), np.array(carry),
                     np.array(down).reshape(-1, n, n))
 
 
-def _least(legs: Legs, ends: _Ways, holds: _Ways) -> tuple[FloatArray, FloatArray]:
-    """Least s from each of a ends to contact with each of n holds (a, n), and from contact to release (n, a)."""
-    out, carry = legs.still(ends.joints, holds.joints, holds.z_mm)
-    made = np.full((len(ends.begins) - 1, len(holds.begins) - 1), FAR_S), np.full(
-        (len(holds.begins) - 1, len(ends.begins) - 1), FAR_S)
-    for times, least, rows, columns in ((out, made[0], ends, holds), (carry, made[1], holds, ends)):
-        across, along = np.diff(rows.begins) > 0, np.diff(columns.begins) > 0
-        if across.any() and along.any():
-            lines = np.minimum.reduceat(times, rows.begins[:-1][across], axis=0)
-            least[np.ix_(across, along)] = np.minimum.reduceat(lines, columns.begins[:-1][along], axis=1)
-    return np.minimum(made[0], FAR_S), np.minimum(made[1], FAR_S)
+def _least(legs: Legs, ends: _Ways, others: _Ways) -> FloatArray:
+    """Least s from rest at each of a things to contact at each of b others (a, b)."""
+    least = np.full((len(ends.begins) - 1, len(others.begins) - 1), FAR_S)
+    rows, columns = np.diff(ends.begins) > 0, np.diff(others.begins) > 0
+    if rows.any() and columns.any():
+        times = legs.from_rest(ends.joints, others.joints, others.z_mm)
+        lines = np.minimum.reduceat(times, ends.begins[:-1][rows], axis=0)
+        least[np.ix_(rows, columns)] = np.minimum.reduceat(lines, others.begins[:-1][columns], axis=1)
+    return np.asarray(np.minimum(least, FAR_S))
 
 
 def _on(legs: Legs, holds: _Ways, others: _Ways) -> FloatArray:
@@ -136,7 +143,7 @@ def _on(legs: Legs, holds: _Ways, others: _Ways) -> FloatArray:
     ready = _Ways(joints, np.full(len(joints), height), holds.begins)
     lows = np.unique(np.round(holds.z_mm, 6)).tolist()
     lift_s = min((mover.lift(low, round(height, 6), True).total_s(0.0) for low in lows), default=0.0)
-    return np.minimum(_least(legs, ready, others)[0] + motion.grasp_s + lift_s, FAR_S)
+    return np.minimum(_least(legs, ready, others) + motion.grasp_s + lift_s, FAR_S)
 
 
 def _holds(grasping: Grasping, parts: Sequence[Part]) -> _Ways:
