@@ -122,7 +122,7 @@ def test_ordered_trips_end_sooner_than_by_the_rule_and_tell_their_gap() -> None:
     assert 0.8 * end_s(by["lookahead"]) < bound < end_s(by["lookahead"])
 
 
-@pytest.mark.parametrize("grippers", [None, TWO])
+@pytest.mark.parametrize("grippers", [None, [[0.0, 0.0, 0.0], [40.0, 0.0, 0.0]]])
 def test_two_hundred_parts_hold_from_their_files(grippers: list[list[float]] | None, tmp_path: Path) -> None:
     """The most a tray may have, within a budget."""
     stream = strewn(200, 14.0, order__budget_ms=50.0, **({"tool__grippers": grippers} if grippers else {}))
