@@ -1,6 +1,7 @@
 """The replay: the clock, what is known when, what the arm does, what becomes of each part.
 
-With several grippers a pick may begin a trip of several (see `pipeline.trip`), at a tray with the parts nearest by.
+With several grippers a pick may begin a trip of several (see `pipeline.trip`), at a tray with those that its order says
+(see `pipeline.tray_trips`) or with the parts nearest by.
 """
 
 import time

@@ -10,6 +10,7 @@ import pytest
 from checked_run import Files, fates, limits, slots, start, windows
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from some_streams import sanderling
 from test_grippers import FOUR, TWO, filled, followed, held, straight
 from test_tray_order import strewn
 from test_whole_runs import written
@@ -17,6 +18,7 @@ from test_whole_runs import written
 from pipeline.replay import Run, replay
 from pipeline.study import run
 from pipeline.tray_trips import TrayTrips
+from pipeline.trip import trips_of
 from pipeline.trip_order import TripLegs, trip_bound, trip_order
 
 
@@ -35,12 +37,12 @@ def made(seed: int, parts: int, grippers: int, queues: int = 1) -> TripLegs:
                     legs(grippers - 1, *square))
 
 
-def trips_of(order: tuple[int, ...], most: int) -> Iterator[tuple[tuple[int, ...], ...]]:
+def cuts_of(order: tuple[int, ...], most: int) -> Iterator[tuple[tuple[int, ...], ...]]:
     """Every way to cut an order into trips."""
     if not order:
         yield ()
     for many in range(1, min(most, len(order)) + 1):
-        for rest in trips_of(order[many:], most):
+        for rest in cuts_of(order[many:], most):
             yield (order[:many], *rest)
 
 
@@ -66,7 +68,7 @@ def takes_s(legs: TripLegs, trips: tuple[tuple[int, ...], ...]) -> float:
 def test_no_trips_of_few_parts_are_sooner_than_told(seed: int, parts: int, grippers: int, queues: int) -> None:
     """Brute force over every order and every cut: none beats the bound, and what was found is near the best."""
     legs = made(seed, parts, grippers, queues)
-    best = min(takes_s(legs, trips) for order in permutations(range(parts)) for trips in trips_of(order, grippers))
+    best = min(takes_s(legs, trips) for order in permutations(range(parts)) for trips in cuts_of(order, grippers))
     found = trip_order(legs)
     assert sorted(part for trip in found.trips for part in trip) == list(range(parts))
     assert max(map(len, found.trips)) <= grippers
@@ -81,7 +83,7 @@ def test_an_order_is_cut_at_best() -> None:
         legs = made(seed, 9, 3, 2)
         found = trip_order(legs)
         order = tuple(part for trip in found.trips for part in trip)
-        assert found.finish_s == pytest.approx(min(takes_s(legs, trips) for trips in trips_of(order, 3)), abs=1e-9)
+        assert found.finish_s == pytest.approx(min(takes_s(legs, trips) for trips in cuts_of(order, 3)), abs=1e-9)
 
 
 def test_a_budget_of_trips_gives_the_best_so_far() -> None:
@@ -90,6 +92,20 @@ def test_a_budget_of_trips_gives_the_best_so_far() -> None:
     hasty, whole = trip_order(legs, 1.0), trip_order(legs)
     assert hasty == trip_order(legs, 1.0)
     assert whole.bound_s == hasty.bound_s == trip_bound(legs) < whole.finish_s < hasty.finish_s
+
+
+def test_a_plan_tells_trips(tmp_path: Path) -> None:
+    """And no decision over single picks, also of few parts; trips are as long as the tool has grippers."""
+    stream = strewn(6, 60.0, tool__grippers=TWO)
+    folder = stream.written(tmp_path / "six")
+    told = sanderling("plan", folder, "--cell", folder / "cell.toml", "--located", folder / "located.csv", "--frame", 0,
+                      "--out", tmp_path / "out")
+    assert told.status == 0, told.err
+    assert "Trips" in told.out
+    assert "end before" in " ".join(told.out.split())
+    assert "What could come first" not in told.out
+    done = run(stream.setting(), "lookahead", 200)
+    assert sorted(len(trip) for trip in trips_of(done.picks)) == [2, 2, 2]
 
 
 def end_s(done: Run) -> float:
