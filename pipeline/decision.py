@@ -73,9 +73,11 @@ class Decision:
 
 
 def first_decision(setting: Setting, policy: Policy, horizon: int, run: Run) -> Decision | None:
-    """The decision behind a run's first pick; None where nothing was picked, and for a whole tray of many parts
-    (see `whole_tray`)."""
+    """The decision behind a run's first pick; None where nothing was picked, for a whole tray of many parts (see
+    `whole_tray`), and for one emptied in trips, which no decision over single picks led to."""
     if not run.picks or run.picks[0].looked_at > MOST_LOOKED_AT:
+        return None
+    if setting.cell.belt is None and any(pick.set_down for pick in run.picks):
         return None
     first, builder, filling = run.picks[0], builder_of(setting), Filling(tuple(setting.grasping.places.values()))
     for rule in (policy, Arrival()):  # a run may have fallen back to arrival

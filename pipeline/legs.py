@@ -114,6 +114,16 @@ class Legs:
         motion = self.mover.motion
         return legs[0], np.ascontiguousarray(legs[1].T) + motion.grasp_s + motion.release_s
 
+    def from_rest(self, rests: FloatArray, ends: FloatArray, end_mm: FloatArray) -> FloatArray:
+        """(a, b) s from rest at rests (a, 4) to ends (b, 4), tip at end_mm (b,), where nothing moves."""
+        lows, low = np.unique(np.round(self.mover.arm.forward(rests)[:, 2], 6), return_inverse=True)
+        highs, high = np.unique(np.round(end_mm, 6), return_inverse=True)
+        table = np.array([[self._table(z, end) for end in highs] for z in lows], np.int64)
+        legs: FloatArray = _still_legs(
+            np.ascontiguousarray(rests[:, TURNING]), np.ascontiguousarray(ends[:, TURNING]),
+            np.ascontiguousarray(table[low][:, high]), self._tables, self._limits, self.mover.singular)
+        return legs
+
     def _span(self, nodes: Nodes, speed: float) -> float:
         """How far ahead legs may begin: until the last part has left its window."""
         if speed < STILL_MM_S:

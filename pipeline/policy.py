@@ -34,8 +34,9 @@ class Choice:
     nodes: the grasps. weights (n,): worth of each part. along_mm (n,): how far along the heading each is. blocked_by
     (n,): bit p set where part p must go first; such a part's grasps can't be next. legs(later): leg times, from here
     and now, or from every grasp at any time. travel() (g+1, g): joint travel from row to column, in s at full speed.
-    numbers (n,): of the parts. tray(): where nothing moves and more than MOST_LOOKED_AT parts lie there, the whole tray
-    as it was when last looked at, and how many slots of each queue have been filled since (q,); otherwise None.
+    numbers (n,): of the parts. start (4,): joints of the arm at rest. tray(): where nothing moves and more than
+    MOST_LOOKED_AT parts lie there, the whole tray as it was when last looked at, and how many slots of each queue
+    have been filled since (q,); otherwise None.
     """
 
     now_s: float
@@ -46,6 +47,7 @@ class Choice:
     legs: Callable[[bool], LegTimes]
     travel: Callable[[], FloatArray]
     numbers: NDArray[np.int64] = field(default_factory=lambda: np.zeros(0, np.int64))
+    start: FloatArray = field(default_factory=lambda: np.zeros(4))
     tray: Callable[[], tuple[Tray, NDArray[np.int64]] | None] = lambda: None
 
     def next_ones(self) -> tuple[FloatArray, FloatArray]:
@@ -102,6 +104,14 @@ class Nearest:
         if not np.isfinite(contact).any():
             return None
         return _one(choice, int(np.lexsort((finish, contact))[0]), finish)
+
+
+def nearest_of(choice: Choice, number: int) -> Picked | None:
+    """The grasp of one part, by its number, that is made soonest; None where it can't be had next."""
+    contact, finish = choice.next_ones()
+    contact = np.where(choice.numbers[choice.nodes.part] == number, contact, np.inf)
+    finish_of = np.where(np.isfinite(contact), finish, np.inf)
+    return _one(choice, int(np.lexsort((contact, finish_of))[0]), finish) if np.isfinite(contact).any() else None
 
 
 def _one(choice: Choice, node: int, finish: FloatArray) -> Picked:

@@ -1,6 +1,7 @@
 """The replay: the clock, what is known when, what the arm does, what becomes of each part.
 
-With several grippers a pick may begin a trip of several (see `pipeline.trip`), at a tray with the parts nearest by.
+With several grippers a pick may begin a trip of several (see `pipeline.trip`), at a tray with those that its order says
+(see `pipeline.tray_trips`) or with the parts nearest by.
 """
 
 import gc
@@ -23,8 +24,9 @@ from pipeline.motion.across import SHAPES
 from pipeline.motion.cycle import Cycle, Mover, Transfer
 from pipeline.permit import Permit
 from pipeline.places import Filling, Place
-from pipeline.policy import Arrival, Nearest, Policy
-from pipeline.scene import SceneBuilder
+from pipeline.policy import Arrival, Nearest, Picked, Policy
+from pipeline.scene import Scene, SceneBuilder
+from pipeline.tray_trips import TrayTrips
 from pipeline.trip import Chosen, Pick, Trip, alone, closed, held_on
 from pipeline.watch import Watch
 
@@ -108,6 +110,8 @@ def replay_ahead(setting: Setting, policy: Policy, name: str, horizon: int,
                  tick: Callable[[float], None] = lambda now: None) -> Run:
     """Replay under a policy that looks ahead; where arrival picks more parts or weight, its run, and a note in it."""
     ahead = replay(setting, policy, name, horizon, tick)
+    if len(ahead.picks) == len(setting.parts):
+        return ahead
     plain = replay(setting, Arrival(), name, horizon)
     if _worth(setting, plain) <= _worth(setting, ahead) + 1e-9 and len(plain.picks) <= len(ahead.picks):
         return ahead
@@ -117,21 +121,36 @@ def replay_ahead(setting: Setting, policy: Policy, name: str, horizon: int,
 
 
 def replay_trips(setting: Setting, policies: Sequence[Policy], name: str, horizon: int, single: Run) -> Run:
-    """Replay with all grippers, by whichever of the policies does best; where `single`, with the first gripper alone,
-    does better, that run, and a note in it.
+    """Replay with all grippers, by the first of the policies that picks all no later than `single` (the run with the
+    first gripper alone), otherwise by the best one; where `single` does better, that run, and a note in it.
 
     Better is more weight, then more parts; and, of a tray, an earlier end.
     """
     many = len(setting.graspings)
-    runs = [replay(setting, policy, name, horizon, at_once=many) for policy in policies]
+    runs = list[Run]()
+    for policy in policies:
+        runs.append(replay(setting, policy, name, horizon, at_once=many))
+        if len(runs[-1].picks) == len(setting.parts) and _last_s(runs[-1]) <= _last_s(single):
+            break
     trips = max(runs, key=lambda run: (_worth(setting, run), len(run.picks), -_last_s(run)))
     enough = _worth(setting, trips) >= _worth(setting, single) - 1e-9 and len(trips.picks) >= len(single.picks)
     more = len(trips.picks) > len(single.picks)
     if enough and (more or setting.cell.belt is not None or _last_s(trips) <= _last_s(single)):
-        return trips
+        return _with_gap(trips, policies)
     note = (f"with {many} grippers {_told(setting, trips)} would be picked, with the first one alone "
             f"{_told(setting, single)}: this run is with the first one alone")
-    return replace(single, notes=(*single.notes, note))
+    return _with_gap(replace(single, notes=(*single.notes, note)), policies)
+
+
+def _with_gap(run: Run, policies: Sequence[Policy]) -> Run:
+    """The run, and in its notes how much sooner a tray could have been empty at most, where that is known."""
+    for one in policies:
+        bound = one.bound(run.picks) if isinstance(one, TrayTrips) else -np.inf
+        if isinstance(one, TrayTrips) and np.isfinite(bound):
+            gap = (_last_s(run) - bound) / (_last_s(run) - one.planned_s)
+            note = f"no trips into the same slots end before {bound:.2f} s: a gap of {100 * gap:.1f} % at most"
+            return replace(run, notes=(*run.notes, note))
+    return run
 
 
 def _told(setting: Setting, run: Run) -> str:
@@ -165,13 +184,16 @@ class _Clock:
     def __init__(self, setting: Setting, policy: Policy, name: str, horizon: int,
                  tick: Callable[[float], None], at_once: int) -> None:
         self.set, self.policy, self.name, self.horizon, self.tick = setting, policy, name, horizon, tick
-        self.within_trip = policy if setting.cell.belt else Nearest()  # a tray's order is one of single picks
         self.watch = Watch(setting.cell, setting.recording, setting.belt, setting.parts)
         used = setting.graspings[:at_once]
         self.builders = [SceneBuilder(setting.cell, self.watch, grasping, setting.legs, setting.outlines,
                                       setting.least_score) for grasping in used]
         self.permits = tuple(Permit(setting.mover, grasping) for grasping in used)
         self.filling = Filling(tuple(setting.grasping.places.values()))
+        self.further = (policy if setting.cell.belt else Nearest()).choose  # a tray's order is one of single picks
+        self.ordered = isinstance(policy, TrayTrips)
+        if isinstance(policy, TrayTrips):
+            self.further, policy.filling = policy.further, self.filling
         self.arm = setting.grasping.arm
         self.joints = np.array(self.arm.home)
         self.waits: list[Transfer] = []
@@ -237,8 +259,7 @@ class _Clock:
         self.turned_down = False
         begun = time.perf_counter()
         for _ in range(MOST_TRIES):
-            scene = self.builders[gripper].scene(now, start, self.filling, self.horizon, banned)
-            picked = (self.within_trip if gripper else self.policy).choose(scene.choice) if scene else None
+            scene, picked = self._chosen(now, start, gripper, banned)
             if scene is None or picked is None:
                 break
             one, hold, drop_joints, drop_pose = scene.grasp(picked.node)
@@ -255,6 +276,17 @@ class _Clock:
             banned |= scene.alike(picked.node)
         self.turned_down = bool(banned)
         return None
+
+    def _chosen(self, now: float, start: FloatArray, gripper: int,
+                banned: set[tuple[int, int]]) -> tuple[Scene | None, Picked | None]:
+        """What there is to choose from, and what is chosen; of a tray's order in trips what is next, if that can be."""
+        scene, picked = None, None
+        for only in (self.policy.wanted(gripper), ()) if isinstance(self.policy, TrayTrips) else ((),):
+            scene = self.builders[gripper].scene(now, start, self.filling, self.horizon, banned, only)
+            picked = (self.further if gripper else self.policy.choose)(scene.choice) if scene else None
+            if picked is not None:
+                break
+        return scene, picked
 
     def _carry_out(self, one: Chosen) -> float:
         """Let the pick happen, and those that follow before anything is set down; the time the arm is free again."""
@@ -277,7 +309,7 @@ class _Clock:
         cycle = kept.pick.cycle
         after = self._decide(cycle.grasp_end_s, cycle.end_joints, cycle.release_end_s, gripper)
         longer = closed((*trip.chosen[:-1], kept, after), self.permits) if after else None
-        return longer if longer and longer.rate >= trip.rate else None
+        return longer if longer and (self.ordered or longer.rate >= trip.rate) else None
 
     def _fates(self) -> tuple[Refusal | None, ...]:
         picked = {pick.part.number for pick in self.picks}

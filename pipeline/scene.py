@@ -1,6 +1,6 @@
 """A scene: of what is known at one moment, which grasps may be chosen, and which parts stand in whose way."""
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -76,17 +76,19 @@ class SceneBuilder:
         self._neighbours = Neighbours(watch.parts, outlines, grasping)
 
     def scene(self, now: float, start: FloatArray, filling: Filling, horizon: int,
-              banned: set[tuple[int, int]]) -> Scene | None:
+              banned: set[tuple[int, int]], only: Collection[int] = ()) -> Scene | None:
         """The scene for an arm at rest at start (4,); None where nothing may be picked.
 
-        banned: (part row, grasp row) that have been tried at this moment and can't be carried out.
+        banned: (part row, grasp row) that have been tried at this moment and can't be carried out. only: numbers of the
+        parts in question; empty: all.
         """
         state = self.belt.known_at(now)
         frame = self.watch.look(now, state.travel_mm)
         self._holds = {k: self._holds[k] for k in self.watch.lying if k in self._holds}
         candidates: list[Candidate] = []
         for k in self.watch.waiting():
-            one = None if k in self.refusals else self._candidate(k, frame, filling)
+            out = k in self.refusals or (only and self.watch.parts[k].number not in only)
+            one = None if out else self._candidate(k, frame, filling)
             if one is not None:
                 candidates.append(one)
             if len(candidates) == min(horizon, MOST_LOOKED_AT if self.cell.belt else MOST_ON_TRAY):
@@ -99,7 +101,7 @@ class SceneBuilder:
         along = np.array([one.xy_mm @ self.belt.heading + state.travel_mm for one in candidates])
         choice = Choice(now, nodes, weights, along, blocked,
                         lambda later: self.legs.times(start, now, nodes, state, later),
-                        lambda: self._travel(start, nodes), np.array([one.part.number for one in candidates]),
+                        lambda: self._travel(start, nodes), np.array([one.part.number for one in candidates]), start,
                         lambda: self._trays.tray(candidates, node_of, blocked, weights, start, now, filling))
         return Scene(tuple(candidates), node_of, choice, not self.grasping.arm.offset_mm.any())
 

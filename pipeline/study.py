@@ -22,6 +22,7 @@ from pipeline.follow import Followed, follow
 from pipeline.map_share import with_map_share
 from pipeline.policy import MOST_LOOKED_AT, POLICIES, Nearest, Policy, parts_within, policy_named
 from pipeline.replay import LEAST_SCORE, Run, Setting, replay, replay_ahead, replay_trips
+from pipeline.tray_trips import TrayTrips
 
 FloatArray = NDArray[np.float64]
 Rows = Callable[[Iterable[int]], Iterable[int]]
@@ -137,7 +138,10 @@ def run(setting: Setting, order: str, horizon: int, tick: Callable[[float], None
     single = (replay_ahead if order == "lookahead" else replay)(setting, policy, order, horizon, tick)
     if len(setting.graspings) == 1:
         return single
-    ways = (policy, Nearest()) if order == "lookahead" and setting.cell.belt is None else (policy,)
+    ways: tuple[Policy, ...] = (policy,)
+    if order == "lookahead" and setting.cell.belt is None:
+        within_ms = budget_ms or setting.cell.order.budget_ms or None
+        ways = TrayTrips(setting.graspings, setting.legs, setting.parts, within_ms), Nearest()
     return replay_trips(setting, ways, order, horizon, single)
 
 

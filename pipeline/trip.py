@@ -4,6 +4,7 @@ Gripper by gripper the arm picks on as long as that gives no fewer parts a secon
 down what it holds. It is decided at the end of each grasp, from what is known then: up to there both ways are the same.
 """
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -138,6 +139,17 @@ def closed(chosen: tuple[Chosen, ...], permits: tuple[Permit, ...]) -> Trip | No
         joints, free_s = down.way.end_joints, down.release_end_s
         picks.append(replace(one.pick, set_down=down, place_pose=permit.grasping.arm.forward(joints)))
     return Trip(chosen, tuple(reversed(picks)), joints)
+
+
+def trips_of(picks: Sequence[Pick]) -> list[tuple[Pick, ...]]:
+    """The picks of a run, in turn, by trips: one ends with the pick that is set down at the end of its own cycle."""
+    trips, trip = list[tuple[Pick, ...]](), list[Pick]()
+    for pick in picks:
+        trip.append(pick)
+        if pick.set_down is None:
+            trips.append(tuple(trip))
+            trip = []
+    return trips
 
 
 def held_on(one: Chosen, permit: Permit) -> Chosen | None:

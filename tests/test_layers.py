@@ -20,8 +20,8 @@ cameras.plane_start cameras.field
 cameras.plane
 cameras.plane_checks cameras.uncertainty
 cameras.edges cameras.outline cameras.model cameras.view cameras.sightings
-cameras.blobs cameras.search
-cameras.chain
+cameras.blobs cameras.search cameras.resized
+cameras.chain cameras.rivals
 cameras.teach cameras.match
 cameras.find cameras.locate cameras.teach_views
 pipeline
@@ -32,11 +32,12 @@ pipeline.finding pipeline.teaching pipeline.follow
 pipeline.motion
 pipeline.grasp pipeline.legs pipeline.map_share
 pipeline.neighbours
-pipeline.order pipeline.permit pipeline.watch pipeline.tray_steps
+pipeline.order pipeline.permit pipeline.watch pipeline.tray_steps pipeline.trip_order
 pipeline.tray_order pipeline.candidate
 pipeline.policy
 pipeline.trays
 pipeline.scene pipeline.trip
+pipeline.tray_trips
 pipeline.replay
 pipeline.trajectory pipeline.study pipeline.remedy
 pipeline.fit pipeline.trade_cycle pipeline.reach pipeline.score pipeline.budget

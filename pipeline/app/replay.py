@@ -82,6 +82,7 @@ def plan(
     from pipeline.outputs import write_decision, write_run
     from pipeline.remedy import with_remedies
     from pipeline.study import horizon_of, one_frame, policy_of, run, setting
+    from pipeline.trip import trips_of
     from pipeline.whole_tray import whole_tray
 
     whole = load_cell(cell)
@@ -98,6 +99,13 @@ def plan(
                  f"{pick.cycle.grasp_start_s:.2f}", f"{pick.release_start_s:.2f}",
                  f"{pick.place} {pick.slot + 1}",
                  ("right", "left")[pick.cycle.hold.elbow]) for n, pick in enumerate(done.picks, 1)])  # fmt: skip
+    trips = trips_of(done.picks)
+    if len(trips) < len(done.picks):
+        show_table("Trips", ("trip", "parts, by gripper", "to", "begun s", "done s"),
+                   [(n, " ".join(str(pick.part.number) for pick in trip),
+                     ", ".join(f"{pick.place} {pick.slot + 1}" for pick in trip),
+                     f"{trip[0].cycle.depart_s:.2f}", f"{trip[0].release_end_s:.2f}")
+                    for n, trip in enumerate(trips, 1)])  # fmt: skip
     if decision is not None:
         write_decision(out, decision)
         _explain(decision, done.picks[0].decide_s)
