@@ -157,13 +157,6 @@ def test_a_tray_is_emptied_sooner_than_by_the_rules(number: int, apart_mm: float
     assert first.picked.finish_bound_s <= first.picked.finish_s
 
 
-def test_a_tray_of_two_hundred_parts_is_emptied() -> None:
-    """The most there may be, closely packed; no slot is filled twice."""
-    done = run(strewn(200, 14.0).setting(), "nearest", 200)
-    assert len({pick.part.number for pick in done.picks}) == 200
-    assert len({(pick.place, pick.slot) for pick in done.picks}) == 200
-
-
 def test_a_tray_by_travel_moves_the_joints_less() -> None:
     """A tenth less for a few seconds more, all picked either way; and a decision tells when the tray will be empty."""
     setting = strewn(40, 30.0).setting()
