@@ -148,7 +148,8 @@ def _with_gap(run: Run, policies: Sequence[Policy]) -> Run:
         bound = one.bound(run.picks) if isinstance(one, TrayTrips) else -np.inf
         if isinstance(one, TrayTrips) and np.isfinite(bound):
             gap = (_last_s(run) - bound) / (_last_s(run) - one.planned_s)
-            note = f"no trips into the same slots end before {bound:.2f} s: a gap of {100 * gap:.1f} % at most"
+            note = (f"no trips into the same slots, with the grippers in turn, end before {bound:.2f} s: a gap of "
+                    f"{100 * gap:.1f} % at most")
             return replace(run, notes=(*run.notes, note))
     return run
 

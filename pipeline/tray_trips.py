@@ -76,10 +76,10 @@ class TrayTrips:
         In all of them the first part of a trip is held by the first gripper, the second by the next.
         """
         mine = {pick.part.number for pick in picks} == set(self.numbers)
-        usual = all(trip[0].gripper == 0 for trip in trips_of(picks))
+        usual = all(pick.gripper == k for trip in trips_of(picks) for k, pick in enumerate(trip))
         if self.order is None or not (mine and usual) or any(pick.place != self._place(pick.part) for pick in picks):
             return -np.inf
-        return self.planned_s + self.order.bound_s - LEG_S * len(picks)
+        return self.planned_s + self.order.bound_s - 2 * LEG_S * len(picks)
 
     def _place(self, part: Part) -> str:
         return self.graspings[0].cell.parts[part.kind].places[0]

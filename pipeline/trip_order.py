@@ -63,7 +63,7 @@ def trip_order(legs: TripLegs, budget_ms: float | None = None) -> TripOrder:
 
 
 def trip_bound(legs: TripLegs) -> float:
-    """No trips that pick all parts take less, whichever gripper picks which."""
+    """No trips that pick all parts take less, with the grippers in turn and the last part picked set down first."""
     from scipy.optimize import linear_sum_assignment
 
     n, most = len(legs.queue), len(legs.carry)
