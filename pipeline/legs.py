@@ -105,23 +105,18 @@ class Legs:
     def still(self, rests: FloatArray, holds: FloatArray, hold_mm: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Legs where nothing moves: s from leaving each rest (a, 4) to contact with each hold (b, 4), tip at hold_mm
         (b,): (a, b); and from contact until the arm is free at each rest: (b, a). inf: can't be had."""
-        heights = self.mover.arm.forward(rests)[:, 2]
-        ends = np.ascontiguousarray(rests[:, TURNING]), np.ascontiguousarray(holds[:, TURNING])
-        legs = []
-        for there in (True, False):
-            lifts = self._lifts_between(heights, hold_mm, there)
-            legs.append(_still_legs(*ends, lifts, self._tables, self._limits, self.mover.singular))
-        motion = self.mover.motion
-        return legs[0], np.ascontiguousarray(legs[1].T) + motion.grasp_s + motion.release_s
+        motion, back = self.mover.motion, self._still(rests, holds, hold_mm, there=False)
+        return self.from_rest(rests, holds, hold_mm), np.ascontiguousarray(back.T) + motion.grasp_s + motion.release_s
 
     def from_rest(self, rests: FloatArray, ends: FloatArray, end_mm: FloatArray) -> FloatArray:
         """(a, b) s from rest at rests (a, 4) to ends (b, 4), tip at end_mm (b,), where nothing moves."""
-        lows, low = np.unique(np.round(self.mover.arm.forward(rests)[:, 2], 6), return_inverse=True)
-        highs, high = np.unique(np.round(end_mm, 6), return_inverse=True)
-        table = np.array([[self._table(z, end) for end in highs] for z in lows], np.int64)
-        legs: FloatArray = _still_legs(
-            np.ascontiguousarray(rests[:, TURNING]), np.ascontiguousarray(ends[:, TURNING]),
-            np.ascontiguousarray(table[low][:, high]), self._tables, self._limits, self.mover.singular)
+        return self._still(rests, ends, end_mm, there=True)
+
+    def _still(self, rests: FloatArray, ends: FloatArray, end_mm: FloatArray, there: bool) -> FloatArray:
+        """(a, b) s between rest at rests (a, 4) and ends (b, 4), there or back, without dwells."""
+        lifts = self._lifts_between(self.mover.arm.forward(rests)[:, 2], end_mm, there)
+        joints = np.ascontiguousarray(rests[:, TURNING]), np.ascontiguousarray(ends[:, TURNING])
+        legs: FloatArray = _still_legs(*joints, lifts, self._tables, self._limits, self.mover.singular)
         return legs
 
     def _span(self, nodes: Nodes, speed: float) -> float:
@@ -155,8 +150,8 @@ class Legs:
 
     def _lifts_between(self, rest_mm: FloatArray, hold_mm: FloatArray, there: bool) -> NDArray[np.int64]:
         """Rows (a, b) of the tables of the lifts from each height of rest (a,) to each on a part (b,), or back."""
-        rests, rest = np.unique(rest_mm, return_inverse=True)
-        grips, grip = np.unique(hold_mm, return_inverse=True)
+        rests, rest = np.unique(np.round(rest_mm, 6), return_inverse=True)
+        grips, grip = np.unique(np.round(hold_mm, 6), return_inverse=True)
         rows = np.array([[self._table(*((z, g) if there else (g, z))) for g in grips] for z in rests], np.int64)
         return np.ascontiguousarray(rows[rest][:, grip])
 
