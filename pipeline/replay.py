@@ -144,9 +144,9 @@ def replay_trips(setting: Setting, policies: Sequence[Policy], name: str, horizo
 
 def _with_gap(run: Run, policies: Sequence[Policy]) -> Run:
     """The run, and in its notes how much sooner a tray could have been empty at most, where that is known."""
-    for one in policies:
-        bound = one.bound(run.picks) if isinstance(one, TrayTrips) else -np.inf
-        if isinstance(one, TrayTrips) and np.isfinite(bound):
+    for one in (policy for policy in policies if isinstance(policy, TrayTrips)):
+        bound = one.bound(run.picks)
+        if np.isfinite(bound):
             gap = (_last_s(run) - bound) / (_last_s(run) - one.planned_s)
             note = (f"no trips into the same slots, with the grippers in turn, end before {bound:.2f} s: a gap of "
                     f"{100 * gap:.1f} % at most")
@@ -192,9 +192,9 @@ class _Clock:
         self.permits = tuple(Permit(setting.mover, grasping) for grasping in used)
         self.filling = Filling(tuple(setting.grasping.places.values()))
         self.further = (policy if setting.cell.belt else Nearest()).choose  # a tray's order is one of single picks
-        self.ordered = isinstance(policy, TrayTrips)
-        if isinstance(policy, TrayTrips):
-            self.further, policy.filling = policy.further, self.filling
+        self.trips = policy if isinstance(policy, TrayTrips) else None
+        if self.trips:
+            self.further, self.trips.filling = self.trips.further, self.filling
         self.arm = setting.grasping.arm
         self.joints = np.array(self.arm.home)
         self.waits: list[Transfer] = []
@@ -282,7 +282,7 @@ class _Clock:
                 banned: set[tuple[int, int]]) -> tuple[Scene | None, Picked | None]:
         """What there is to choose from, and what is chosen; of a tray's order in trips what is next, if that can be."""
         scene, picked = None, None
-        for only in (self.policy.wanted(gripper), ()) if isinstance(self.policy, TrayTrips) else ((),):
+        for only in (self.trips.wanted(gripper), ()) if self.trips else ((),):
             scene = self.builders[gripper].scene(now, start, self.filling, self.horizon, banned, only)
             picked = (self.further if gripper else self.policy.choose)(scene.choice) if scene else None
             if picked is not None:
@@ -310,7 +310,7 @@ class _Clock:
         cycle = kept.pick.cycle
         after = self._decide(cycle.grasp_end_s, cycle.end_joints, cycle.release_end_s, gripper)
         longer = closed((*trip.chosen[:-1], kept, after), self.permits) if after else None
-        return longer if longer and (self.ordered or longer.rate >= trip.rate) else None
+        return longer if longer and (self.trips or longer.rate >= trip.rate) else None
 
     def _fates(self) -> tuple[Refusal | None, ...]:
         picked = {pick.part.number for pick in self.picks}
