@@ -239,9 +239,10 @@ def turns_seen(polygon: FloatArray) -> int:
         centred = (polygon - start - off_centre(polygon - start, turns) for start in (middle, np.zeros(2)))
         return min((_apart(one, turns) for one in centred), key=np.median)
 
-    circle = float(np.sqrt(np.mean(apart(0) ** 2)))
+    any_turn = apart(0)
+    circle = float(np.sqrt(np.mean(any_turn**2)))
     if circle < ALIKE_SHARE * ROUND_REACH * reach:
         return 0
-    least = min(ALIKE_SHARE * float(np.median(apart(0))), ALIKE_REACH * reach)
+    least = min(ALIKE_SHARE * float(np.median(any_turn)), ALIKE_REACH * reach)
     alike = [turns for turns in range(2, MOST_TURNS + 1) if np.median(apart(turns)) < least]
     return max(alike, default=0 if circle < ROUND_REACH * reach else 1)
